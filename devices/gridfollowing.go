@@ -1,0 +1,504 @@
+package devices
+
+import (
+	"encoding"
+	"math"
+
+	"islet/solvers"
+	"islet/solvers/facet"
+)
+
+// GridFollowingParams holds every symbol of a [GridFollowing] inverter, in SI
+// and amplitude-invariant dq quantities. [GridFollowingNameplate.Params] fills
+// it from a nameplate.
+type GridFollowingParams struct {
+	Rating float64 // S_r, VA, > 0: base of powers and currents
+	Omega0 float64 // omega_0, rad/s, > 0: nominal speed, used in the decoupling terms too
+	V0     float64 // V_n, rated voltage, V peak phase-to-neutral, > 0
+	P, Q   float64 // P*, Q*, W and var generated: first values of setpoints "p" and "q"
+
+	// PLL. Kp and Ki act on v_mq relative to an amplitude, and so hold for
+	// either choice at rated voltage: K_p = 2 zeta w_n, K_i = w_n^2. Divide by
+	// V0 to compare with gains per volt.
+	Kp             float64 // K_p, 1/s, > 0
+	Ki             float64 // K_i, 1/s^2, >= 0
+	FixedAmplitude bool    // v_mq relative to V0 instead of to the measured amplitude |v_m|
+	SpeedLimit     float64 // largest |omega - omega_0|, rad/s, > 0; +Inf for no limit
+
+	OmegaV float64 // w_v, corner of the filter of v_md, rad/s, > 0
+	VFloor float64 // least value of v_md and |v_m| in a denominator, V peak, > 0
+
+	// OmitCapacitor leaves the capacitor's current out of the reference, which
+	// then adds its vars to Q. It says nothing for an L filter.
+	OmitCapacitor bool
+
+	Kpc  float64 // K_pc of the current loop, V/A, > 0
+	Kic  float64 // K_ic, V/(A s), >= 0
+	Kff  float64 // feed-forward of v_m to the bridge's voltage, 0 to 1
+	IMax float64 // largest |i_ref|, A peak, > 0; +Inf for no limit
+
+	Filter LCL // LCL, or L with Cf = Lg = Rg = 0
+}
+
+// Validate returns all faults joined, or nil.
+func (p GridFollowingParams) Validate() error {
+	f := &faults{device: "grid-following inverter"}
+	f.positive("Rating", p.Rating, "VA")
+	f.positive("Omega0", p.Omega0, "rad/s")
+	f.positive("V0", p.V0, "V")
+	f.within("P", p.P, -setpointReach*p.Rating, setpointReach*p.Rating, "W")
+	f.within("Q", p.Q, -setpointReach*p.Rating, setpointReach*p.Rating, "var")
+	f.positive("Kp", p.Kp, "1/s")
+	f.notNegative("Ki", p.Ki, "1/s^2")
+	checkLimit(f, "SpeedLimit", p.SpeedLimit, "rad/s")
+	if p.OmegaV == 0 || math.IsInf(p.OmegaV, 1) {
+		f.add("OmegaV = %v rad/s: want a finite value > 0; an unfiltered v_md makes a source of constant power, "+
+			"whose current has two solutions or none", p.OmegaV)
+	} else {
+		f.positive("OmegaV", p.OmegaV, "rad/s")
+	}
+	f.check(p.VFloor > 0 && p.VFloor < p.V0, "VFloor", p.VFloor, "V", "a value > 0 and < V0")
+	f.positive("Kpc", p.Kpc, "V/A")
+	f.notNegative("Kic", p.Kic, "V/(A s)")
+	f.within("Kff", p.Kff, 0, 1, "")
+	checkLimit(f, "IMax", p.IMax, "A")
+	p.Filter.check(f, true)
+	return f.err()
+}
+
+// GridFollowing is a grid-following inverter: an averaged bridge with an L or
+// LCL filter, a current loop, and a synchronous-reference-frame PLL on the
+// measured voltage v_m (filter capacitor, or terminal with an L filter). Its own
+// frame is the PLL's, and x = x_d + j x_q in it is e^{-j delta} times the
+// network-frame value:
+//
+//	PLL        y = v_mq / max(|v_m|, floor)          (or v_mq / V_n)
+//	           deps/dt = y + (dw - dw*)/K_p           dw* = K_p y + K_i eps,
+//	           d delta/dt = omega - omega_f           omega = omega_0 + dw, dw = dw* kept within limits
+//	reference  dv_md/dt = w_v (v_m.d - v_md)
+//	           i_ref = (2/3) (P* - j Q*) / max(v_md, floor) + j omega_0 C_f v_c
+//	current    dgamma/dt = i_ref' - i_f               |i_ref'| = min(|i_ref|, I_max), angle kept
+//	           v_i = K_pc (i_ref' - i_f) + K_ic gamma + j omega_0 L_f i_f + K_ff v_m
+//	filter     LCL as in [GridForming]; L, in the network frame:
+//	           L_f di_g/dt = e^{j delta} v_i - v_bus - (R_f + j omega_f L_f) i_g,    i_f = e^{-j delta} i_g
+//
+// The last term of i_ref can be left out; without it Q is off by the
+// capacitor's vars. P* and Q* are met where v_m is measured: with an LCL filter
+// the terminal has less by the power in L_g and R_g. While the speed is limited
+// the PI controller's integrator goes to the value that just gives the limit,
+// with the time constant K_p/K_i.
+//
+// The PLL is that of S.-K. Chung, "A phase tracking system for three phase
+// utility interface inverters", IEEE Trans. Power Electronics 15(3), 2000
+// (citation from memory).
+//
+// Own unknowns, in this order: delta (rad), eps (s, integral of y), v_md (V),
+// gamma (A s); with an LCL filter i_f (A) and v_c (V); all in the own frame; and
+// i_g (A), a network-frame pair, the current out of the inverter. The flow into
+// the block is -i_g.
+//
+// Detail "primary only" keeps delta, eps and v_md. The current is at its
+// reference, i_f = i_ref'. With an LCL filter v_c stays as an algebraic unknown,
+// since the PLL reads it:
+//
+//	i_g = i_ref' - j omega C_f v_c        0 = v_c - e^{-j delta} v_bus - (R_g + j omega_f L_g) i_g
+//
+// Either way the flow is an injection: at nominal speed the capacitor's current
+// cancels out of i_g, which then doesn't depend on the terminal voltage and can't
+// fix that of a bus of inductors. With OmitCapacitor a small admittance to ground
+// remains, j omega C_f behind L_g. It is declared an injection all the same: the
+// voltage it would fix, i/(omega C_f), is one no equipment survives.
+//
+// A GridFollowing is no use to two goroutines at once.
+type GridFollowing struct {
+	par    GridFollowingParams
+	detail string
+	lcl    bool
+
+	pRef, qRef input
+	frame      float64 // omega_f, rad/s
+
+	iBase    float64
+	sparsity *sparsity
+}
+
+var (
+	_ solvers.Block              = (*GridFollowing)(nil)
+	_ solvers.Differentiable     = (*GridFollowing)(nil)
+	_ solvers.TimeDependent      = (*GridFollowing)(nil)
+	_ facet.Described            = (*GridFollowing)(nil)
+	_ facet.Framed               = (*GridFollowing)(nil)
+	_ facet.Measurer             = (*GridFollowing)(nil)
+	_ facet.Accountable          = (*GridFollowing)(nil)
+	_ facet.Adjustable           = (*GridFollowing)(nil)
+	_ facet.Starter              = (*GridFollowing)(nil)
+	_ facet.Detailed             = (*GridFollowing)(nil)
+	_ facet.Sized                = (*GridFollowing)(nil)
+	_ encoding.BinaryAppender    = (*GridFollowing)(nil)
+	_ encoding.BinaryUnmarshaler = (*GridFollowing)(nil)
+)
+
+// NewGridFollowing returns an inverter of the given parameters at detail
+// "full". The error joins all faults of the parameters.
+func NewGridFollowing(p GridFollowingParams) (*GridFollowing, error) {
+	if err := p.Validate(); err != nil {
+		return nil, err
+	}
+	g := &GridFollowing{
+		par:   p,
+		lcl:   !p.Filter.isL(),
+		pRef:  constant(p.P),
+		qRef:  constant(p.Q),
+		iBase: p.Rating / (1.5 * p.V0),
+	}
+	g.setDetail(InverterFull)
+	return g, nil
+}
+
+// setDetail builds what depends on the level of detail.
+func (g *GridFollowing) setDetail(level string) {
+	g.detail = level
+	_, own := g.Dims()
+	unknowns := g.Describe().Unknowns
+	var (
+		rnd   = scatter(2)
+		v, x  = make([]float64, 2), make([]float64, own)
+		frame = g.frame
+	)
+	g.sparsity = newSparsity(2 + own)
+	g.sparsity.find(func(k int) {
+		size := patternScale(k)
+		for i := range v {
+			v[i] = size * g.par.V0 * rnd.next()
+		}
+		for i := range x {
+			x[i] = size * unknowns[i].Base * rnd.next()
+		}
+		g.frame = g.par.Omega0 * (1 + 0.1*rnd.next())
+		g.fill(orders{p: g.par.Rating * rnd.next(), q: g.par.Rating * rnd.next()}, v, x)
+	})
+	g.frame = frame
+}
+
+// full tells whether all unknowns are present.
+func (g *GridFollowing) full() bool { return g.detail == InverterFull }
+
+// Params returns the parameters the inverter was built with; setpoints moved
+// since then don't show in them.
+func (g *GridFollowing) Params() GridFollowingParams { return g.par }
+
+// Dims returns 2 port components and the number of unknowns: 11 with an LCL
+// filter, 7 with an L filter; 5 and 3 at detail "primary only".
+func (g *GridFollowing) Dims() (ports, own int) {
+	switch {
+	case g.full() && g.lcl:
+		return 2, 11
+	case g.full():
+		return 2, 7
+	case g.lcl:
+		return 2, 5
+	}
+	return 2, 3
+}
+
+// Mass writes no mass at the terminal, and L_f, C_f and L_g for the filter; 0
+// for the algebraic v_c of detail "primary only".
+func (g *GridFollowing) Mass(port, own []float64) {
+	clear(port)
+	for i := range own {
+		own[i] = 1
+	}
+	f := &g.par.Filter
+	switch {
+	case g.full() && g.lcl:
+		own[5], own[6] = f.Lf, f.Lf
+		own[7], own[8] = f.Cf, f.Cf
+		own[9], own[10] = f.Lg, f.Lg
+	case g.full():
+		own[5], own[6] = f.Lf, f.Lf
+	case g.lcl:
+		own[3], own[4] = 0, 0
+	}
+}
+
+// SetFrame sets the speed of the network frame, rad/s.
+func (g *GridFollowing) SetFrame(speed float64) { g.frame = speed }
+
+// Describe describes the terminal and the unknowns.
+func (g *GridFollowing) Describe() facet.Description {
+	p := &g.par
+	// The integrator counts in terms of the speed it orders, to the limit.
+	swing := min(p.SpeedLimit, 0.1*p.Omega0)
+	u := []facet.Unknown{
+		{Name: "delta", Unit: "rad", Base: 1, Frame: facet.Angle, Dynamics: "PLL"},
+		{Name: "eps", Unit: "s", Base: ratio(swing, p.Ki, 1/p.Omega0), Dynamics: "PLL"},
+		{Name: "v_md", Unit: "V", Base: p.V0, Dynamics: "primary control"},
+	}
+	add := func(q [2]facet.Unknown) { u = append(u, q[:]...) }
+	flow := facet.FlowState
+	if g.full() {
+		add(statePair("gamma", "A s", ratio(p.V0, p.Kic, g.iBase/p.Omega0), false, "current loop"))
+		if g.lcl {
+			add(statePair("i_f", "A", g.iBase, false, "filter"))
+			add(statePair("v_c", "V", p.V0, false, "filter"))
+		}
+		add(statePair("i_g", "A", g.iBase, true, "network"))
+	} else {
+		flow = facet.FlowInjected
+		if g.lcl {
+			add(statePair("v_c", "V", p.V0, false, "filter"))
+		}
+	}
+	return facet.Description{
+		Kind:      "grid-following inverter",
+		Terminals: []facet.Terminal{{Name: "ac", Flow: flow}},
+		Unknowns:  u,
+	}
+}
+
+// orders returns the setpoints at time t.
+func (g *GridFollowing) orders(t float64) orders {
+	return orders{p: g.pRef.value(t), q: g.qRef.value(t)}
+}
+
+// followingPoint is the inverter at one point, own frame unless said
+// otherwise.
+type followingPoint struct {
+	e          complex128 // e^{j delta}
+	gamma      complex128
+	iF, vC, iG complex128
+	iNet       complex128 // i_g in the network frame
+	vM         complex128
+	amplitude  float64 // denominator of y
+	y          float64
+	wanted     float64 // dw*
+	omega      float64
+	vD         float64 // max(v_md, floor)
+	iRef       complex128
+	lim        saturation // of i_ref
+	vI         complex128
+}
+
+// at computes the point.
+func (g *GridFollowing) at(pt *followingPoint, u orders, v, x []float64) {
+	p, f := &g.par, &g.par.Filter
+	pt.e = rotor(x[0])
+	ei := conj(pt.e)
+	switch {
+	case g.full() && g.lcl:
+		x = x[:11]
+		pt.gamma, pt.iF, pt.vC, pt.iNet = pair(x, 3), pair(x, 5), pair(x, 7), pair(x, 9)
+		pt.iG = ei * pt.iNet
+		pt.vM = pt.vC
+	case g.full():
+		x = x[:7]
+		pt.gamma, pt.iNet = pair(x, 3), pair(x, 5)
+		pt.iG = ei * pt.iNet
+		pt.iF = pt.iG
+		pt.vM = ei * pair(v, 0)
+	case g.lcl:
+		pt.vC = pair(x, 3)
+		pt.vM = pt.vC
+	default:
+		pt.vM = ei * pair(v, 0)
+	}
+
+	if p.FixedAmplitude {
+		pt.amplitude = p.V0
+	} else {
+		pt.amplitude = max(abs(pt.vM), p.VFloor)
+	}
+	pt.y = imag(pt.vM) / pt.amplitude
+	pt.wanted = p.Kp*pt.y + p.Ki*x[1]
+	pt.omega = p.Omega0 + min(max(pt.wanted, -p.SpeedLimit), p.SpeedLimit)
+	pt.vD = max(x[2], p.VFloor)
+	pt.iRef = complex(u.p/(1.5*pt.vD), -u.q/(1.5*pt.vD)) + jtimes(g.compensation(), pt.vC)
+	pt.lim = saturate(pt.iRef, p.IMax)
+	if g.full() {
+		pt.vI = times(p.Kpc, pt.lim.out-pt.iF) + times(p.Kic, pt.gamma) +
+			jtimes(p.Omega0*f.Lf, pt.iF) + times(p.Kff, pt.vM)
+		return
+	}
+	pt.iF = pt.lim.out
+	pt.iG = pt.iF - jtimes(pt.omega*f.Cf, pt.vC)
+	pt.iNet = pt.e * pt.iG
+}
+
+// compensation is the admittance of the capacitor in i_ref.
+func (g *GridFollowing) compensation() float64 {
+	if g.par.OmitCapacitor {
+		return 0
+	}
+	return g.par.Omega0 * g.par.Filter.Cf
+}
+
+// gridImpedance is R_g + j omega_f L_g.
+func (g *GridFollowing) gridImpedance() complex128 {
+	return complex(g.par.Filter.Rg, g.frame*g.par.Filter.Lg)
+}
+
+// Eval writes the current into the terminal and the right-hand sides.
+func (g *GridFollowing) Eval(flow, rate []float64, t float64, v, x []float64) error {
+	var pt followingPoint
+	g.at(&pt, g.orders(t), v, x)
+	p, f := &g.par, &g.par.Filter
+	flow[0], flow[1] = -real(pt.iNet), -imag(pt.iNet)
+	rate[0] = pt.omega - g.frame
+	rate[1] = pt.y + (pt.omega-p.Omega0-pt.wanted)/p.Kp
+	rate[2] = p.OmegaV * (real(pt.vM) - x[2])
+	switch {
+	case g.full() && g.lcl:
+		rate = rate[:11]
+		setPair(rate, 3, pt.lim.out-pt.iF)
+		setPair(rate, 5, pt.vI-pt.vC-complex(f.Rf, pt.omega*f.Lf)*pt.iF)
+		setPair(rate, 7, pt.iF-pt.iG-jtimes(pt.omega*f.Cf, pt.vC))
+		setPair(rate, 9, pt.e*pt.vC-pair(v, 0)-g.gridImpedance()*pt.iNet)
+	case g.full():
+		rate = rate[:7]
+		setPair(rate, 3, pt.lim.out-pt.iF)
+		setPair(rate, 5, pt.e*pt.vI-pair(v, 0)-complex(f.Rf, g.frame*f.Lf)*pt.iNet)
+	case g.lcl:
+		setPair(rate, 3, pt.vC-conj(pt.e)*pair(v, 0)-g.gridImpedance()*pt.iG)
+	}
+	return nil
+}
+
+// Pattern lists the entries of the Jacobian. With a finite I_max it holds those
+// of a limiting inverter as well.
+func (g *GridFollowing) Pattern() []solvers.Entry { return g.sparsity.entries }
+
+// Jacobian writes the exact Jacobian. At the kink of a limit or floor it is that
+// of the side on which the limit doesn't act.
+func (g *GridFollowing) Jacobian(jac []float64, t float64, v, x []float64) {
+	g.fill(g.orders(t), v, x)
+	g.sparsity.store(jac)
+}
+
+// fill computes the Jacobian into the work matrix, column by column, each as
+// the derivative of the complex equations in a direction.
+func (g *GridFollowing) fill(u orders, v, x []float64) {
+	var pt followingPoint
+	g.at(&pt, u, v, x)
+	var (
+		p, f = &g.par, &g.par.Filter
+		w    = g.sparsity.work
+		n    = g.sparsity.order
+		full = g.full()
+		ei   = conj(pt.e)
+		vOwn = ei * pair(v, 0)
+		zg   = g.gridImpedance()
+		yc   = g.compensation()
+
+		// dy = ky Im(dv_m z*): of v_mq over the amplitude
+		ky = complex(1/pt.amplitude, 0)
+		// slopes of what has limits
+		inside, above = 1.0, 0.0
+		// rows and columns; those that a level doesn't have are beyond n
+		rGamma, rIF, rVC, rIG = 5, n, n, n
+	)
+	const rDelta, rEps, rVmd = 2, 3, 4
+	if m := abs(pt.vM); !p.FixedAmplitude && m >= p.VFloor {
+		// d(v_q/|v|) = Im(dv v*) v_d / |v|^3
+		ky = times(real(pt.vM)/(m*m*m), pt.vM)
+	}
+	if math.Abs(pt.wanted) > p.SpeedLimit {
+		inside = 0
+	}
+	if x[2] >= p.VFloor {
+		above = 1
+	}
+	dRefV := complex(-above*u.p/(1.5*pt.vD*pt.vD), above*u.q/(1.5*pt.vD*pt.vD))
+	switch {
+	case full && g.lcl:
+		rIF, rVC, rIG = 7, 9, 11
+	case full:
+		rIG = 7
+	case g.lcl:
+		rGamma, rVC = n, 5
+	default:
+		rGamma = n
+	}
+
+	for c := range n {
+		var (
+			dF, dC, dGamma complex128
+			dNet           complex128 // of i_g, network frame
+			dV             complex128 // of v_bus, own frame
+			dEps, dVmd     float64
+		)
+		switch {
+		case c < rDelta:
+			dV = ei * unit(c)
+		case c == rDelta:
+			dV = jtimes(-1, vOwn)
+		case c == rEps:
+			dEps = 1
+		case c == rVmd:
+			dVmd = 1
+		case full && c < rGamma+2:
+			dGamma = unit(c - rGamma)
+		case c >= rIG:
+			dNet = unit(c - rIG)
+		case c >= rVC:
+			dC = unit(c - rVC)
+		default:
+			dF = unit(c - rIF)
+		}
+		dG := ei * dNet
+		if full && c == rDelta {
+			dG = jtimes(-1, pt.iG)
+		}
+		dM := dC
+		if !g.lcl {
+			dM = dV
+			if full {
+				dF = dG
+			}
+		}
+
+		dy := imag(dM)*real(ky) - real(dM)*imag(ky)
+		dWanted := p.Kp*dy + p.Ki*dEps
+		dw := inside * dWanted
+		w[rDelta*n+c] = dw
+		w[rEps*n+c] = dy + (dw-dWanted)/p.Kp
+		w[rVmd*n+c] = p.OmegaV * (real(dM) - dVmd)
+
+		dLim := pt.lim.slope(times(dVmd, dRefV) + jtimes(yc, dC))
+		if !full {
+			dG = dLim - jtimes(pt.omega*f.Cf, dC) - jtimes(dw*f.Cf, pt.vC)
+			if g.lcl {
+				column(w, n, rVC, c, dC-dV-zg*dG)
+			}
+			dNet = pt.e * dG
+			if c == rDelta {
+				dNet += jtimes(1, pt.iNet)
+			}
+			column(w, n, 0, c, -dNet)
+			continue
+		}
+		column(w, n, rGamma, c, dLim-dF)
+		dI := times(p.Kpc, dLim-dF) + times(p.Kic, dGamma) + jtimes(p.Omega0*f.Lf, dF) + times(p.Kff, dM)
+		if g.lcl {
+			column(w, n, rIF, c, dI-dC-complex(f.Rf, pt.omega*f.Lf)*dF-jtimes(dw*f.Lf, pt.iF))
+			column(w, n, rVC, c, dF-dG-jtimes(pt.omega*f.Cf, dC)-jtimes(dw*f.Cf, pt.vC))
+			dNode := pt.e * dC
+			if c == rDelta {
+				dNode = jtimes(1, pt.e*pt.vC)
+			}
+			column(w, n, rIG, c, dNode-zg*dNet)
+		} else {
+			dNode := pt.e * dI
+			if c == rDelta {
+				dNode += jtimes(1, pt.e*pt.vI)
+			}
+			column(w, n, rIG, c, dNode-complex(f.Rf, g.frame*f.Lf)*dNet)
+		}
+		if c < rDelta {
+			w[rIG*n+c] -= real(unit(c))
+			w[(rIG+1)*n+c] -= imag(unit(c))
+		}
+	}
+	if full {
+		block(w, n, 0, rIG, -1)
+	}
+}

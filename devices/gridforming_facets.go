@@ -1,0 +1,332 @@
+package devices
+
+import (
+	"fmt"
+	"math"
+
+	"islet/solvers"
+	"islet/solvers/facet"
+)
+
+// TimeDerivative adds the effect of setpoints on a ramp.
+func (g *GridForming) TimeDerivative(flow, rate []float64, t float64, v, x []float64) bool {
+	du := orders{p: g.pRef.slope(t), q: g.qRef.slope(t), v: g.vRef.slope(t), omega: g.wRef.slope(t)}
+	if du == (orders{}) {
+		return false
+	}
+	var (
+		pt   formingPoint
+		u    = g.orders(t)
+		z    = g.at(&pt, u, v, x)
+		p, f = &g.par, &g.par.Filter
+		dz   = g.drift[:g.nz]
+	)
+	dw, dv := g.primary.drift(dz, z, u, du, pt.s)
+	if !g.full() {
+		zv := complex(p.Rv, p.Xv)
+		dG := complex(dv, 0) / (zv + g.gridImpedance())
+		dC := complex(dv, 0) - zv*dG
+		dS := dC*conj(pt.iG) + pt.vC*conj(dG)
+		in := [4]float64{1.5 * real(dS), 1.5 * imag(dS), real(dG), imag(dG)}
+		g.primary.gradients(&g.gradient, z, u, pt.s)
+		for i, a := range in {
+			dw += g.gradient.omegaS[i] * a
+			for r := range dz {
+				dz[r] += g.gradient.rateS[r][i] * a
+			}
+		}
+		addPair(flow, 0, -pt.e*dG)
+	}
+	rate[0] += dw
+	for r, a := range dz {
+		rate[1+r] += a
+	}
+	if !g.full() {
+		return true
+	}
+	own := 0.0
+	if p.OwnSpeed {
+		own = dw
+	}
+	dRef := complex(p.Kpv*dv, 0) + jtimes(own*f.Cf, pt.vC)
+	dLim := pt.lim.slope(dRef)
+	r := rate[1+g.nz:]
+	addPair(r, 0, complex(dv, 0)+times(p.Kaw, dLim-dRef))
+	addPair(r, 2, dLim)
+	addPair(r, 4, times(p.Kpc, dLim)+jtimes((own-dw)*f.Lf, pt.iF))
+	addPair(r, 6, jtimes(-dw*f.Cf, pt.vC))
+	return true
+}
+
+// addPair adds the complex value z at x[k].
+func addPair(x []float64, k int, z complex128) {
+	x[k] += real(z)
+	x[k+1] += imag(z)
+}
+
+// Channels lists the channels: power p and q at the terminal, current i there,
+// frequency, voltage v_c of the filter capacitor, the powers the control acts
+// on, the bridge's current i_converter, and limiting, the part by which the
+// current limit cuts |i_ref| (0 when it doesn't act).
+func (g *GridForming) Channels() []facet.Channel {
+	return []facet.Channel{
+		{Name: "p", Unit: "W generated", Doc: "active power at the terminal"},
+		{Name: "q", Unit: "var generated", Doc: "reactive power at the terminal"},
+		{Name: "i", Unit: "A rms", Doc: "current at the terminal"},
+		{Name: "frequency", Unit: "Hz", Doc: "frequency ordered by the primary control"},
+		{Name: "v_c", Unit: "V line-line rms", Doc: "voltage of the filter capacitor"},
+		{Name: "p_control", Unit: "W generated", Doc: "active power the primary control acts on, at the filter capacitor"},
+		{Name: "q_control", Unit: "var generated", Doc: "reactive power the primary control acts on, at the filter capacitor"},
+		{Name: "i_converter", Unit: "A rms", Doc: "current of the bridge"},
+		{Name: "limiting", Unit: "1", Doc: "part by which the limit cuts the current reference"},
+	}
+}
+
+// Index of the channel "i_converter" of both kinds of inverter's lists.
+const (
+	formingTerminalCurrent  = 2
+	formingConverterCurrent = 7
+)
+
+// Measure writes the channels into dst.
+func (g *GridForming) Measure(dst []float64, t float64, v, x []float64) {
+	var pt formingPoint
+	u := g.orders(t)
+	z := g.at(&pt, u, v, x)
+	s := pair(v, 0) * conj(pt.iNet)
+	iF, lim := g.converter(&pt)
+	dst[0], dst[1] = 1.5*real(s), 1.5*imag(s)
+	dst[2] = RMSAmperes(abs(pt.iNet))
+	dst[3] = Hertz(pt.omega)
+	dst[4] = LineVolts(abs(pt.vC))
+	dst[5], dst[6] = g.primary.seen(z, pt.s)
+	dst[7] = RMSAmperes(abs(iF))
+	dst[8] = 1 - lim.scale
+}
+
+// converter returns the bridge's current and the state of the limit. At detail
+// "primary only" the current is the quasi-steady one, and its reference equals
+// it.
+func (g *GridForming) converter(pt *formingPoint) (complex128, saturation) {
+	if g.full() {
+		return pt.iF, pt.lim
+	}
+	iF := pt.iG + jtimes(pt.omega*g.par.Filter.Cf, pt.vC)
+	return iF, saturate(iF, g.par.IMax)
+}
+
+// Energy returns the energy in the filter, the bridge's power and the filter's
+// losses. At detail "primary only" nothing is stored.
+func (g *GridForming) Energy(t float64, v, x []float64) facet.Energy {
+	var pt formingPoint
+	g.at(&pt, g.orders(t), v, x)
+	f := &g.par.Filter
+	iF, _ := g.converter(&pt)
+	var e facet.Energy
+	lossF := 1.5 * f.Rf * dot(iF, iF)
+	e.Dissipated = lossF + 1.5*f.Rg*dot(pt.iNet, pt.iNet)
+	if !g.full() {
+		e.Supplied = 1.5*dot(pt.vC, pt.iG) + lossF
+		return e
+	}
+	e.Supplied = 1.5 * dot(pt.vI, pt.iF)
+	e.Stored = 0.75 * (f.Lf*dot(iF, iF) + f.Cf*dot(pt.vC, pt.vC) + f.Lg*dot(pt.iNet, pt.iNet))
+	return e
+}
+
+// Setpoints lists p (W) and q (var), what the primary control aims at, voltage
+// (V line-line rms) and frequency (Hz), where it starts from.
+func (g *GridForming) Setpoints(t float64) []facet.Setpoint {
+	s := setpointReach * g.par.Rating
+	v, f := LineVolts(g.par.V0), Hertz(g.par.Omega0)
+	return []facet.Setpoint{
+		{Name: "p", Unit: "W", Doc: "active power P* of the primary control", Min: -s, Max: s, Value: g.pRef.value(t)},
+		{Name: "q", Unit: "var", Doc: "reactive power Q* of the primary control", Min: -s, Max: s, Value: g.qRef.value(t)},
+		{Name: "voltage", Unit: "V", Doc: "voltage V_0, line-line rms", Min: 0, Max: 1.5 * v, Value: LineVolts(g.vRef.value(t))},
+		{Name: "frequency", Unit: "Hz", Doc: "frequency omega_0", Min: 0.8 * f, Max: 1.2 * f, Value: Hertz(g.wRef.value(t))},
+	}
+}
+
+// Set moves a setpoint at time t, over ramp seconds.
+func (g *GridForming) Set(name string, t, value, ramp float64) error {
+	k, err := checkSet("grid-forming inverter", g.Setpoints(t), name, t, value, ramp)
+	if err != nil {
+		return err
+	}
+	switch k {
+	case 0:
+		g.pRef.set(t, value, ramp)
+	case 1:
+		g.qRef.set(t, value, ramp)
+	case 2:
+		g.vRef.set(t, PeakVolts(value), ramp)
+	case 3:
+		g.wRef.set(t, RadPerSecond(value), ramp)
+	}
+	return nil
+}
+
+// AngleUnknown is 0, delta.
+func (g *GridForming) AngleUnknown() int { return 0 }
+
+// Speed returns omega, rad/s.
+func (g *GridForming) Speed(t float64, v, x []float64) float64 {
+	var pt formingPoint
+	g.at(&pt, g.orders(t), v, x)
+	return pt.omega
+}
+
+// Weight returns the rating, VA.
+func (g *GridForming) Weight() float64 { return g.par.Rating }
+
+// CurrentLimit returns I_max and the channel "i_converter", which it limits, or
+// the rated current and the channel "i" if there is no limit.
+func (g *GridForming) CurrentLimit() (limit float64, channel int) {
+	if math.IsInf(g.par.IMax, 1) {
+		return g.iBase, formingTerminalCurrent
+	}
+	return g.par.IMax, formingConverterCurrent
+}
+
+// Detail returns the level of detail.
+func (g *GridForming) Detail() string { return g.detail }
+
+// Details returns the levels: "full", "primary only".
+func (g *GridForming) Details() []string { return []string{InverterFull, InverterPrimary} }
+
+// WithDetail returns an inverter of the same parameters, setpoints and frame
+// speed at another level.
+func (g *GridForming) WithDetail(level string) (solvers.Block, error) {
+	if level != InverterFull && level != InverterPrimary {
+		return nil, fmt.Errorf("devices: grid-forming inverter: no detail %q: want one of %q", level, g.Details())
+	}
+	h := *g
+	h.setDetail(level)
+	return &h, nil
+}
+
+// AppendBinary appends the setpoints to b.
+func (g *GridForming) AppendBinary(b []byte) ([]byte, error) {
+	return appendInputs(b, &g.pRef, &g.qRef, &g.vRef, &g.wRef), nil
+}
+
+// UnmarshalBinary restores what AppendBinary wrote.
+func (g *GridForming) UnmarshalBinary(data []byte) error {
+	return readInputs("grid-forming inverter", data, &g.pRef, &g.qRef, &g.vRef, &g.wRef)
+}
+
+// Guess writes the steady state that goes with the terminal voltage v at the
+// frame's speed: the current at which the primary control orders that speed and
+// the voltage that the current leaves at the capacitor. Where v, held for good,
+// would ask for more than the rating, the current is scaled down to the rated
+// one; a flat start then begins within the inverter's range.
+func (g *GridForming) Guess(x []float64, t float64, v []float64) {
+	var (
+		p, f = &g.par, &g.par.Filter
+		u    = g.orders(t)
+		vBus = pair(v, 0)
+		zg   = g.gridImpedance()
+		zv   = complex(p.Rv, p.Xv)
+		z    = x[1 : 1+g.nz]
+	)
+	if !(abs(vBus) > 0.05*g.vBase) { // no voltage to go by (5 %: arbitrary)
+		vBus = complex(u.v, 0)
+	}
+	iNet := g.steadyCurrent(u, vBus)
+	if m := abs(iNet); m > g.iBase {
+		iNet = times(g.iBase/m, iNet)
+	}
+	vC := vBus + zg*iNet
+	inner := vC + zv*iNet // V e^{j delta}
+	delta := math.Atan2(imag(inner), real(inner))
+	ei := rotor(-delta)
+	iG := ei * iNet
+	vC *= ei
+	s := 1.5 * vC * conj(iG)
+	x[0] = delta
+	g.primary.settle(z, u, stimulus{p: real(s), q: imag(s), i: iG}, g.frame)
+	if !g.full() {
+		return
+	}
+	omega := g.frame
+	omegaN := p.Omega0
+	if p.OwnSpeed {
+		omegaN = omega
+	}
+	iF := iG + jtimes(omega*f.Cf, vC)
+	y := x[1+g.nz:]
+	setPair(y, 0, times(ratio(1, p.Kiv, 0), iF-times(p.F, iG)-jtimes(omegaN*f.Cf, vC)))
+	setPair(y, 2, times(ratio(1, p.Kic, 0), vC+complex(f.Rf, omega*f.Lf)*iF-jtimes(omegaN*f.Lf, iF)))
+	setPair(y, 4, iF)
+	setPair(y, 6, vC)
+	setPair(y, 8, iNet)
+}
+
+// steadyCurrent solves the two steady-state conditions of the primary control,
+// omega = omega_f and V = |v_bus + (Z_g + Z_v) i_g|, for the current i_g in the
+// network frame by Newton's method from i_g at P*, Q*. Without droop of the
+// frequency the first condition says nothing, and P* stands for it. It returns
+// the starting value if the method doesn't settle.
+func (g *GridForming) steadyCurrent(u orders, vBus complex128) complex128 {
+	var (
+		zg    = g.gridImpedance()
+		zt    = zg + complex(g.par.Rv, g.par.Xv)
+		start = times(1/1.5, complex(u.p, -u.q)/conj(vBus))
+		z     [maxPrimary]float64
+	)
+	residual := func(i complex128) (a, b float64) {
+		vC := vBus + zg*i
+		inner := vC + times(1, (zt-zg)*i)
+		ei := conj(inner)
+		if m := abs(inner); m > 0 {
+			ei = times(1/m, ei)
+		}
+		s := 1.5 * vC * conj(i)
+		st := stimulus{p: real(s), q: imag(s), i: ei * i}
+		g.primary.settle(z[:g.nz], u, st, g.frame)
+		a = g.primary.speed(z[:g.nz], u, st) - g.frame
+		b = (g.primary.voltage(z[:g.nz], u) - abs(inner)) / g.vBase
+		return a, b
+	}
+	// speed per ampere tells whether the frequency droops at all
+	scale := func(i complex128) float64 {
+		a0, _ := residual(i)
+		a1, _ := residual(i + complex(g.iBase, 0))
+		a2, _ := residual(i + complex(0, g.iBase))
+		return math.Abs(a1-a0) + math.Abs(a2-a0)
+	}(start)
+	full := residual
+	if scale == 0 {
+		full = func(i complex128) (a, b float64) {
+			_, b = residual(i)
+			s := 1.5 * (vBus + zg*i) * conj(i)
+			return (real(s) - u.p) / g.par.Rating, b
+		}
+		scale = 1
+	}
+	i := start
+	h := 1e-6 * g.iBase // difference step: the equations are smooth
+	for range 30 {
+		a, b := full(i)
+		if math.Abs(a)/scale+math.Abs(b) < 1e-12 {
+			return i
+		}
+		ad, bd := full(i + complex(h, 0))
+		aq, bq := full(i + complex(0, h))
+		ad, bd, aq, bq = (ad-a)/h, (bd-b)/h, (aq-a)/h, (bq-b)/h
+		det := ad*bq - aq*bd
+		step := complex((-a*bq+b*aq)/det, (-b*ad+a*bd)/det)
+		m := abs(step)
+		if math.IsNaN(m) || math.IsInf(m, 0) {
+			return start
+		}
+		if m > 0.5*g.iBase { // damped: half the rated current at most
+			step = times(0.5*g.iBase/m, step)
+		}
+		i += step
+		if m < 1e-9*g.iBase {
+			return i
+		}
+	}
+	return start
+}
