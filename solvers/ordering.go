@@ -30,6 +30,7 @@ func orderMinDegree(adj [][]int32) []int32 {
 		mark:   make([]int, n),
 		base:   1,
 		parent: make([]int32, n),
+		merged: make([]bool, n),
 		bucket: make([]int32, n),
 		chain:  make([]int32, n),
 		hash:   make([]int32, n),
@@ -94,6 +95,7 @@ type orderGraph struct {
 	base int   // smaller marks are stale
 
 	parent []int32 // len n
+	merged []bool  // len n: joined its parent as a variable
 
 	// Hash table of the pivot element's variables.
 	bucket, chain, hash []int32
@@ -295,11 +297,13 @@ func (g *orderGraph) absorb(e, p int32) {
 func (g *orderGraph) merge(i, j int32) {
 	g.weight[i] = 0
 	g.parent[i] = j
+	g.merged[i] = true
 	g.vars[i], g.elems[i] = nil, nil
 }
 
 // postorder lists the forest of absorptions and merges, children first,
-// without the deferred variables.
+// without the deferred variables. The variables of one pivot stand together:
+// the elements it absorbed come before all of them.
 func (g *orderGraph) postorder(deferred []int32) []int32 {
 	n := g.n
 	order := make([]int32, 0, n)
@@ -307,10 +311,12 @@ func (g *orderGraph) postorder(deferred []int32) []int32 {
 	for i := range child {
 		child[i] = -1
 	}
-	for i := n - 1; i >= 0; i-- {
-		if p := g.parent[i]; p >= 0 {
-			sibling[i] = child[p]
-			child[p] = int32(i)
+	for _, merged := range []bool{true, false} { // the last come first
+		for i := n - 1; i >= 0; i-- {
+			if p := g.parent[i]; p >= 0 && g.merged[i] == merged {
+				sibling[i] = child[p]
+				child[p] = int32(i)
+			}
 		}
 	}
 	skip := make([]bool, n)

@@ -1,0 +1,121 @@
+package solvers
+
+import "fmt"
+
+// Solve overwrites b with the solution of A x = b. It panics if len(b) is not
+// the order of A, or if the last Factor didn't succeed.
+func (f *SparseLU) Solve(b []float64) {
+	f.mustSolve(b)
+	y := f.y
+	for k, i := range f.rowOf {
+		y[k] = b[i]
+	}
+	for blk := len(f.block) - 2; blk >= 0; blk-- {
+		k0, k1 := f.block[blk], f.block[blk+1]
+		f.solveBlock(k0, k1)
+		if f.op[k0] == f.op[k1] {
+			continue
+		}
+		// Move the block's unknowns to the right-hand sides above.
+		for k := k0; k < k1; k++ {
+			rows, vals := f.oRow[f.op[k]:f.op[k+1]], f.ox[f.op[k]:f.op[k+1]]
+			vals = vals[:len(rows)]
+			yk := y[k]
+			for p, i := range rows {
+				y[i] -= vals[p] * yk
+			}
+		}
+	}
+	for k, j := range f.colOf {
+		b[j] = y[k]
+	}
+}
+
+// solveBlock solves with the diagonal block of the positions k0..k1-1 in y.
+func (f *SparseLU) solveBlock(k0, k1 int) {
+	y := f.y
+	if k1 == k0+1 {
+		y[k0] *= f.rowScale[k0] * f.inv[k0] * f.colScale[k0]
+		return
+	}
+	lp, li, lx := f.lp, f.li, f.lx
+
+	// y = L\(R y)
+	for k := k0; k < k1; k++ {
+		y[k] *= f.rowScale[k]
+	}
+	for k := k0; k < k1; k++ {
+		s, l := li[lp[k]:lp[k+1]], lx[lp[k]:lp[k+1]]
+		l = l[:len(s)]
+		yk := y[k]
+		for p, i := range s {
+			y[i] -= l[p] * yk
+		}
+	}
+
+	// y = C (U\y)
+	for k := k1 - 1; k >= k0; k-- {
+		s, u := f.ui[f.up[k]:f.up[k+1]], f.ux[f.up[k]:f.up[k+1]]
+		u = u[:len(s)]
+		yk := y[k] * f.inv[k]
+		y[k] = yk * f.colScale[k]
+		for p, i := range s {
+			y[i] -= u[p] * yk
+		}
+	}
+}
+
+// SolveTranspose overwrites b with the solution of A' x = b, A' the transpose.
+// It panics if len(b) is not the order of A, or if the last Factor didn't
+// succeed.
+func (f *SparseLU) SolveTranspose(b []float64) {
+	f.mustSolve(b)
+	y := f.y
+	for k, j := range f.colOf {
+		y[k] = b[j]
+	}
+	for blk := range len(f.block) - 1 {
+		k0, k1 := f.block[blk], f.block[blk+1]
+
+		// y = U'\(C (y - above' x))
+		for k := k0; k < k1; k++ {
+			yk := y[k]
+			for p := f.op[k]; p < f.op[k+1]; p++ {
+				yk -= f.ox[p] * y[f.oRow[p]]
+			}
+			yk *= f.colScale[k]
+			s, u := f.ui[f.up[k]:f.up[k+1]], f.ux[f.up[k]:f.up[k+1]]
+			u = u[:len(s)]
+			for p, i := range s {
+				yk -= u[p] * y[i]
+			}
+			y[k] = yk * f.inv[k]
+		}
+
+		// y = R (L'\y)
+		for k := k1 - 1; k >= k0; k-- {
+			s, l := f.li[f.lp[k]:f.lp[k+1]], f.lx[f.lp[k]:f.lp[k+1]]
+			l = l[:len(s)]
+			yk := y[k]
+			for p, i := range s {
+				yk -= l[p] * y[i]
+			}
+			y[k] = yk
+		}
+		for k := k0; k < k1; k++ {
+			y[k] *= f.rowScale[k]
+		}
+	}
+	for k, i := range f.rowOf {
+		b[i] = y[k]
+	}
+}
+
+func (f *SparseLU) mustSolve(b []float64) {
+	if len(b) != f.n {
+		panic(fmt.Sprintf("solvers: right-hand side has length %d, the matrix order %d", len(b), f.n))
+	}
+	if !f.factored {
+		panic("solvers: solve without a successful Factor")
+	}
+}
