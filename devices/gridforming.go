@@ -365,8 +365,9 @@ func (g *GridForming) fill(u orders, v, x []float64) {
 	}
 }
 
-// fillFull computes the Jacobian of the full equations. Columns are taken one
-// by one, each as the derivative of the complex equations in a direction.
+// fillFull computes the Jacobian of the full equations. A column is the
+// derivative of the complex equations in the direction of its unknown; those
+// unknowns that reach the current reference go through reference.
 func (g *GridForming) fillFull(pt *formingPoint) {
 	var (
 		p, f = &g.par, &g.par.Filter
@@ -376,74 +377,104 @@ func (g *GridForming) fillFull(pt *formingPoint) {
 		nz   = g.nz
 		zv   = complex(p.Rv, p.Xv)
 		ei   = conj(pt.e)
-		igc  = conj(pt.iG)
-		rf   = complex(f.Rf, pt.omega*f.Lf)
 
 		// rows and columns, after the two of the terminal
 		rDelta, rZ, rPhi      = 2, 3, 3 + nz
 		rGamma, rIF, rVC, rIG = 5 + nz, 7 + nz, 9 + nz, 11 + nz
+
+		// d i_ref / d omega, and what omega does to the filter directly
+		refW = complex128(0)
+		iFW  = jtimes(-f.Lf, pt.iF)
+		vCW  = jtimes(-f.Cf, pt.vC)
 	)
-	own := 0.0
 	if p.OwnSpeed {
-		own = 1
+		refW = -vCW
+		iFW = 0
 	}
-	for c := rDelta; c < n; c++ {
-		var (
-			dG, dC, dF, dPhi, dGamma complex128
-			dw, dv                   float64
-		)
-		k := c - rZ // index in z
-		switch {
-		case c == rDelta:
-			dG = jtimes(-1, pt.iG)
-		case c < rPhi:
-			dw, dv = d.omegaZ[k], d.vZ[k]
-		case c < rGamma:
-			dPhi = unit(c - rPhi)
-		case c < rIF:
-			dGamma = unit(c - rGamma)
-		case c < rVC:
-			dF = unit(c - rIF)
-		case c < rIG:
-			dC = unit(c - rVC)
-		default:
-			dG = ei * unit(c-rIG)
-		}
-		// the primary control
-		dS := dC*igc + pt.vC*conj(dG)
-		in := [4]float64{1.5 * real(dS), 1.5 * imag(dS), real(dG), imag(dG)}
-		for i, a := range in {
-			dw += d.omegaS[i] * a
-		}
-		for r := range nz {
-			sum := 0.0
-			for i, a := range in {
-				sum += d.rateS[r][i] * a
-			}
-			if k >= 0 && k < nz {
-				sum += d.rateZ[r][k]
-			}
-			w[(rZ+r)*n+c] = sum
-		}
+
+	// delta: turns i_g
+	dG := jtimes(-1, pt.iG)
+	dw := g.respond(rDelta, pt.vC*conj(dG), dG)
+	dErr := -zv * dG
+	g.reference(pt, rDelta, dErr, times(p.Kpv, dErr)+times(p.F, dG)+times(dw, refW), times(dw, iFW))
+	column(w, n, rVC, rDelta, times(dw, vCW)-dG)
+	column(w, n, rIG, rDelta, jtimes(1, pt.e*pt.vC))
+
+	// z: moves omega and V
+	for k := range nz {
+		c := rZ + k
+		dw, dv := d.omegaZ[k], d.vZ[k]
 		w[rDelta*n+c] = dw
-		// the loops
-		dErr := complex(dv, 0) - zv*dG - dC
-		dRef := times(p.Kpv, dErr) + times(p.Kiv, dPhi) + times(p.F, dG) +
-			jtimes(pt.omegaN*f.Cf, dC) + jtimes(own*dw*f.Cf, pt.vC)
-		dLim := pt.lim.slope(dRef)
-		column(w, n, rPhi, c, dErr+times(p.Kaw, dLim-dRef))
-		column(w, n, rGamma, c, dLim-dF)
-		dI := times(p.Kpc, dLim-dF) + times(p.Kic, dGamma) + jtimes(pt.omegaN*f.Lf, dF) + jtimes(own*dw*f.Lf, pt.iF)
-		// the filter
-		column(w, n, rIF, c, dI-dC-rf*dF-jtimes(dw*f.Lf, pt.iF))
-		column(w, n, rVC, c, dF-dG-jtimes(pt.omega*f.Cf, dC)-jtimes(dw*f.Cf, pt.vC))
+		for r := range nz {
+			w[(rZ+r)*n+c] = d.rateZ[r][k]
+		}
+		g.reference(pt, c, complex(dv, 0), complex(p.Kpv*dv, 0)+times(dw, refW), times(dw, iFW))
+		column(w, n, rVC, c, times(dw, vCW))
 	}
+
+	iFF := complex(-f.Rf-p.Kpc, (pt.omegaN-pt.omega)*f.Lf)
+	refC := complex(-p.Kpv, pt.omegaN*f.Cf)
+	for q := range 2 {
+		u := unit(q)
+
+		// phi
+		g.reference(pt, rPhi+q, 0, times(p.Kiv, u), 0)
+
+		// v_c: in the power, the voltage error and the decoupling
+		c := rVC + q
+		dw := g.respond(c, u*conj(pt.iG), 0)
+		g.reference(pt, c, -u, refC*u+times(dw, refW), times(dw, iFW)-u)
+		column(w, n, rVC, c, times(dw, vCW)-jtimes(pt.omega*f.Cf, u))
+
+		// i_g: in the power, the virtual impedance and the feed-forward
+		c = rIG + q
+		dG := ei * u
+		dw = g.respond(c, pt.vC*conj(dG), dG)
+		dErr := -zv * dG
+		g.reference(pt, c, dErr, times(p.Kpv, dErr)+times(p.F, dG)+times(dw, refW), times(dw, iFW))
+		column(w, n, rVC, c, times(dw, vCW)-dG)
+	}
+	// gamma and i_f reach nothing else
+	block(w, n, rIF, rGamma, complex(p.Kic, 0))
+	block(w, n, rGamma, rIF, -1)
+	block(w, n, rIF, rIF, iFF)
+	block(w, n, rVC, rIF, 1)
 	// the grid side, network frame
 	block(w, n, 0, rIG, -1)
 	block(w, n, rIG, 0, -1)
-	column(w, n, rIG, rDelta, jtimes(1, pt.e*pt.vC))
 	block(w, n, rIG, rVC, pt.e)
 	block(w, n, rIG, rIG, -g.gridImpedance())
+}
+
+// respond writes the rows of delta and of the primary control in column c, for
+// the change dS of v_c i_g* and dG of i_g, and returns the change of omega.
+func (g *GridForming) respond(c int, dS, dG complex128) float64 {
+	d, w, n := &g.gradient, g.sparsity.work, g.sparsity.order
+	p, q := 1.5*real(dS), 1.5*imag(dS)
+	id, iq := real(dG), imag(dG)
+	dw := d.omegaS[0]*p + d.omegaS[1]*q + d.omegaS[2]*id + d.omegaS[3]*iq
+	k := 2*n + c
+	w[k] = dw
+	for r := range d.rateS[:g.nz] {
+		s := &d.rateS[r]
+		k += n
+		w[k] = s[0]*p + s[1]*q + s[2]*id + s[3]*iq
+	}
+	return dw
+}
+
+// reference writes the rows of phi, gamma and i_f in column c for the change
+// dErr of the voltage error and dRef of the unlimited current reference; rest is
+// what reaches the row of i_f by other ways.
+func (g *GridForming) reference(pt *formingPoint, c int, dErr, dRef, rest complex128) {
+	n := g.sparsity.order
+	dLim := pt.lim.slope(dRef)
+	w := g.sparsity.work[(3+g.nz)*n+c:]
+	kaw, kpc := g.par.Kaw, g.par.Kpc
+	w[0] = real(dErr) + kaw*(real(dLim)-real(dRef))
+	w[n] = imag(dErr) + kaw*(imag(dLim)-imag(dRef))
+	w[2*n], w[3*n] = real(dLim), imag(dLim)
+	w[4*n], w[5*n] = kpc*real(dLim)+real(rest), kpc*imag(dLim)+imag(rest)
 }
 
 // unit returns 1 for k = 0 and j for k = 1.

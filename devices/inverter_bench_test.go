@@ -1,0 +1,39 @@
+package devices
+
+import "testing"
+
+// The cost of one evaluation and of one Jacobian of a shipped inverter at its
+// defaults.
+func BenchmarkInverter(b *testing.B) {
+	p, err := formingPlate().Params()
+	if err != nil {
+		b.Fatal(err)
+	}
+	q, err := followingPlate().Params()
+	if err != nil {
+		b.Fatal(err)
+	}
+	for _, c := range []struct {
+		name string
+		inv  inverter
+	}{{"forming", mustForming(b, p)}, {"following", mustFollowing(b, q)}} {
+		_, own := c.inv.Dims()
+		v, x := []float64{320, 10}, make([]float64, own)
+		c.inv.SetFrame(314)
+		c.inv.Guess(x, 0, v)
+		flow, rate := make([]float64, 2), make([]float64, own)
+		jac := make([]float64, (2+own)*(2+own))
+		b.Run(c.name+"/eval", func(b *testing.B) {
+			for b.Loop() {
+				if err := c.inv.Eval(flow, rate, 0, v, x); err != nil {
+					b.Fatal(err)
+				}
+			}
+		})
+		b.Run(c.name+"/jacobian", func(b *testing.B) {
+			for b.Loop() {
+				c.inv.Jacobian(jac, 0, v, x)
+			}
+		})
+	}
+}
