@@ -20,8 +20,10 @@ type System interface {
 
 	// TimeDerivative writes the partial derivative of f with respect to t
 	// into dst and returns true, or returns false (dst then holds rubbish)
-	// if f doesn't depend on t explicitly. f0 is f(t, y).
-	TimeDerivative(dst []float64, t float64, y, f0 []float64) (bool, error)
+	// if f doesn't depend on t explicitly. Where it has to be differenced,
+	// h is the step about to be taken and f0 is f(t, y); only times from t
+	// on are looked at.
+	TimeDerivative(dst []float64, t, h float64, y, f0 []float64) (bool, error)
 
 	// Linearise evaluates the Jacobian J = df/dy at (t, y) and keeps it.
 	Linearise(t float64, y []float64) error
@@ -140,8 +142,9 @@ type Stepper interface {
 	// state is then the last accepted one.
 	Step(tmax float64) error
 
-	// Redo takes back the last step and repeats it to end exactly at t,
-	// which must lie within it.
+	// Redo takes back the last step and repeats it, without error control,
+	// to end exactly at t, which must lie within it or close to its end. At
+	// t = Previous() it just takes the step back.
 	Redo(t float64) error
 
 	// Time and State are the end of the last accepted step. The slice is
