@@ -22,7 +22,7 @@ type Options struct {
 	Frame float64
 
 	// Targets are values for setpoints to ramp to. A setpoint without one
-	// ramps to 0.9 of its value (or from 0 to 0.1), kept in its range.
+	// ramps to about 0.9 of its value (or from 0 to 0.1), kept in its range.
 	Targets map[string]float64
 
 	// Point, if not nil, moves a random point into the domain of the device:
@@ -220,7 +220,7 @@ func (s *subject) target(p facet.Setpoint) float64 {
 	if v, ok := s.o.Targets[p.Name]; ok {
 		return v
 	}
-	v := 0.9 * p.Value
+	v := 0.9123456789 * p.Value // a full mantissa: nothing may round it
 	if p.Value == 0 {
 		v = 0.1
 	}
