@@ -374,131 +374,179 @@ func (g *GridFollowing) Jacobian(jac []float64, t float64, v, x []float64) {
 	g.sparsity.store(jac)
 }
 
-// fill computes the Jacobian into the work matrix, column by column, each as
-// the derivative of the complex equations in a direction.
+// followingSlopes are the slopes of what has limits or floors at one point.
+type followingSlopes struct {
+	y      complex128 // dy = Im(dv_m y*)
+	inside float64    // d dw / d dw*: 1 within the speed limits, else 0
+	ref    complex128 // d i_ref / d v_md
+}
+
+// fill computes the Jacobian into the work matrix. A column is the derivative of
+// the complex equations in the direction of its unknown.
 func (g *GridFollowing) fill(u orders, v, x []float64) {
 	var pt followingPoint
 	g.at(&pt, u, v, x)
+	p := &g.par
+	d := followingSlopes{y: complex(1/pt.amplitude, 0), inside: 1}
+	if m := abs(pt.vM); !p.FixedAmplitude && m >= p.VFloor {
+		// d(v_q/|v|) = Im(dv v*) v_d / |v|^3
+		d.y = times(real(pt.vM)/(m*m*m), pt.vM)
+	}
+	if math.Abs(pt.wanted) > p.SpeedLimit {
+		d.inside = 0
+	}
+	if x[2] >= p.VFloor {
+		d.ref = complex(-u.p/(1.5*pt.vD*pt.vD), u.q/(1.5*pt.vD*pt.vD))
+	}
+	switch {
+	case g.full() && g.lcl:
+		g.fillLCL(&pt, &d)
+	case g.full():
+		g.fillL(&pt, &d)
+	default:
+		g.fillPrimary(&pt, &d, v)
+	}
+}
+
+// Rows and columns of the first unknowns, after the two of the terminal.
+const (
+	followDelta = 2
+	followEps   = 3
+	followVmd   = 4
+	followNext  = 5
+)
+
+// lock writes the rows of the PLL and of the voltage filter in column c for the
+// changes dM of v_m, dEps of eps and dVmd of v_md, and returns that of omega.
+func (g *GridFollowing) lock(d *followingSlopes, c int, dM complex128, dEps, dVmd float64) float64 {
+	p, w, n := &g.par, g.sparsity.work, g.sparsity.order
+	dy := imag(dM)*real(d.y) - real(dM)*imag(d.y)
+	wanted := p.Kp*dy + p.Ki*dEps
+	dw := d.inside * wanted
+	w[followDelta*n+c] = dw
+	w[followEps*n+c] = dy + (dw-wanted)/p.Kp
+	w[followVmd*n+c] = p.OmegaV * (real(dM) - dVmd)
+	return dw
+}
+
+// fillLCL computes the Jacobian of the full equations with an LCL filter.
+func (g *GridFollowing) fillLCL(pt *followingPoint, d *followingSlopes) {
+	const rGamma, rIF, rVC, rIG = followNext, followNext + 2, followNext + 4, followNext + 6
 	var (
 		p, f = &g.par, &g.par.Filter
 		w    = g.sparsity.work
 		n    = g.sparsity.order
-		full = g.full()
 		ei   = conj(pt.e)
-		vOwn = ei * pair(v, 0)
-		zg   = g.gridImpedance()
-		yc   = g.compensation()
-
-		// dy = ky Im(dv_m z*): of v_mq over the amplitude
-		ky = complex(1/pt.amplitude, 0)
-		// slopes of what has limits
-		inside, above = 1.0, 0.0
-		// rows and columns; those that a level doesn't have are beyond n
-		rGamma, rIF, rVC, rIG = 5, n, n, n
+		iFW  = jtimes(-f.Lf, pt.iF) // d(row of i_f)/d omega
+		vCW  = jtimes(-f.Cf, pt.vC)
 	)
-	const rDelta, rEps, rVmd = 2, 3, 4
-	if m := abs(pt.vM); !p.FixedAmplitude && m >= p.VFloor {
-		// d(v_q/|v|) = Im(dv v*) v_d / |v|^3
-		ky = times(real(pt.vM)/(m*m*m), pt.vM)
+	// delta turns i_g
+	column(w, n, rVC, followDelta, jtimes(1, pt.iG))
+	column(w, n, rIG, followDelta, jtimes(1, pt.e*pt.vC))
+	// eps
+	dw := g.lock(d, followEps, 0, 1, 0)
+	column(w, n, rIF, followEps, times(dw, iFW))
+	column(w, n, rVC, followEps, times(dw, vCW))
+	// v_md
+	g.lock(d, followVmd, 0, 0, 1)
+	dLim := pt.lim.slope(d.ref)
+	column(w, n, rGamma, followVmd, dLim)
+	column(w, n, rIF, followVmd, times(p.Kpc, dLim))
+	// v_c
+	for q := range 2 {
+		u := unit(q)
+		dw := g.lock(d, rVC+q, u, 0, 0)
+		dLim := pt.lim.slope(jtimes(g.compensation(), u))
+		column(w, n, rGamma, rVC+q, dLim)
+		column(w, n, rIF, rVC+q, times(p.Kpc, dLim)+times(p.Kff-1, u)+times(dw, iFW))
+		column(w, n, rVC, rVC+q, times(dw, vCW)-jtimes(pt.omega*f.Cf, u))
 	}
-	if math.Abs(pt.wanted) > p.SpeedLimit {
-		inside = 0
-	}
-	if x[2] >= p.VFloor {
-		above = 1
-	}
-	dRefV := complex(-above*u.p/(1.5*pt.vD*pt.vD), above*u.q/(1.5*pt.vD*pt.vD))
-	switch {
-	case full && g.lcl:
-		rIF, rVC, rIG = 7, 9, 11
-	case full:
-		rIG = 7
-	case g.lcl:
-		rGamma, rVC = n, 5
-	default:
-		rGamma = n
-	}
+	// gamma and i_f
+	block(w, n, rIF, rGamma, complex(p.Kic, 0))
+	block(w, n, rGamma, rIF, -1)
+	block(w, n, rIF, rIF, complex(-p.Kpc-f.Rf, (p.Omega0-pt.omega)*f.Lf))
+	block(w, n, rVC, rIF, 1)
+	// the grid side, network frame
+	block(w, n, rVC, rIG, -ei)
+	block(w, n, rIG, rVC, pt.e)
+	block(w, n, rIG, rIG, -g.gridImpedance())
+	block(w, n, rIG, 0, -1)
+	block(w, n, 0, rIG, -1)
+}
 
+// fillL computes the Jacobian of the full equations with an L filter.
+func (g *GridFollowing) fillL(pt *followingPoint, d *followingSlopes) {
+	const rGamma, rIG = followNext, followNext + 2
+	var (
+		p, f = &g.par, &g.par.Filter
+		w    = g.sparsity.work
+		n    = g.sparsity.order
+		ei   = conj(pt.e)
+		ownZ = complex(-p.Kpc, p.Omega0*f.Lf) // d v_i/d i_f
+	)
+	// delta turns i_f and v_m
+	dF, dM := jtimes(-1, pt.iF), jtimes(-1, pt.vM)
+	g.lock(d, followDelta, dM, 0, 0)
+	column(w, n, rGamma, followDelta, -dF)
+	column(w, n, rIG, followDelta, pt.e*(ownZ*dF+times(p.Kff, dM)+jtimes(1, pt.vI)))
+	// eps
+	g.lock(d, followEps, 0, 1, 0)
+	// v_md
+	g.lock(d, followVmd, 0, 0, 1)
+	dLim := pt.lim.slope(d.ref)
+	column(w, n, rGamma, followVmd, dLim)
+	column(w, n, rIG, followVmd, pt.e*times(p.Kpc, dLim))
+	// v_bus
+	for q := range 2 {
+		g.lock(d, q, ei*unit(q), 0, 0)
+	}
+	block(w, n, rIG, 0, complex(p.Kff-1, 0))
+	// gamma, i_g
+	block(w, n, rIG, rGamma, times(p.Kic, pt.e))
+	block(w, n, rGamma, rIG, -ei)
+	block(w, n, rIG, rIG, ownZ-complex(f.Rf, g.frame*f.Lf))
+	block(w, n, 0, rIG, -1)
+}
+
+// fillPrimary computes the Jacobian of detail "primary only".
+func (g *GridFollowing) fillPrimary(pt *followingPoint, d *followingSlopes, v []float64) {
+	const rVC = followNext
+	var (
+		f  = &g.par.Filter
+		w  = g.sparsity.work
+		n  = g.sparsity.order
+		ei = conj(pt.e)
+		zg = g.gridImpedance()
+	)
 	for c := range n {
-		var (
-			dF, dC, dGamma complex128
-			dNet           complex128 // of i_g, network frame
-			dV             complex128 // of v_bus, own frame
-			dEps, dVmd     float64
-		)
+		var dV, dC complex128 // of v_bus and v_c, own frame
+		var dEps, dVmd float64
 		switch {
-		case c < rDelta:
+		case c < followDelta:
 			dV = ei * unit(c)
-		case c == rDelta:
-			dV = jtimes(-1, vOwn)
-		case c == rEps:
+		case c == followDelta:
+			dV = jtimes(-1, ei*pair(v, 0))
+		case c == followEps:
 			dEps = 1
-		case c == rVmd:
+		case c == followVmd:
 			dVmd = 1
-		case full && c < rGamma+2:
-			dGamma = unit(c - rGamma)
-		case c >= rIG:
-			dNet = unit(c - rIG)
-		case c >= rVC:
-			dC = unit(c - rVC)
 		default:
-			dF = unit(c - rIF)
-		}
-		dG := ei * dNet
-		if full && c == rDelta {
-			dG = jtimes(-1, pt.iG)
+			dC = unit(c - rVC)
 		}
 		dM := dC
 		if !g.lcl {
 			dM = dV
-			if full {
-				dF = dG
-			}
 		}
-
-		dy := imag(dM)*real(ky) - real(dM)*imag(ky)
-		dWanted := p.Kp*dy + p.Ki*dEps
-		dw := inside * dWanted
-		w[rDelta*n+c] = dw
-		w[rEps*n+c] = dy + (dw-dWanted)/p.Kp
-		w[rVmd*n+c] = p.OmegaV * (real(dM) - dVmd)
-
-		dLim := pt.lim.slope(times(dVmd, dRefV) + jtimes(yc, dC))
-		if !full {
-			dG = dLim - jtimes(pt.omega*f.Cf, dC) - jtimes(dw*f.Cf, pt.vC)
-			if g.lcl {
-				column(w, n, rVC, c, dC-dV-zg*dG)
-			}
-			dNet = pt.e * dG
-			if c == rDelta {
-				dNet += jtimes(1, pt.iNet)
-			}
-			column(w, n, 0, c, -dNet)
-			continue
-		}
-		column(w, n, rGamma, c, dLim-dF)
-		dI := times(p.Kpc, dLim-dF) + times(p.Kic, dGamma) + jtimes(p.Omega0*f.Lf, dF) + times(p.Kff, dM)
+		dw := g.lock(d, c, dM, dEps, dVmd)
+		dLim := pt.lim.slope(times(dVmd, d.ref) + jtimes(g.compensation(), dC))
+		dG := dLim - jtimes(pt.omega*f.Cf, dC) - jtimes(dw*f.Cf, pt.vC)
 		if g.lcl {
-			column(w, n, rIF, c, dI-dC-complex(f.Rf, pt.omega*f.Lf)*dF-jtimes(dw*f.Lf, pt.iF))
-			column(w, n, rVC, c, dF-dG-jtimes(pt.omega*f.Cf, dC)-jtimes(dw*f.Cf, pt.vC))
-			dNode := pt.e * dC
-			if c == rDelta {
-				dNode = jtimes(1, pt.e*pt.vC)
-			}
-			column(w, n, rIG, c, dNode-zg*dNet)
-		} else {
-			dNode := pt.e * dI
-			if c == rDelta {
-				dNode += jtimes(1, pt.e*pt.vI)
-			}
-			column(w, n, rIG, c, dNode-complex(f.Rf, g.frame*f.Lf)*dNet)
+			column(w, n, rVC, c, dC-dV-zg*dG)
 		}
-		if c < rDelta {
-			w[rIG*n+c] -= real(unit(c))
-			w[(rIG+1)*n+c] -= imag(unit(c))
+		dNet := pt.e * dG
+		if c == followDelta {
+			dNet += jtimes(1, pt.iNet)
 		}
-	}
-	if full {
-		block(w, n, 0, rIG, -1)
+		column(w, n, 0, c, -dNet)
 	}
 }

@@ -262,71 +262,60 @@ func (g *GridForming) Guess(x []float64, t float64, v []float64) {
 	setPair(y, 8, iNet)
 }
 
-// steadyCurrent solves the two steady-state conditions of the primary control,
-// omega = omega_f and V = |v_bus + (Z_g + Z_v) i_g|, for the current i_g in the
-// network frame by Newton's method from i_g at P*, Q*. Without droop of the
-// frequency the first condition says nothing, and P* stands for it. It returns
-// the starting value if the method doesn't settle.
+// steadyCurrent solves the two conditions of a steady state, omega = omega_f and
+// V = |v_bus + (Z_g + Z_v) i_g|, for the current i_g in the network frame by
+// Newton's method from i_g at P*, Q*. Where the frequency doesn't depend on power
+// the first condition says nothing, and P = P* stands for it. It returns the
+// starting value if the method doesn't settle.
 func (g *GridForming) steadyCurrent(u orders, vBus complex128) complex128 {
-	var (
-		zg    = g.gridImpedance()
-		zt    = zg + complex(g.par.Rv, g.par.Xv)
-		start = times(1/1.5, complex(u.p, -u.q)/conj(vBus))
-		z     [maxPrimary]float64
-	)
+	start := times(1/1.5, complex(u.p, -u.q)/conj(vBus))
+	w0, _, _ := g.mismatch(u, vBus, start)
+	wd, _, _ := g.mismatch(u, vBus, start+complex(g.iBase, 0))
+	wq, _, _ := g.mismatch(u, vBus, start+complex(0, g.iBase))
+	span := math.Abs(wd-w0) + math.Abs(wq-w0) // rad/s by rated current
 	residual := func(i complex128) (a, b float64) {
-		vC := vBus + zg*i
-		inner := vC + times(1, (zt-zg)*i)
-		ei := conj(inner)
-		if m := abs(inner); m > 0 {
-			ei = times(1/m, ei)
+		dw, dv, p := g.mismatch(u, vBus, i)
+		if span == 0 {
+			return (p - u.p) / g.par.Rating, dv / g.vBase
 		}
-		s := 1.5 * vC * conj(i)
-		st := stimulus{p: real(s), q: imag(s), i: ei * i}
-		g.primary.settle(z[:g.nz], u, st, g.frame)
-		a = g.primary.speed(z[:g.nz], u, st) - g.frame
-		b = (g.primary.voltage(z[:g.nz], u) - abs(inner)) / g.vBase
-		return a, b
-	}
-	// speed per ampere tells whether the frequency droops at all
-	scale := func(i complex128) float64 {
-		a0, _ := residual(i)
-		a1, _ := residual(i + complex(g.iBase, 0))
-		a2, _ := residual(i + complex(0, g.iBase))
-		return math.Abs(a1-a0) + math.Abs(a2-a0)
-	}(start)
-	full := residual
-	if scale == 0 {
-		full = func(i complex128) (a, b float64) {
-			_, b = residual(i)
-			s := 1.5 * (vBus + zg*i) * conj(i)
-			return (real(s) - u.p) / g.par.Rating, b
-		}
-		scale = 1
+		return dw / span, dv / g.vBase
 	}
 	i := start
 	h := 1e-6 * g.iBase // difference step: the equations are smooth
 	for range 30 {
-		a, b := full(i)
-		if math.Abs(a)/scale+math.Abs(b) < 1e-12 {
-			return i
-		}
-		ad, bd := full(i + complex(h, 0))
-		aq, bq := full(i + complex(0, h))
+		a, b := residual(i)
+		ad, bd := residual(i + complex(h, 0))
+		aq, bq := residual(i + complex(0, h))
 		ad, bd, aq, bq = (ad-a)/h, (bd-b)/h, (aq-a)/h, (bq-b)/h
 		det := ad*bq - aq*bd
-		step := complex((-a*bq+b*aq)/det, (-b*ad+a*bd)/det)
-		m := abs(step)
-		if math.IsNaN(m) || math.IsInf(m, 0) {
+		step := complex((b*aq-a*bq)/det, (a*bd-b*ad)/det)
+		size := abs(step)
+		if math.IsNaN(size) || math.IsInf(size, 0) {
 			return start
 		}
-		if m > 0.5*g.iBase { // damped: half the rated current at most
-			step = times(0.5*g.iBase/m, step)
-		}
-		i += step
-		if m < 1e-9*g.iBase {
+		// Half the rated current at most: the equations are quadratic, and from
+		// afar a full step may end beyond the angle of largest power.
+		i += times(min(1, 0.5*g.iBase/max(size, 1e-300)), step)
+		if size < 1e-9*g.iBase {
 			return i
 		}
 	}
 	return start
+}
+
+// mismatch returns by how much frequency (rad/s) and voltage (V) of a steady
+// state with current i in the network frame are off, and the active power at the
+// capacitor.
+func (g *GridForming) mismatch(u orders, vBus, i complex128) (dw, dv, p float64) {
+	var z [maxPrimary]float64
+	vC := vBus + g.gridImpedance()*i
+	inner := vC + complex(g.par.Rv, g.par.Xv)*i // V e^{j delta}
+	e := complex(1, 0)
+	if m := abs(inner); m > 0 {
+		e = times(1/m, inner)
+	}
+	s := 1.5 * vC * conj(i)
+	in := stimulus{p: real(s), q: imag(s), i: conj(e) * i}
+	g.primary.settle(z[:g.nz], u, in, g.frame)
+	return g.primary.speed(z[:g.nz], u, in) - g.frame, g.primary.voltage(z[:g.nz], u) - abs(inner), in.p
 }

@@ -206,6 +206,28 @@ func TestGuessAtSteadyState(t *testing.T) {
 	}
 }
 
+// At a constant frequency P stays P*, which Guess takes in place of the speed.
+func TestGuessIsochronous(t *testing.T) {
+	plate := formingPlate()
+	plate.FrequencyDroop, plate.P, plate.Q = new(0.0), 4e3, 1e3
+	g := plateForming(t, plate)
+	g.SetFrame(RadPerSecond(50))
+	v := []float64{322, -20}
+	x, flow, rate := make([]float64, 13), make([]float64, 2), make([]float64, 13)
+	g.Guess(x, 0, v)
+	if err := g.Eval(flow, rate, 0, v, x); err != nil {
+		t.Fatal(err)
+	}
+	for i, u := range g.Describe().Unknowns {
+		if !(math.Abs(rate[i]) < 1e-6*u.Base) {
+			t.Errorf("rate of %s = %g at the guess", u.Name, rate[i])
+		}
+	}
+	if math.Abs(x[1]-plate.P) > 1e-3 {
+		t.Errorf("P = %.6f, want %.6f W", x[1], plate.P)
+	}
+}
+
 // A guess stays finite and within the rating whatever the voltage.
 func TestGuessWithoutVoltage(t *testing.T) {
 	for _, b := range []inverter{plateForming(t, formingPlate()), plateFollowing(t, followingPlate())} {
