@@ -43,11 +43,13 @@ type GridFollowingParams struct {
 // Validate returns all faults joined, or nil.
 func (p GridFollowingParams) Validate() error {
 	f := &faults{device: "grid-following inverter"}
-	f.positive("Rating", p.Rating, "VA")
+	rated := f.positive("Rating", p.Rating, "VA")
 	f.positive("Omega0", p.Omega0, "rad/s")
 	f.positive("V0", p.V0, "V")
-	f.within("P", p.P, -setpointReach*p.Rating, setpointReach*p.Rating, "W")
-	f.within("Q", p.Q, -setpointReach*p.Rating, setpointReach*p.Rating, "var")
+	if rated {
+		f.within("P", p.P, -setpointReach*p.Rating, setpointReach*p.Rating, "W")
+		f.within("Q", p.Q, -setpointReach*p.Rating, setpointReach*p.Rating, "var")
+	}
 	f.positive("Kp", p.Kp, "1/s")
 	f.notNegative("Ki", p.Ki, "1/s^2")
 	checkLimit(f, "SpeedLimit", p.SpeedLimit, "rad/s")

@@ -41,11 +41,13 @@ type GridFormingParams struct {
 // Validate returns all faults joined, or nil.
 func (p GridFormingParams) Validate() error {
 	f := &faults{device: "grid-forming inverter"}
-	f.positive("Rating", p.Rating, "VA")
+	rated := f.positive("Rating", p.Rating, "VA")
 	f.positive("Omega0", p.Omega0, "rad/s")
 	f.positive("V0", p.V0, "V")
-	f.within("P", p.P, -setpointReach*p.Rating, setpointReach*p.Rating, "W")
-	f.within("Q", p.Q, -setpointReach*p.Rating, setpointReach*p.Rating, "var")
+	if rated {
+		f.within("P", p.P, -setpointReach*p.Rating, setpointReach*p.Rating, "W")
+		f.within("Q", p.Q, -setpointReach*p.Rating, setpointReach*p.Rating, "var")
+	}
 	if p.Primary == nil {
 		f.add("Primary is missing: want a Droop")
 	} else {

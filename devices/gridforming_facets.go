@@ -82,7 +82,7 @@ func (g *GridForming) Channels() []facet.Channel {
 	}
 }
 
-// Index of the channel "i_converter" of both kinds of inverter's lists.
+// Indices of channels.
 const (
 	formingTerminalCurrent  = 2
 	formingConverterCurrent = 7
@@ -230,7 +230,7 @@ func (g *GridForming) Guess(x []float64, t float64, v []float64) {
 		z    = x[1 : 1+g.nz]
 	)
 	if !(abs(vBus) > 0.05*g.vBase) { // no voltage to go by (5 %: arbitrary)
-		vBus = complex(u.v, 0)
+		vBus = complex(max(u.v, 0.05*g.vBase), 0)
 	}
 	iNet := g.steadyCurrent(u, vBus)
 	if m := abs(iNet); m > g.iBase {

@@ -71,6 +71,29 @@ func TestLimitSteadyState(t *testing.T) {
 	}
 }
 
+// What the comment of GridFormingNameplate says of the limit and the angle.
+func TestLimitAngle(t *testing.T) {
+	for _, c := range []struct {
+		scr    float64
+		stable bool
+	}{{20, true}, {2, false}} {
+		g := plateForming(t, formingPlate())
+		r := newRig(g).scr(plateVolts, plateVA, c.scr, 3)
+		r.grid *= 0.5
+		if err := r.steady(); err != nil {
+			t.Fatal(err)
+		}
+		ch := make([]float64, len(g.Channels()))
+		g.Measure(ch, 0, r.v, r.x[0])
+		if !(ch[8] > 0.01) {
+			t.Errorf("SCR %g: limiting = %g: the case doesn't reach the limit", c.scr, ch[8])
+		}
+		if e := r.eigenvalues()[0]; (real(e) < 0) != c.stable {
+			t.Errorf("SCR %g: rightmost eigenvalue %.3f 1/s, stable: want %v", c.scr, e, c.stable)
+		}
+	}
+}
+
 // After a deep dip the voltage loop of an inverter with anti-windup is where it
 // was at once; without, phi has integrated the error of the dip.
 func TestAntiWindup(t *testing.T) {

@@ -155,6 +155,35 @@ func TestGridFollowingDefaultsStable(t *testing.T) {
 	}
 }
 
+// Islands of unlike inverters: forming ones of 2 kVA to 200 kVA beside one of
+// 10 kVA share in proportion to the rating; a follower feeds a forming one.
+func TestMixedIslandsStable(t *testing.T) {
+	for _, va := range []float64{2e3, 50e3, 200e3} {
+		plate := formingPlate()
+		plate.Power = va
+		p := plateForming(t, plate).Params()
+		p.Filter.Rg += 0.32 * 0.02 // 20 m of cable
+		p.Filter.Lg += 0.08 / RadPerSecond(50) * 0.02
+		r := newRig(plateForming(t, formingPlate()), mustForming(t, p))
+		r.load = 0.5 / BaseOhms(plateVolts, plateVA)
+		stable(t, r, 5, fmt.Sprintf("%g VA beside %g VA", va, plateVA))
+		if got, want := r.x[1][1]/r.x[0][1], va/plateVA; math.Abs(got/want-1) > 1e-9 {
+			t.Errorf("%g VA beside %g VA: powers in the ratio %.9g, want %.9g", va, plateVA, got, want)
+		}
+	}
+	for _, p := range []float64{0.2, 1} {
+		for _, load := range []float64{0.1, 0.5, 1} {
+			for _, l := range []bool{false, true} {
+				plate := followingPlate()
+				plate.P, plate.LFilter = p*plateVA, l
+				r := newRig(plateForming(t, formingPlate()), plateFollowing(t, plate))
+				r.load = load / BaseOhms(plateVolts, plateVA)
+				stable(t, r, 5, fmt.Sprintf("follower at %g, L filter %v, load %g", p, l, load))
+			}
+		}
+	}
+}
+
 func TestNameplateFaults(t *testing.T) {
 	_, err := GridFormingNameplate{Power: -1, Voltage: 400, Frequency: math.NaN(), Psi: new(100.0)}.Params()
 	wantFaults(t, err, "Power = -1 VA", "Frequency = NaN Hz", "Psi = 100 degrees: want 0 to 90")
