@@ -186,14 +186,14 @@ func TestMixedIslandsStable(t *testing.T) {
 
 func TestNameplateFaults(t *testing.T) {
 	_, err := GridFormingNameplate{Power: -1, Voltage: 400, Frequency: math.NaN(), Psi: new(100.0)}.Params()
-	wantFaults(t, err, "Power = -1 VA", "Frequency = NaN Hz", "Psi = 100 degrees: want 0 to 90")
+	wantInverterFaults(t, err, "Power = -1 VA", "Frequency = NaN Hz", "Psi = 100 degrees: want 0 to 90")
 	_, err = GridFollowingNameplate{Power: 1e3, Voltage: 0, Frequency: 50, PLLDamping: -2, LFilter: true,
 		Filter: FilterNameplate{CfPU: 0.1}}.Params()
-	wantFaults(t, err, "Voltage = 0 V", "PLLDamping = -2", "an L filter has neither")
+	wantInverterFaults(t, err, "Voltage = 0 V", "PLLDamping = -2", "an L filter has neither")
 }
 
-// wantFaults checks that err names all of the given faults.
-func wantFaults(t *testing.T, err error, parts ...string) {
+// wantInverterFaults checks that err names all of the given faults.
+func wantInverterFaults(t *testing.T, err error, parts ...string) {
 	t.Helper()
 	if err == nil {
 		t.Fatal("no error")
@@ -209,16 +209,16 @@ func TestParamFaults(t *testing.T) {
 	p := testForming()
 	p.Kpc, p.IMax, p.Primary, p.Filter.Cf = 0, -3, Droop{M: 1e-4, OmegaC: 0}, math.Inf(1)
 	_, err := NewGridForming(p)
-	wantFaults(t, err, "Kpc = 0 V/A", "IMax = -3 A", "Droop.OmegaC = 0 rad/s", "Filter.Cf = +Inf F")
+	wantInverterFaults(t, err, "Kpc = 0 V/A", "IMax = -3 A", "Droop.OmegaC = 0 rad/s", "Filter.Cf = +Inf F")
 	p.Primary = nil
 	_, err = NewGridForming(p)
-	wantFaults(t, err, "Primary is missing")
+	wantInverterFaults(t, err, "Primary is missing")
 
 	for _, w := range []float64{0, math.Inf(1)} {
 		q := testFollowing()
 		q.OmegaV, q.Kp = w, 0
 		_, err = NewGridFollowing(q)
-		wantFaults(t, err, "OmegaV", "two solutions or none", "Kp = 0")
+		wantInverterFaults(t, err, "OmegaV", "two solutions or none", "Kp = 0")
 	}
 	g := mustForming(t, testForming())
 	if _, err := g.WithDetail("phase"); err == nil {
