@@ -112,10 +112,12 @@ type SparseLU struct {
 	pivoted  bool    // the sequence above is usable
 	factored bool    // so are the values
 	growth   float64 // largest |u| / column norm after the last search, at least 1
+	worst    float64 // smallest ratio of a pivot to the magnitudes it is the sum of, in the last search
+	worstAt  int     // its position, if worst < 1
 	norm1    float64 // of the matrix factored last
 
 	x     []float64 // len n: work, zero between calls of eliminate
-	y     []float64 // len n: work of Solve
+	y     []float64 // len n: work of Solve and magnitude
 	est   []float64 // len n: work of Condition
 	sign  []float64 // len n: work of Condition
 	find  *luSearch
@@ -128,7 +130,7 @@ var _ LinearSolver = (*SparseLU)(nil)
 // pattern must not change any more. It doesn't look at the values.
 //
 // The error is a *SingularError if no choice of values makes a regular; its
-// column is the first that finds no row of its own. Other errors name an
+// column is one of a group that has entries in too few rows. Other errors name an
 // invalid option, a matrix that isn't square, or inconsistent arrays.
 func NewSparseLU(a *CSC, o LUOptions) (*SparseLU, error) {
 	if o.PivotThreshold == 0 {
@@ -257,14 +259,15 @@ func luOrderBlocks(a *CSC, row, order []int32, start []int) {
 
 // Factor factors the matrix with its present values. The error is a
 // *SingularError that names the column of the matrix: one whose sum of
-// magnitudes isn't finite, or one for which every pivot that is left is no larger than
-// the rounding errors in it.
+// magnitudes isn't finite, one without any pivot left, or, where the scaled
+// matrix has a condition number above 2^52 and a pivot that is little more than
+// the rounding errors in it, the column of that pivot.
 //
 // After an error, Solve must not be called until Factor has succeeded.
 func (f *SparseLU) Factor() error {
 	f.factored = false
 	if f.pivoted {
-		if k, _ := f.eliminate(); k < 0 {
+		if k, _ := f.eliminate(false); k < 0 {
 			f.stats.Refactorisations++
 			f.factored = true
 			return nil
@@ -283,9 +286,14 @@ func (f *SparseLU) Factor() error {
 	}
 	// The search leaves the structure only; the values come from the same
 	// arithmetic that a refactorisation does, so that both agree in every bit.
-	if k, pivot := f.eliminate(); k >= 0 {
+	if k, pivot := f.eliminate(true); k >= 0 {
 		// Hardly possible: sums in another order fail where the search passed.
 		return &SingularError{Column: int(f.colOf[k]), Pivot: pivot}
+	}
+	if f.worst < luLoss {
+		if k := f.worstAt; f.blockCondition(k) > luHopeless {
+			return &SingularError{Column: int(f.colOf[k]), Pivot: 1 / f.inv[k]}
+		}
 	}
 	f.pivoted, f.factored = true, true
 	return nil

@@ -3,8 +3,8 @@ package solvers
 // luMatch finds a row for every column of the square matrix a such that the
 // entry at (row, column) is part of the pattern and no row is used twice: a
 // permutation of the rows without zeros on the diagonal. Entries on the
-// diagonal of a are preferred. It returns the row of each column, or the first
-// column that no longer found one.
+// diagonal of a are taken first. It returns the row of each column, or a
+// column for which there is none.
 //
 // Method: augmenting paths by depth-first search with one step of look-ahead.
 // Source: I. S. Duff, "On algorithms for obtaining a maximum transversal", ACM

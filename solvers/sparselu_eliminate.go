@@ -4,13 +4,15 @@ import "math"
 
 // eliminate computes the factors of the present values on the kept pivot
 // sequence. It returns the position and the value of the first pivot that
-// isn't good enough, with k = -1 if there is none. It allocates nothing.
+// isn't good enough, with k = -1 if there is none. If the sequence comes from
+// a search with the same values, a loss of digits in a pivot counts as known.
+// It allocates nothing.
 //
 // Left-looking: column k of L and U comes from column k of the matrix by one
 // update with every column c of L for which u(c,k) is part of the structure.
 // Neighbouring columns of like structure are applied four or two at a time,
 // which reads and writes the column k less often.
-func (f *SparseLU) eliminate() (k int, pivot float64) {
+func (f *SparseLU) eliminate(searched bool) (k int, pivot float64) {
 	ax, x := f.a.X, f.x
 	lp, li, lx, run := f.lp, f.li, f.lx, f.run
 	lLimit := f.growthLimit * (1 + 0x1p-20) // the search's own L passes
@@ -58,7 +60,18 @@ func (f *SparseLU) eliminate() (k int, pivot float64) {
 				u3 := xc[3] - l0[2]*u0 - l1[1]*u1 - l2[0]*u2
 				xc[0], xc[1], xc[2], xc[3] = 0, 0, 0, 0
 				ux[0], ux[1], ux[2], ux[3] = u0, u1, u2, u3
-				largest = max(largest, max(math.Abs(u0), math.Abs(u1)), max(math.Abs(u2), math.Abs(u3)))
+				if m := math.Abs(u0); m > largest {
+					largest = m
+				}
+				if m := math.Abs(u1); m > largest {
+					largest = m
+				}
+				if m := math.Abs(u2); m > largest {
+					largest = m
+				}
+				if m := math.Abs(u3); m > largest {
+					largest = m
+				}
 				l0, l1, l2, l3 = l0[3:][:len(s)], l1[2:][:len(s)], l2[1:][:len(s)], l3[:len(s)]
 				for p, i := range s {
 					x[i] -= (l0[p]*u0 + l1[p]*u1) + (l2[p]*u2 + l3[p]*u3)
@@ -71,7 +84,12 @@ func (f *SparseLU) eliminate() (k int, pivot float64) {
 				u1 := x[c+1] - l0[0]*u0
 				x[c], x[c+1] = 0, 0
 				ux[0], ux[1] = u0, u1
-				largest = max(largest, math.Abs(u0), math.Abs(u1))
+				if m := math.Abs(u0); m > largest {
+					largest = m
+				}
+				if m := math.Abs(u1); m > largest {
+					largest = m
+				}
 				l0, l1 = l0[1:][:len(s)], l1[:len(s)]
 				for p, i := range s {
 					x[i] -= l0[p]*u0 + l1[p]*u1
@@ -82,7 +100,9 @@ func (f *SparseLU) eliminate() (k int, pivot float64) {
 				u0 := x[c]
 				x[c] = 0
 				ux[0] = u0
-				largest = max(largest, math.Abs(u0))
+				if m := math.Abs(u0); m > largest {
+					largest = m
+				}
 				l0 = l0[:len(s)]
 				for p, i := range s {
 					x[i] -= l0[p] * u0
@@ -107,8 +127,8 @@ func (f *SparseLU) eliminate() (k int, pivot float64) {
 				good = false
 			}
 		}
-		if good && math.Abs(pivot) < luSuspect*max(norm, largest) {
-			good = math.Abs(pivot) > luNoise/2*f.magnitude(k)
+		if good && !searched && math.Abs(pivot) < luSuspect*max(norm, largest) {
+			good = math.Abs(pivot) > luLoss*f.magnitude(k)
 		}
 		if !good {
 			return k, pivot
@@ -117,22 +137,25 @@ func (f *SparseLU) eliminate() (k int, pivot float64) {
 	return -1, 0
 }
 
-// magnitude returns |a| + sum |l| |u| for the pivot of column k: by rounding,
-// the pivot is known to a few roundoffs of that.
+// magnitude returns the sum of the magnitudes that add up to the pivot of
+// column k: w = |A(:,k)| + |L| w. Rounding makes the pivot uncertain by a few
+// roundoffs of that.
 func (f *SparseLU) magnitude(k int) float64 {
-	sum := 0.0
+	w, ui := f.y, f.ui[f.up[k]:f.up[k+1]]
+	for _, c := range ui {
+		w[c] = 0
+	}
+	for _, i := range f.li[f.lp[k]:f.lp[k+1]] {
+		w[i] = 0
+	}
+	w[k] = 0
 	for p := f.ap[k]; p < f.ap[k+1]; p++ {
-		if int(f.aRow[p]) == k {
-			sum += math.Abs(f.a.X[f.aFrom[p]] * f.aMul[p])
-		}
+		w[f.aRow[p]] = math.Abs(f.a.X[f.aFrom[p]] * f.aMul[p])
 	}
-	for q := f.up[k]; q < f.up[k+1]; q++ {
-		c := f.ui[q]
+	for _, c := range ui {
 		for p := f.lp[c]; p < f.lp[c+1]; p++ {
-			if int(f.li[p]) == k {
-				sum += math.Abs(f.lx[p] * f.ux[q])
-			}
+			w[f.li[p]] += math.Abs(f.lx[p]) * w[c]
 		}
 	}
-	return sum
+	return w[k]
 }

@@ -2,14 +2,22 @@ package solvers
 
 import "math"
 
-// luNoise times the magnitudes that were summed up bounds the rounding error
-// in a pivot: a few units of roundoff (2^-53), common practice, no source. A
-// pivot below can't be told from zero.
-const luNoise = 8 * 0x1p-53
-
-// luSuspect is the ratio of a pivot to its column below which the rounding
-// errors in it are looked at.
+// luSuspect is the ratio of a pivot to its column below which the digits lost
+// in it are counted.
 const luSuspect = 0x1p-24
+
+// luLoss is the ratio of a pivot to the magnitudes that it is the sum of below
+// which so many digits have cancelled (all but ten bits) that the matrix may be
+// singular; below luNoise nothing but rounding errors is left. Both common
+// practice, no source.
+const (
+	luLoss  = 0x1p-42
+	luNoise = 0x1p-50
+)
+
+// luHopeless is the condition number of the scaled diagonal block from which
+// on a matrix with such a pivot counts as singular to working precision.
+const luHopeless = 0x1p52
 
 // luTiny is a bound for pivots whose reciprocal may overflow.
 const luTiny = 0x1p-1000
@@ -37,7 +45,7 @@ type luSearch struct {
 	ui     []int32   // position of the row, in an order fit for elimination
 
 	x      []float64 // len n, by place: the present column, zero between columns
-	u      []float64 // len n: its part in U, in the order of ui
+	w      []float64 // len n, by place: work of magnitude
 	mark   []int32   // len n, by place: k+1: in the pattern of column k
 	stack  []int32   // len n: search path, positions
 	resume []int     // len n: where to go on in each of its columns
@@ -56,7 +64,7 @@ func newLUSearch(f *SparseLU) *luSearch {
 		rowMax: make([]int32, n), colMax: make([]int32, n),
 		pivotOf: make([]int32, n), diagonal: make([]int32, n), wants: make([]int32, n),
 		lp: make([]int, n+1), pruned: make([]int32, n), up: make([]int, n+1),
-		x: make([]float64, n), u: make([]float64, n), mark: make([]int32, n),
+		x: make([]float64, n), w: make([]float64, n), mark: make([]int32, n),
 		stack: make([]int32, n), resume: make([]int, n), topo: make([]int32, n),
 		below: make([]int32, 0, n), count: make([]int, n+1),
 	}
@@ -91,7 +99,7 @@ func (f *SparseLU) search() error {
 		s.diagonal[k], s.wants[k] = k, k
 	}
 	x := s.x
-	f.growth = 1
+	f.growth, f.worst = 1, 1
 
 	for k := range n {
 		j := f.colOf[k]
@@ -108,11 +116,10 @@ func (f *SparseLU) search() error {
 
 		// x = L\x
 		largest := norm // in the column of U and the input
-		for q, c := range s.topo[top:] {
+		for _, c := range s.topo[top:] {
 			i := s.diagonal[c]
 			u := x[i]
 			x[i] = 0
-			s.u[q] = u
 			if m := math.Abs(u); m > largest {
 				largest = m
 			}
@@ -137,11 +144,17 @@ func (f *SparseLU) search() error {
 		if s.mark[d] == int32(k)+1 && math.Abs(x[d]) >= f.threshold*best {
 			at = d
 		}
-		if best < luTiny || best < luSuspect*largest && best <= luNoise*s.magnitude(f, k, top, at) {
+		if best < luTiny {
 			for _, i := range s.below {
 				x[i] = 0
 			}
 			return &SingularError{Column: int(j), Pivot: max(best, 0)}
+		}
+		if math.Abs(x[at]) < luSuspect*largest && f.worst > luNoise {
+			// Once a pivot is noise, all that follows is its consequence.
+			if r := math.Abs(x[at]) / s.magnitude(f, k, top, at); r < f.worst {
+				f.worst, f.worstAt = r, k
+			}
 		}
 		if norm > 0 && largest > f.growth*norm {
 			f.growth = largest / norm
@@ -253,25 +266,30 @@ func (s *luSearch) prune(k int, at int32) {
 	}
 }
 
-// magnitude returns |a| + sum |l| |u| for place at of column k, whose entries
-// of U are those from top on: by rounding, the pivot is known to a few
-// roundoffs of that.
+// magnitude returns the sum of the magnitudes that add up to place at of column
+// k, whose entries of U are those from top on: w = |A(:,k)| + |L| w. Rounding
+// makes the value uncertain by a few roundoffs of that.
 func (s *luSearch) magnitude(f *SparseLU, k, top int, at int32) float64 {
-	a, sum := f.a, 0.0
+	a, w := f.a, s.w
+	for _, c := range s.topo[top:] {
+		w[s.diagonal[c]] = 0
+	}
+	for _, i := range s.below {
+		w[i] = 0
+	}
 	j := f.colOf[k]
 	for p := a.P[j]; p < a.P[j+1]; p++ {
-		if s.place[a.I[p]] == at {
-			sum += math.Abs(math.Ldexp(a.X[p], int(s.rowExp[at]+s.colExp[k])))
+		if i := s.place[a.I[p]]; i >= s.first[k] {
+			w[i] = math.Abs(math.Ldexp(a.X[p], int(s.rowExp[i]+s.colExp[k])))
 		}
 	}
-	for q, c := range s.topo[top:] {
+	for _, c := range s.topo[top:] {
+		wc := w[s.diagonal[c]]
 		for p := s.lp[c]; p < s.lp[c+1]; p++ {
-			if s.li[p] == at {
-				sum += math.Abs(s.lx[p] * s.u[q])
-			}
+			w[s.li[p]] += math.Abs(s.lx[p]) * wc
 		}
 	}
-	return sum
+	return w[at]
 }
 
 // finish writes the pivot sequence and the structure of the factors into f.

@@ -33,17 +33,23 @@ func (f *SparseLU) Solve(b []float64) {
 
 // solveBlock solves with the diagonal block of the positions k0..k1-1 in y.
 func (f *SparseLU) solveBlock(k0, k1 int) {
-	y := f.y
-	if k1 == k0+1 {
-		y[k0] *= f.rowScale[k0] * f.inv[k0] * f.colScale[k0]
-		return
+	y := f.y[k0:k1]
+	r, c := f.rowScale[k0:k1], f.colScale[k0:k1]
+	r, c = r[:len(y)], c[:len(y)]
+	for k := range y {
+		y[k] *= r[k]
 	}
-	lp, li, lx := f.lp, f.li, f.lx
+	f.solveLU(k0, k1)
+	for k := range y {
+		y[k] *= c[k]
+	}
+}
 
-	// y = L\(R y)
-	for k := k0; k < k1; k++ {
-		y[k] *= f.rowScale[k]
-	}
+// solveLU overwrites the positions k0..k1-1 of y, a diagonal block, with
+// U\(L\y).
+func (f *SparseLU) solveLU(k0, k1 int) {
+	y := f.y
+	lp, li, lx := f.lp, f.li, f.lx
 	for k := k0; k < k1; k++ {
 		s, l := li[lp[k]:lp[k+1]], lx[lp[k]:lp[k+1]]
 		l = l[:len(s)]
@@ -52,16 +58,39 @@ func (f *SparseLU) solveBlock(k0, k1 int) {
 			y[i] -= l[p] * yk
 		}
 	}
-
-	// y = C (U\y)
+	up, ui, ux, inv := f.up, f.ui, f.ux, f.inv
 	for k := k1 - 1; k >= k0; k-- {
-		s, u := f.ui[f.up[k]:f.up[k+1]], f.ux[f.up[k]:f.up[k+1]]
+		s, u := ui[up[k]:up[k+1]], ux[up[k]:up[k+1]]
 		u = u[:len(s)]
-		yk := y[k] * f.inv[k]
-		y[k] = yk * f.colScale[k]
+		yk := y[k] * inv[k]
+		y[k] = yk
 		for p, i := range s {
 			y[i] -= u[p] * yk
 		}
+	}
+}
+
+// solveLUTranspose overwrites the positions k0..k1-1 of y, a diagonal block,
+// with L'\(U'\y).
+func (f *SparseLU) solveLUTranspose(k0, k1 int) {
+	y := f.y
+	for k := k0; k < k1; k++ {
+		s, u := f.ui[f.up[k]:f.up[k+1]], f.ux[f.up[k]:f.up[k+1]]
+		u = u[:len(s)]
+		yk := y[k]
+		for p, i := range s {
+			yk -= u[p] * y[i]
+		}
+		y[k] = yk * f.inv[k]
+	}
+	for k := k1 - 1; k >= k0; k-- {
+		s, l := f.li[f.lp[k]:f.lp[k+1]], f.lx[f.lp[k]:f.lp[k+1]]
+		l = l[:len(s)]
+		yk := y[k]
+		for p, i := range s {
+			yk -= l[p] * y[i]
+		}
+		y[k] = yk
 	}
 }
 
@@ -77,31 +106,15 @@ func (f *SparseLU) SolveTranspose(b []float64) {
 	for blk := range len(f.block) - 1 {
 		k0, k1 := f.block[blk], f.block[blk+1]
 
-		// y = U'\(C (y - above' x))
+		// The unknowns of earlier blocks go to the right-hand side.
 		for k := k0; k < k1; k++ {
 			yk := y[k]
 			for p := f.op[k]; p < f.op[k+1]; p++ {
 				yk -= f.ox[p] * y[f.oRow[p]]
 			}
-			yk *= f.colScale[k]
-			s, u := f.ui[f.up[k]:f.up[k+1]], f.ux[f.up[k]:f.up[k+1]]
-			u = u[:len(s)]
-			for p, i := range s {
-				yk -= u[p] * y[i]
-			}
-			y[k] = yk * f.inv[k]
+			y[k] = yk * f.colScale[k]
 		}
-
-		// y = R (L'\y)
-		for k := k1 - 1; k >= k0; k-- {
-			s, l := f.li[f.lp[k]:f.lp[k+1]], f.lx[f.lp[k]:f.lp[k+1]]
-			l = l[:len(s)]
-			yk := y[k]
-			for p, i := range s {
-				yk -= l[p] * y[i]
-			}
-			y[k] = yk
-		}
+		f.solveLUTranspose(k0, k1)
 		for k := k0; k < k1; k++ {
 			y[k] *= f.rowScale[k]
 		}
