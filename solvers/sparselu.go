@@ -99,27 +99,33 @@ type SparseLU struct {
 	oRow  []int32   // len op[n]: their position
 	ox    []float64 // len op[n]: value, not scaled
 
-	lp  []int     // len n+1: L without its unit diagonal, by column
-	li  []int32   // len lp[n]: position of the row, ascending
-	lx  []float64 // len lp[n]
-	run []int32   // len n: how many of the next columns continue this one's structure
+	lp []int     // len n+1: L without its unit diagonal, by column
+	li []int32   // len lp[n]: position of the row, ascending
+	lx []float64 // len lp[n]
 
 	up  []int     // len n+1: U without its diagonal, by column
 	ui  []int32   // len up[n]: position of the row, ascending
 	ux  []float64 // len up[n]
 	inv []float64 // len n: reciprocals of the diagonal of U
 
+	tall []bool // len n: L(:,k) has the rows of L(:,k+1), and k+1
+	wide []bool // len n: U(:,k+1) has the rows of U(:,k), and k
+	twin []bool // len n: columns k and k+1 are computed together
+
 	pivoted  bool    // the sequence above is usable
 	factored bool    // so are the values
 	growth   float64 // largest |u| / column norm after the last search, at least 1
+	lLimit   float64 // of |l| in a refactorisation
+	uLimit   float64 // of |u| / column norm in a refactorisation
 	worst    float64 // smallest ratio of a pivot to the magnitudes it is the sum of, in the last search
 	worstAt  int     // its position, if worst < 1
 	norm1    float64 // of the matrix factored last
 
-	x     []float64 // len n: work, zero between calls of eliminate
-	y     []float64 // len n: work of Solve and magnitude
-	est   []float64 // len n: work of Condition
-	sign  []float64 // len n: work of Condition
+	x     []float64    // len n: work, zero between calls of eliminateOne
+	xx    [][2]float64 // len n: work, zero between calls of eliminateTwo
+	y     []float64    // len n: work of Solve and magnitude
+	est   []float64    // len n: work of Condition
+	sign  []float64    // len n: work of Condition
 	find  *luSearch
 	stats LUStats
 }
@@ -169,6 +175,7 @@ func NewSparseLU(a *CSC, o LUOptions) (*SparseLU, error) {
 		growthLimit: o.GrowthLimit,
 		facing:      make([]int32, n),
 		x:           make([]float64, n),
+		xx:          make([][2]float64, n),
 		y:           make([]float64, n),
 		est:         make([]float64, n),
 		sign:        make([]float64, n),

@@ -338,19 +338,22 @@ func (s *luSearch) finish(f *SparseLU) {
 	f.lx = luResize(f.lx, len(f.li))
 	f.ux = luResize(f.ux, len(f.ui))
 
-	// Column k+1 continues column k if L(:,k) = {k+1} and L(:,k+1).
-	f.run = luResize(f.run, n)
-	for k := n - 1; k >= 0; k-- {
-		f.run[k] = 0
-		if k == n-1 {
+	// Neighbours of like structure
+	f.tall, f.wide, f.twin = luResize(f.tall, n), luResize(f.wide, n), luResize(f.twin, n)
+	for k := range n {
+		f.tall[k], f.wide[k], f.twin[k] = false, false, false
+		if k == n-1 || s.first[k] != s.first[k+1] {
 			continue
 		}
 		here, next := f.li[f.lp[k]:f.lp[k+1]], f.li[f.lp[k+1]:f.lp[k+2]]
-		if len(here) == len(next)+1 && here[0] == int32(k)+1 && luEqual(here[1:], next) {
-			f.run[k] = f.run[k+1] + 1
-		}
+		f.tall[k] = len(here) == len(next)+1 && here[0] == int32(k)+1 && luEqual(here[1:], next)
+		here, next = f.ui[f.up[k]:f.up[k+1]], f.ui[f.up[k+1]:f.up[k+2]]
+		f.wide[k] = len(next) == len(here)+1 && next[len(here)] == int32(k) && luEqual(here, next)
+		f.twin[k] = f.tall[k] && f.wide[k] && (k == 0 || !f.twin[k-1])
 	}
 
+	f.lLimit = f.growthLimit * (1 + 0x1p-20) // the search's own L passes
+	f.uLimit = f.growthLimit * f.growth
 	flops := len(f.li)
 	for _, c := range f.ui {
 		flops += 2 * (f.lp[c+1] - f.lp[c])

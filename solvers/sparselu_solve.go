@@ -46,26 +46,50 @@ func (f *SparseLU) solveBlock(k0, k1 int) {
 }
 
 // solveLU overwrites the positions k0..k1-1 of y, a diagonal block, with
-// U\(L\y).
+// U\(L\y). Neighbouring columns of like structure are applied together.
 func (f *SparseLU) solveLU(k0, k1 int) {
 	y := f.y
-	lp, li, lx := f.lp, f.li, f.lx
+	lp, li, lx, tall := f.lp, f.li, f.lx, f.tall
 	for k := k0; k < k1; k++ {
-		s, l := li[lp[k]:lp[k+1]], lx[lp[k]:lp[k+1]]
-		l = l[:len(s)]
-		yk := y[k]
+		y0 := y[k]
+		if !tall[k] {
+			s, l0 := li[lp[k]:lp[k+1]], lx[lp[k]:lp[k+1]]
+			l0 = l0[:len(s)]
+			for p, i := range s {
+				y[i] -= l0[p] * y0
+			}
+			continue
+		}
+		s := li[lp[k+1]:lp[k+2]]
+		l0, l1 := lx[lp[k]:lp[k+1]], lx[lp[k+1]:lp[k+2]]
+		k++
+		y1 := y[k] - l0[0]*y0
+		y[k] = y1
+		l0, l1 = l0[1:][:len(s)], l1[:len(s)]
 		for p, i := range s {
-			y[i] -= l[p] * yk
+			y[i] -= l0[p]*y0 + l1[p]*y1
 		}
 	}
-	up, ui, ux, inv := f.up, f.ui, f.ux, f.inv
+	up, ui, ux, inv, wide := f.up, f.ui, f.ux, f.inv, f.wide
 	for k := k1 - 1; k >= k0; k-- {
-		s, u := ui[up[k]:up[k+1]], ux[up[k]:up[k+1]]
-		u = u[:len(s)]
-		yk := y[k] * inv[k]
-		y[k] = yk
+		y1 := y[k] * inv[k]
+		y[k] = y1
+		if k == k0 || !wide[k-1] {
+			s, u1 := ui[up[k]:up[k+1]], ux[up[k]:up[k+1]]
+			u1 = u1[:len(s)]
+			for p, i := range s {
+				y[i] -= u1[p] * y1
+			}
+			continue
+		}
+		s := ui[up[k-1]:up[k]]
+		u0, u1 := ux[up[k-1]:up[k]], ux[up[k]:up[k+1]]
+		k--
+		y0 := (y[k] - u1[len(s)]*y1) * inv[k]
+		y[k] = y0
+		u0, u1 = u0[:len(s)], u1[:len(s)]
 		for p, i := range s {
-			y[i] -= u[p] * yk
+			y[i] -= u0[p]*y0 + u1[p]*y1
 		}
 	}
 }
