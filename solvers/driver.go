@@ -485,6 +485,28 @@ func (c *Chatter) Add(t float64) bool {
 // Events is the number of events that count as chatter.
 func (c *Chatter) Events() int { return len(c.times) }
 
+// AppendBinary saves the times noted.
+func (c *Chatter) AppendBinary(b []byte) ([]byte, error) {
+	w := stateWriter{b}
+	w.floats(float64(c.n))
+	w.vector(c.times[:])
+	return w.b, nil
+}
+
+// UnmarshalBinary restores the times noted.
+func (c *Chatter) UnmarshalBinary(data []byte) error {
+	r := stateReader{b: data}
+	var n float64
+	var times [32]float64
+	r.floats(&n)
+	r.vector(times[:])
+	if err := r.finish(); err != nil {
+		return err
+	}
+	c.n, c.times = int(n), times
+	return nil
+}
+
 // Integrate steps s, which has been Reset, until the given time, and handles
 // events on the way. h may be nil. It returns ctx's error when ctx ends, a
 // *StepError, a *ChatterError, or a handler's error as it is; s then holds

@@ -1,0 +1,164 @@
+package engine
+
+import (
+	"fmt"
+	"math"
+
+	"islet/solvers"
+)
+
+// Condition is a condition on the state: a channel stays above or below a
+// limit for a time.
+type Condition struct {
+	// Channel is the name of a channel, "bus.v" or "battery-1.frequency".
+	Channel string
+	// Below chooses the side of the limit; false means above.
+	Below bool
+	// Limit in the channel's unit.
+	Limit float64
+	// For is how long the condition must hold without a break, s; 0 acts at
+	// once.
+	For float64
+}
+
+// watch is a condition, or a synchronism check, being watched.
+type watch struct {
+	id    int
+	cond  Condition
+	probe probe
+	then  Event
+	sync  bool
+	since float64 // the condition holds since then; NaN: it doesn't
+	fired bool
+}
+
+func (w *watch) String() string {
+	if w.sync {
+		return fmt.Sprintf("synchronism across %s", w.then.Device)
+	}
+	side := "above"
+	if w.cond.Below {
+		side = "below"
+	}
+	s := fmt.Sprintf("%s %s %.6g", w.cond.Channel, side, w.cond.Limit)
+	if w.cond.For > 0 {
+		s += fmt.Sprintf(" for %.4g s", w.cond.For)
+	}
+	return s
+}
+
+// When carries out an event when a condition has held for its time; once.
+func (m *Simulation) When(c Condition, e Event) error {
+	if err := m.check(e); err != nil {
+		return err
+	}
+	p, err := m.rec.probe(c.Channel)
+	if err != nil {
+		return fmt.Errorf("engine: condition for %q: %w", e, err)
+	}
+	if math.IsNaN(c.Limit) || !(c.For >= 0) || math.IsInf(c.For, 0) {
+		return fmt.Errorf("engine: condition for %q: limit is %g and duration %g s, want a number and 0 or a positive time", e, c.Limit, c.For)
+	}
+	w := &watch{id: m.nextID(), cond: c, probe: p, then: e, since: math.NaN()}
+	m.conditions = append(m.conditions, w)
+	if w.value(m.t, m.step.State()) > 0 {
+		m.crossed(w, solvers.Rising)
+	}
+	m.rearm()
+	return nil
+}
+
+// value is positive where the condition holds.
+func (w *watch) value(t float64, y []float64) float64 {
+	v := w.probe.value(t, y) - w.cond.Limit
+	if w.cond.Below {
+		v = -v
+	}
+	return v
+}
+
+// roots makes the root functions of the present conditions, one each.
+func (m *Simulation) roots() *solvers.Roots {
+	n := len(m.conditions)
+	if n == 0 {
+		return nil
+	}
+	return &solvers.Roots{N: n, Func: func(dst []float64, t float64, y []float64) {
+		for i, w := range m.conditions {
+			switch {
+			case w.fired:
+				dst[i] = 1
+			case w.sync:
+				dst[i] = m.syncMargin(w, t, y)
+			default:
+				dst[i] = w.value(t, y)
+			}
+		}
+	}}
+}
+
+// crossed notes that a condition has begun or ceased to hold.
+func (m *Simulation) crossed(w *watch, dir solvers.Direction) {
+	if w.fired {
+		return
+	}
+	if w.sync {
+		if dir != solvers.Rising {
+			return
+		}
+		w.fired = true
+		m.note(w.then.Device, true, "%s: in synchronism (%s)", w.then.Device, m.syncState(w))
+		m.schedule(m.t, Close(w.then.Device))
+		for i, s := range m.queue {
+			if s.e.Action == actionDeadline && s.e.watch == w.id {
+				m.queue = append(m.queue[:i], m.queue[i+1:]...)
+				break
+			}
+		}
+		return
+	}
+	if dir == solvers.Falling {
+		w.since = math.NaN()
+		return
+	}
+	w.since = m.t
+	m.schedule(m.t+w.cond.For, Event{Action: actionDelay, Device: w.then.Device, watch: w.id})
+}
+
+// syncSides returns the differences across a breaker: magnitudes in per unit
+// of rated voltage, Hz, and rad.
+func (m *Simulation) syncSides(w *watch, t float64, y []float64) (dv, df, da float64) {
+	d := m.sys.devices[m.sys.devAt[w.then.Device]]
+	var mag, freq, ang [2]float64
+	for k, b := range d.buses {
+		i := m.net.NodeUnknown(2 * b)
+		mag[k] = math.Hypot(y[i], y[i+1]) / peakPhase(m.sys.buses[b].rated)
+		is := m.topo.busOf[b]
+		if is < 0 {
+			continue
+		}
+		freq[k] = m.islandSpeed(&m.topo.islands[is], y) / (2 * math.Pi)
+		ang[k] = math.Atan2(y[i+1], y[i]) + m.topo.islands[is].frame.at(t)
+	}
+	return mag[0] - mag[1], freq[0] - freq[1], wrap(ang[0] - ang[1])
+}
+
+// syncMargin is positive where all windows are met.
+func (m *Simulation) syncMargin(w *watch, t float64, y []float64) float64 {
+	dv, df, da := m.syncSides(w, t, y)
+	c := w.then.Sync
+	g := 1 - math.Abs(dv)/c.Voltage
+	g = math.Min(g, 1-math.Abs(df)/c.Frequency)
+	// Smooth around a turn, with the sign of the angle's own margin.
+	a := math.Min(c.Angle, math.Pi)
+	return math.Min(g, (math.Cos(da)-math.Cos(a))/(1-math.Cos(a)))
+}
+
+func (m *Simulation) inSync(w *watch, t float64, y []float64) bool {
+	return m.syncMargin(w, t, y) >= 0
+}
+
+func (m *Simulation) syncState(w *watch) string {
+	dv, df, da := m.syncSides(w, m.t, m.y)
+	return fmt.Sprintf("%+.2f %% voltage, %+.3f Hz, %+.1f degrees", 100*dv, df, da*180/math.Pi)
+}
