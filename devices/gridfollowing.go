@@ -153,7 +153,7 @@ func NewGridFollowing(p GridFollowingParams) (*GridFollowing, error) {
 		qRef:  constant(p.Q),
 		iBase: p.Rating / (1.5 * p.V0),
 	}
-	g.setDetail(InverterFull)
+	g.setDetail(Full)
 	return g, nil
 }
 
@@ -183,7 +183,7 @@ func (g *GridFollowing) setDetail(level string) {
 }
 
 // full tells whether all unknowns are present.
-func (g *GridFollowing) full() bool { return g.detail == InverterFull }
+func (g *GridFollowing) full() bool { return g.detail == Full }
 
 // Params returns the parameters the inverter was built with; setpoints moved
 // since then don't show in them.

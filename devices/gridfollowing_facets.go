@@ -128,12 +128,12 @@ func (g *GridFollowing) CurrentLimit() (limit float64, channel int) {
 func (g *GridFollowing) Detail() string { return g.detail }
 
 // Details returns the levels: "full", "primary only".
-func (g *GridFollowing) Details() []string { return []string{InverterFull, InverterPrimary} }
+func (g *GridFollowing) Details() []string { return []string{Full, PrimaryOnly} }
 
 // WithDetail returns an inverter of the same parameters, setpoints and frame
 // speed at another level.
 func (g *GridFollowing) WithDetail(level string) (solvers.Block, error) {
-	if level != InverterFull && level != InverterPrimary {
+	if level != Full && level != PrimaryOnly {
 		return nil, fmt.Errorf("devices: grid-following inverter: no detail %q: want one of %q", level, g.Details())
 	}
 	h := *g

@@ -60,7 +60,7 @@ func pll(t *testing.T, fixedAmplitude bool) *GridFollowing {
 	p := testFollowing()
 	p.Filter = LCL{Lf: 2e-3, Rf: 0.1}
 	p.FixedAmplitude = fixedAmplitude
-	b, err := mustFollowing(t, p).WithDetail(InverterPrimary)
+	b, err := mustFollowing(t, p).WithDetail(PrimaryOnly)
 	if err != nil {
 		t.Fatal(err)
 	}
@@ -206,7 +206,7 @@ func TestPLLLimit(t *testing.T) {
 	p := testFollowing()
 	p.Filter = LCL{Lf: 2e-3, Rf: 0.1}
 	p.SpeedLimit = 10 * math.Pi
-	b, err := mustFollowing(t, p).WithDetail(InverterPrimary)
+	b, err := mustFollowing(t, p).WithDetail(PrimaryOnly)
 	if err != nil {
 		t.Fatal(err)
 	}

@@ -163,7 +163,7 @@ func NewGridForming(p GridFormingParams) (*GridForming, error) {
 		vBase: p.V0,
 		iBase: p.Rating / (1.5 * p.V0),
 	}
-	g.setDetail(InverterFull)
+	g.setDetail(Full)
 	return g, nil
 }
 
@@ -201,7 +201,7 @@ func (g *GridForming) setDetail(level string) {
 }
 
 // full tells whether all unknowns are present.
-func (g *GridForming) full() bool { return g.detail == InverterFull }
+func (g *GridForming) full() bool { return g.detail == Full }
 
 // Params returns the parameters the inverter was built with; setpoints moved
 // since then don't show in them.

@@ -192,12 +192,12 @@ func (g *GridForming) CurrentLimit() (limit float64, channel int) {
 func (g *GridForming) Detail() string { return g.detail }
 
 // Details returns the levels: "full", "primary only".
-func (g *GridForming) Details() []string { return []string{InverterFull, InverterPrimary} }
+func (g *GridForming) Details() []string { return []string{Full, PrimaryOnly} }
 
 // WithDetail returns an inverter of the same parameters, setpoints and frame
 // speed at another level.
 func (g *GridForming) WithDetail(level string) (solvers.Block, error) {
-	if level != InverterFull && level != InverterPrimary {
+	if level != Full && level != PrimaryOnly {
 		return nil, fmt.Errorf("devices: grid-forming inverter: no detail %q: want one of %q", level, g.Details())
 	}
 	h := *g

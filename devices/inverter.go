@@ -7,15 +7,10 @@ import (
 	"islet/solvers/facet"
 )
 
-// Levels of detail of the inverters, for WithDetail.
-const (
-	// InverterFull keeps every unknown dynamic.
-	InverterFull = "full"
-	// InverterPrimary keeps the power filter and the primary control (the
-	// PLL of a follower) and sets inner loops, filter and grid-side current
-	// to their quasi-steady state.
-	InverterPrimary = "primary only"
-)
+// PrimaryOnly is the inverters' level of detail besides [Full], for WithDetail.
+// It keeps the power filter and the primary control (the PLL of a follower), and
+// has inner loops, filter and grid-side current at their quasi-steady state.
+const PrimaryOnly = "primary only"
 
 // LCL holds the elements of an inverter's output filter, one phase of a star.
 // A filter without capacitor and grid side (Cf = Lg = Rg = 0) is an L filter.

@@ -107,7 +107,7 @@ func TestPrimaryOnlyTwoRoads(t *testing.T) {
 		}
 	}
 	for _, c := range list {
-		block, err := c.full.(facet.Detailed).WithDetail(InverterPrimary)
+		block, err := c.full.(facet.Detailed).WithDetail(PrimaryOnly)
 		if err != nil {
 			t.Fatal(err)
 		}
@@ -168,7 +168,7 @@ func TestPrimaryOnlyTwoRoads(t *testing.T) {
 // that state.
 func TestGuessAtSteadyState(t *testing.T) {
 	var invs []inverter
-	for _, detail := range []string{InverterFull, InverterPrimary} {
+	for _, detail := range []string{Full, PrimaryOnly} {
 		for _, psi := range []float64{0, 45, 90} {
 			plate := formingPlate()
 			plate.Psi, plate.P, plate.Q = &psi, 4e3, 1e3
