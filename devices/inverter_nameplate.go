@@ -85,7 +85,7 @@ func pointed(value *float64, fallback float64) float64 {
 // limit or the network's capacity ends the operating range. Stable as well on its
 // own with a resistive load of 1 % to 100 % of the rating, and two in parallel on a
 // load over 20 m of cable of 0.2 to 0.64 ohm/km (TestParallelFormingStable). No
-// computing delay is modelled. Voltage bandwidths under about 150 Hz are too slow
+// computing delay is modelled. Bandwidths of the voltage loop under about 150 Hz are too slow
 // for two inverters on short lines (same test). Mixed with others see
 // TestMixedIslandsStable.
 //

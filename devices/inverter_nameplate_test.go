@@ -50,6 +50,18 @@ func stable(t *testing.T, r *rig, margin float64, what string) {
 	}
 }
 
+// unstable is the opposite, for what a comment warns of.
+func unstable(t *testing.T, r *rig, what string) {
+	t.Helper()
+	if err := r.steady(); err != nil {
+		t.Errorf("%s: %v", what, err)
+		return
+	}
+	if e := r.eigenvalues(); !(real(e[0]) > 0) {
+		t.Errorf("%s: rightmost eigenvalue %.3f 1/s: the warning is out of date", what, e[0])
+	}
+}
+
 // The range stated in the comment of GridFormingNameplate.
 func TestGridFormingDefaultsStable(t *testing.T) {
 	variants := []struct {
@@ -118,13 +130,12 @@ func TestParallelFormingStable(t *testing.T) {
 	// What the comment of GridFormingNameplate warns of.
 	plate = formingPlate()
 	plate.CurrentBandwidth, plate.VoltageBandwidth = 500, 125
-	r := pair(plate, 0.32, 1)
-	if err := r.steady(); err != nil {
-		t.Fatal(err)
-	}
-	if e := r.eigenvalues(); real(e[0]) < 0 {
-		t.Errorf("voltage bandwidth 125 Hz: rightmost eigenvalue %.3f 1/s: the warning is out of date", e[0])
-	}
+	unstable(t, pair(plate, 0.32, 1), "voltage bandwidth of 125 Hz")
+	plate = formingPlate()
+	plate.FeedForward = new(1.0)
+	unstable(t, newRig(plateForming(t, plate)).scr(plateVolts, plateVA, 50, 10), "F = 1")
+	plate.FeedForward = new(0.0)
+	unstable(t, pair(plate, 0.32, 1), "F = 0")
 }
 
 // The range stated in the comment of GridFollowingNameplate.
@@ -142,16 +153,15 @@ func TestGridFollowingDefaultsStable(t *testing.T) {
 			}
 		}
 	}
+	// What the comment of GridFollowingNameplate warns of.
 	plate := followingPlate()
 	plate.P = plateVA
 	plate.PLLBandwidth = 20
-	r := newRig(plateFollowing(t, plate)).scr(plateVolts, plateVA, 1.5, 10)
-	if err := r.steady(); err != nil {
-		t.Fatal(err)
-	}
-	if e := r.eigenvalues(); real(e[0]) < 0 {
-		t.Errorf("PLL of 20 Hz: rightmost eigenvalue %.3f 1/s: the warning is out of date", e[0])
-	}
+	unstable(t, newRig(plateFollowing(t, plate)).scr(plateVolts, plateVA, 1.5, 10), "PLL of 20 Hz")
+	plate = followingPlate()
+	plate.P = plateVA
+	plate.FeedForward = 1
+	unstable(t, newRig(plateFollowing(t, plate)).scr(plateVolts, plateVA, 20, 10), "feed-forward of v_c")
 }
 
 // Islands of unlike inverters: forming ones of 2 kVA to 200 kVA beside one of
