@@ -1,6 +1,7 @@
 package solvers
 
 import (
+	"errors"
 	"fmt"
 	"math"
 )
@@ -26,6 +27,42 @@ type LUOptions struct {
 	// NaturalOrder leaves out the block triangular form and the fill-reducing
 	// ordering: columns are eliminated as they stand.
 	NaturalOrder bool
+}
+
+// resolve replaces zeros by the defaults and reports every invalid field.
+func (o *LUOptions) resolve() error {
+	var errs []error
+	if o.PivotThreshold == 0 {
+		o.PivotThreshold = 0.1
+	}
+	least := 1.0 // of GrowthLimit
+	if o.PivotThreshold > 0 && o.PivotThreshold <= 1 {
+		least = 1 / o.PivotThreshold
+	} else {
+		errs = append(errs, fmt.Errorf("solvers: PivotThreshold is %g, want more than 0 and at most 1", o.PivotThreshold))
+	}
+	if o.GrowthLimit == 0 {
+		o.GrowthLimit = max(1e3, least)
+	}
+	if !(o.GrowthLimit >= least) {
+		errs = append(errs, fmt.Errorf("solvers: GrowthLimit is %g, want at least 1/PivotThreshold = %g", o.GrowthLimit, least))
+	}
+	return errors.Join(errs...)
+}
+
+// luCheck reports what keeps a from being factored, whatever its values.
+func luCheck(a *CSC) error {
+	if err := a.check(); err != nil {
+		return err
+	}
+	if a.Rows != a.Cols {
+		return fmt.Errorf("solvers: matrix is %d x %d, want a square one", a.Rows, a.Cols)
+	}
+	if len(a.I) > math.MaxInt32 || a.Cols > math.MaxInt32 {
+		return fmt.Errorf("solvers: matrix of order %d has %d entries, want at most %d of each",
+			a.Cols, len(a.I), math.MaxInt32)
+	}
+	return nil
 }
 
 // LUStats counts what a [SparseLU] has done.
@@ -136,31 +173,12 @@ var _ LinearSolver = (*SparseLU)(nil)
 // pattern must not change any more. It doesn't look at the values.
 //
 // The error is a *SingularError if no choice of values makes a regular; its
-// column is one of a group that has entries in too few rows. Other errors name an
-// invalid option, a matrix that isn't square, or inconsistent arrays.
+// column is one of a group that has entries in too few rows. Other errors name
+// all invalid options, and a matrix that isn't square or whose arrays
+// contradict each other.
 func NewSparseLU(a *CSC, o LUOptions) (*SparseLU, error) {
-	if o.PivotThreshold == 0 {
-		o.PivotThreshold = 0.1
-	}
-	if !(o.PivotThreshold > 0 && o.PivotThreshold <= 1) {
-		return nil, fmt.Errorf("solvers: PivotThreshold is %g, want more than 0 and at most 1", o.PivotThreshold)
-	}
-	if o.GrowthLimit == 0 {
-		o.GrowthLimit = max(1e3, 1/o.PivotThreshold)
-	}
-	if !(o.GrowthLimit >= 1/o.PivotThreshold) {
-		return nil, fmt.Errorf("solvers: GrowthLimit is %g, want at least 1/PivotThreshold = %g",
-			o.GrowthLimit, 1/o.PivotThreshold)
-	}
-	if err := a.check(); err != nil {
+	if err := errors.Join(o.resolve(), luCheck(a)); err != nil {
 		return nil, err
-	}
-	if a.Rows != a.Cols {
-		return nil, fmt.Errorf("solvers: matrix is %d x %d, want a square one", a.Rows, a.Cols)
-	}
-	if len(a.I) > math.MaxInt32 || a.Cols > math.MaxInt32 {
-		return nil, fmt.Errorf("solvers: matrix of order %d has %d entries, want at most %d",
-			a.Cols, len(a.I), math.MaxInt32)
 	}
 	row, j := luMatch(a)
 	if j >= 0 {
@@ -294,7 +312,8 @@ func (f *SparseLU) Factor() error {
 	// The search leaves the structure only; the values come from the same
 	// arithmetic that a refactorisation does, so that both agree in every bit.
 	if k, pivot := f.eliminate(true); k >= 0 {
-		// Hardly possible: sums in another order fail where the search passed.
+		// A pivot that was rounding error alone: summed in another order,
+		// nothing is left.
 		return &SingularError{Column: int(f.colOf[k]), Pivot: pivot}
 	}
 	if f.worst < luLoss {

@@ -46,18 +46,18 @@ func (f *SparseLU) eliminateOne(k int, searched bool) (pivot float64, good bool)
 	ax := f.a.X
 	raw, norm := 0.0, 0.0 // 1-norms of the column, unscaled and scaled
 	for p, e := range from {
-		v := ax[e]
-		raw += math.Abs(v)
-		v *= mul[p]
-		norm += math.Abs(v)
-		x[row[p]] = v
+		v, m := ax[e], mul[p]
+		x[row[p]] = v * m
+		v = math.Abs(v)
+		raw += v
+		norm += v * m
 	}
 	if f.op[k] < f.op[k+1] {
 		raw += f.copyAbove(k)
 	}
 
 	// x = L\x
-	largest := 0.0 // in the column of U
+	largest := uint64(0) // magnitude in the column of U
 	ui, ux := f.ui[f.up[k]:f.up[k+1]], f.ux[f.up[k]:f.up[k+1]]
 	for t := 0; t < len(ui); {
 		c := int(ui[t])
@@ -66,9 +66,7 @@ func (f *SparseLU) eliminateOne(k int, searched bool) (pivot float64, good bool)
 			u0 := x[c]
 			x[c] = 0
 			ux[t] = u0
-			if m := math.Abs(u0); m > largest {
-				largest = m
-			}
+			largest = max(largest, luMagnitude(u0))
 			l0 = l0[:len(s)]
 			for p, i := range s {
 				x[i] -= l0[p] * u0
@@ -82,12 +80,8 @@ func (f *SparseLU) eliminateOne(k int, searched bool) (pivot float64, good bool)
 		u1 := x[c+1] - l0[0]*u0
 		x[c], x[c+1] = 0, 0
 		ux[t], ux[t+1] = u0, u1
-		if m := math.Abs(u0); m > largest {
-			largest = m
-		}
-		if m := math.Abs(u1); m > largest {
-			largest = m
-		}
+		largest = max(largest, luMagnitude(u0))
+		largest = max(largest, luMagnitude(u1))
 		l0, l1 = l0[1:][:len(s)], l1[:len(s)]
 		for p, i := range s {
 			x[i] -= l0[p]*u0 + l1[p]*u1
@@ -101,14 +95,14 @@ func (f *SparseLU) eliminateOne(k int, searched bool) (pivot float64, good bool)
 	inv := 1 / pivot
 	f.inv[k] = inv
 	good = true
-	limit := f.lLimit
+	limit := luMagnitude(f.lLimit)
 	s, l := li[lp[k]:lp[k+1]], lx[lp[k]:lp[k+1]]
 	l = l[:len(s)]
 	for p, i := range s {
 		v := x[i] * inv
 		x[i] = 0
 		l[p] = v
-		if !(math.Abs(v) <= limit) {
+		if luMagnitude(v) > limit {
 			good = false
 		}
 	}
@@ -132,11 +126,11 @@ func (f *SparseLU) eliminateTwo(k int, searched bool) (bad int, pivot float64) {
 		row, mul = row[:len(from)], mul[:len(from)]
 		r, n := 0.0, 0.0
 		for p, e := range from {
-			v := ax[e]
-			r += math.Abs(v)
-			v *= mul[p]
-			n += math.Abs(v)
-			x[row[p]][h] = v
+			v, m := ax[e], mul[p]
+			x[row[p]][h] = v * m
+			v = math.Abs(v)
+			r += v
+			n += v * m
 		}
 		if f.op[k+h] < f.op[k+h+1] {
 			r += f.copyAbove(k + h)
@@ -145,7 +139,7 @@ func (f *SparseLU) eliminateTwo(k int, searched bool) (bad int, pivot float64) {
 	}
 
 	// x = L\x
-	largest, largestB := 0.0, 0.0 // in the columns of U
+	var largest, largestB uint64 // magnitudes in the columns of U
 	ui, ux, uxB := f.ui[f.up[k]:f.up[k+1]], f.ux[f.up[k]:f.up[k+1]], f.ux[f.up[k+1]:f.up[k+2]]
 	for t := 0; t < len(ui); {
 		c := int(ui[t])
@@ -154,12 +148,8 @@ func (f *SparseLU) eliminateTwo(k int, searched bool) (bad int, pivot float64) {
 			u0, v0 := x[c][0], x[c][1]
 			x[c] = [2]float64{}
 			ux[t], uxB[t] = u0, v0
-			if m := math.Abs(u0); m > largest {
-				largest = m
-			}
-			if m := math.Abs(v0); m > largestB {
-				largestB = m
-			}
+			largest = max(largest, luMagnitude(u0))
+			largestB = max(largestB, luMagnitude(v0))
 			l0 = l0[:len(s)]
 			for p, i := range s {
 				xi := &x[i]
@@ -178,18 +168,10 @@ func (f *SparseLU) eliminateTwo(k int, searched bool) (bad int, pivot float64) {
 		x[c], x[c+1] = [2]float64{}, [2]float64{}
 		ux[t], ux[t+1] = u0, u1
 		uxB[t], uxB[t+1] = v0, v1
-		if m := math.Abs(u0); m > largest {
-			largest = m
-		}
-		if m := math.Abs(u1); m > largest {
-			largest = m
-		}
-		if m := math.Abs(v0); m > largestB {
-			largestB = m
-		}
-		if m := math.Abs(v1); m > largestB {
-			largestB = m
-		}
+		largest = max(largest, luMagnitude(u0))
+		largest = max(largest, luMagnitude(u1))
+		largestB = max(largestB, luMagnitude(v0))
+		largestB = max(largestB, luMagnitude(v1))
 		l0, l1 = l0[1:][:len(s)], l1[:len(s)]
 		for p, i := range s {
 			xi := &x[i]
@@ -210,11 +192,9 @@ func (f *SparseLU) eliminateTwo(k int, searched bool) (bad int, pivot float64) {
 	x[k], x[k+1] = [2]float64{}, [2]float64{}
 	f.inv[k], f.inv[k+1] = inv, invB
 	uxB[len(ui)] = u
-	if m := math.Abs(u); m > largestB {
-		largestB = m
-	}
-	limit := f.lLimit
-	good, goodB := math.Abs(l) <= limit, true
+	largestB = max(largestB, luMagnitude(u))
+	limit := luMagnitude(f.lLimit)
+	good, goodB := luMagnitude(l) <= limit, true
 	s := li[lp[k+1]:lp[k+2]]
 	l0, l1 := lx[lp[k]:lp[k+1]], lx[lp[k+1]:lp[k+2]]
 	l0[0] = l
@@ -225,10 +205,10 @@ func (f *SparseLU) eliminateTwo(k int, searched bool) (bad int, pivot float64) {
 		w := (xi[1] - v*u) * invB
 		*xi = [2]float64{}
 		l0[p], l1[p] = v, w
-		if !(math.Abs(v) <= limit) {
+		if luMagnitude(v) > limit {
 			good = false
 		}
-		if !(math.Abs(w) <= limit) {
+		if luMagnitude(w) > limit {
 			goodB = false
 		}
 	}
@@ -253,17 +233,21 @@ func (f *SparseLU) copyAbove(k int) (sum float64) {
 }
 
 // accept decides on the pivot of column k, given the 1-norms of the column,
-// unscaled and scaled, and its largest entry in U.
-func (f *SparseLU) accept(k int, pivot, raw, norm, largest float64, searched bool) bool {
+// unscaled and scaled, and the largest magnitude in its column of U.
+func (f *SparseLU) accept(k int, pivot, raw, norm float64, largest uint64, searched bool) bool {
 	if raw > f.norm1 {
 		f.norm1 = raw
 	}
-	p := math.Abs(pivot)
-	if !(raw <= math.MaxFloat64 && p >= luTiny && largest <= f.uLimit*norm) {
+	p, u := math.Abs(pivot), math.Float64frombits(largest>>1)
+	if !(raw <= math.MaxFloat64 && p >= luTiny && p <= math.MaxFloat64 && u <= f.uLimit*norm) {
 		return false
 	}
-	return searched || p >= luSuspect*norm && p >= luSuspect*largest || p > luLoss*f.magnitude(k)
+	return searched || p >= luSuspect*norm && p >= luSuspect*u || p > luLoss*f.magnitude(k)
 }
+
+// luMagnitude maps v to an integer that grows with the magnitude of v; NaN comes
+// after Inf. Integers compare faster, and none is left out.
+func luMagnitude(v float64) uint64 { return math.Float64bits(v) << 1 }
 
 // magnitude returns the sum of the magnitudes that add up to the pivot of
 // column k: w = |A(:,k)| + |L| w. Rounding makes the pivot uncertain by a few

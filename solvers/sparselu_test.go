@@ -629,6 +629,8 @@ func TestSparseLUFallback(t *testing.T) {
 		{"values all change", full(4, 2, 1, 2, 4, 1, 1, 1, 4), full(4, 2, 1, 2, 4, 3, 1, 1, 0.5), 0},
 		{"last pivot is rounding error", full(4, 1, 1, 3, 3, 1, 1, 1, 3), full(3, 0.1, 1, 0.3, 0.01, 1, 1, 1, 3), 1},
 		{"all scaled", full(4, 1, 1, 3), full(4e-20, 1e-20, 1e-20, 3e-20), 0},
+		{"all huge", full(4, 1, 1, 3), full(4e300, 1e300, 1e300, 3e300), 0},
+		{"all close to underflow", full(4, 1, 1, 3), full(4e-304, 1e-304, 1e-304, 3e-304), 1},
 		{"growth within the limit", full(4, 1, 1, 3), full(0.02, 1, 1, 3), 0},
 	} {
 		t.Run(tt.name, func(t *testing.T) {
@@ -942,6 +944,12 @@ func TestSparseLUOptions(t *testing.T) {
 		}
 	}
 	wide, _ := NewCSC(1, 2, []Entry{{0, 0}})
+	_, err := NewSparseLU(wide, LUOptions{PivotThreshold: 2, GrowthLimit: -1})
+	for _, want := range []string{"PivotThreshold is 2", "GrowthLimit is -1", "1 x 2"} {
+		if err == nil || !strings.Contains(err.Error(), want) {
+			t.Errorf("error %v lacks %q", err, want)
+		}
+	}
 	if _, err := NewSparseLU(wide, LUOptions{}); err == nil || !strings.Contains(err.Error(), "1 x 2") {
 		t.Errorf("1 x 2 matrix: error %v", err)
 	}
