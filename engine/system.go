@@ -110,7 +110,13 @@ func (s *System) Bus(name string, ratedVolts float64) Bus {
 	return Bus{s, len(s.buses) - 1}
 }
 
-// BusNames and DeviceNames list what the system holds, in order of addition.
+// FindBus returns the bus of that name.
+func (s *System) FindBus(name string) (Bus, bool) {
+	i, ok := s.busAt[name]
+	return Bus{s, i}, ok
+}
+
+// BusNames lists the buses in order of addition.
 func (s *System) BusNames() []string {
 	names := make([]string, len(s.buses))
 	for i, b := range s.buses {
