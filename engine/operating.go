@@ -281,7 +281,7 @@ func (s *pointSearch) newton() error {
 				if size < 1e-8 {
 					return nil
 				}
-				return fmt.Errorf("Newton's method stalls at %s (correction %.3g of its size)", m.unknownName(worst), size)
+				return fmt.Errorf("newton's method stalls at %s (correction %.3g of its size)", m.unknownName(worst), size)
 			}
 			for i, d := range s.d {
 				m.y[i] = s.trial[i] + damping*d

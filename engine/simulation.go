@@ -422,8 +422,7 @@ func (m *Simulation) restart() error {
 
 // leanFrame remembers what followFrames saw last.
 type leanFrame struct {
-	t    float64
-	mean []float64
+	mean []float64 // of every island, after the last step
 }
 
 // islandSpeed is the mean speed of the sources that hold an island, weighted

@@ -59,7 +59,7 @@ func (tr *Trace) Values(i int) []float64 { return tr.data[i] }
 // value after it. It returns NaN for an unknown channel or a time outside.
 func (tr *Trace) At(name string, t float64) float64 {
 	col := tr.Column(name)
-	if col == nil || len(col) == 0 || t < tr.Time[0] || t > tr.Time[len(tr.Time)-1] {
+	if len(col) == 0 || t < tr.Time[0] || t > tr.Time[len(tr.Time)-1] {
 		return math.NaN()
 	}
 	k := sort.Search(len(tr.Time), func(i int) bool { return tr.Time[i] > t })
