@@ -77,13 +77,27 @@ func (w *watch) value(t float64, y []float64) float64 {
 	return v
 }
 
-// roots makes the root functions of the present conditions, one each.
+// roots makes the root functions: of the present conditions, one each, and
+// after them the kinks of all devices in service.
 func (m *Simulation) roots() *solvers.Roots {
 	n := len(m.conditions)
-	if n == 0 {
+	m.kinked = m.kinked[:0]
+	ports, total := 0, n
+	for _, d := range m.sys.devices {
+		if d.kinked == nil || d.off {
+			continue
+		}
+		for k := range d.kinks {
+			m.kinked = append(m.kinked, kink{d, k})
+		}
+		total += len(d.kinks)
+		ports = max(ports, d.ports)
+	}
+	if total == 0 {
 		return nil
 	}
-	return &solvers.Roots{N: n, Func: func(dst []float64, t float64, y []float64) {
+	v := make([]float64, ports)
+	f := func(dst []float64, t float64, y []float64) {
 		for i, w := range m.conditions {
 			switch {
 			case w.fired:
@@ -94,7 +108,43 @@ func (m *Simulation) roots() *solvers.Roots {
 				dst[i] = w.value(t, y)
 			}
 		}
-	}}
+		at := n
+		for _, k := range m.kinked {
+			if k.index != 0 {
+				continue
+			}
+			d := k.d
+			m.net.Ports(d.block, v[:d.ports], y)
+			d.kinked.EvalKinks(dst[at:at+len(d.kinks)], t, v[:d.ports], y[d.lo:d.lo+d.own])
+			at += len(d.kinks)
+		}
+	}
+	return &solvers.Roots{N: total, Func: f, EndsOnly: n == 0}
+}
+
+// kink is one kink function of a device.
+type kink struct {
+	d     *member
+	index int
+}
+
+// passKinks tells of the kinks among the roots hit and returns the rest.
+func (m *Simulation) passKinks(hits []solvers.Hit) []solvers.Hit {
+	n := len(m.conditions)
+	rest := hits[:0]
+	for _, h := range hits {
+		if h.Root < n {
+			rest = append(rest, h)
+			continue
+		}
+		k := m.kinked[h.Root-n]
+		if h.Direction == solvers.Rising {
+			m.note(k.d.name, false, "%s reaches its %s", k.d.name, k.d.kinks[k.index])
+		} else {
+			m.note(k.d.name, false, "%s leaves its %s", k.d.name, k.d.kinks[k.index])
+		}
+	}
+	return rest
 }
 
 // crossed notes that a condition has begun or ceased to hold.

@@ -72,6 +72,7 @@ type Simulation struct {
 	queue      []scheduled // by time, then order of entry
 	sequence   int
 	conditions []*watch
+	kinked     []kink // in the order of their root functions
 	chatter    solvers.Chatter
 	stopped    error // a failure that ended the run
 
@@ -383,7 +384,7 @@ func (m *Simulation) advance(until float64) error {
 	if m.opt.Hooks.Step != nil {
 		m.opt.Hooks.Step(m.t, m.t-m.step.Previous())
 	}
-	if len(hits) > 0 || m.due() {
+	if hits = m.passKinks(hits); len(hits) > 0 || m.due() {
 		return m.handle(hits)
 	}
 	return m.followFrames()

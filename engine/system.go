@@ -59,6 +59,8 @@ type member struct {
 	ratioed  facet.Ratioed
 	sized    facet.Sized
 	memory   memory
+	kinked   facet.Kinked
+	kinks    []string
 
 	tripped bool // taken off by an event, for good
 	off     bool // takes no part at present: tripped, or in a dead island
@@ -234,6 +236,9 @@ func (s *System) Add(name string, d Device, at ...Bus) error {
 	m.ratioed, _ = d.(facet.Ratioed)
 	m.sized, _ = d.(facet.Sized)
 	m.memory, _ = d.(memory)
+	if m.kinked, _ = d.(facet.Kinked); m.kinked != nil {
+		m.kinks = m.kinked.Kinks()
+	}
 	s.devAt[name] = len(s.devices)
 	s.devices = append(s.devices, m)
 	return nil

@@ -28,6 +28,10 @@ type Roots struct {
 	Direction []Direction
 	// Needs lists the components of y that Func reads; nil means all.
 	Needs []int
+	// EndsOnly looks for crossings between the ends of a step alone, which
+	// is cheap and misses pairs of crossings within one: enough for functions
+	// that mark a kink in the equations.
+	EndsOnly bool
 }
 
 // Hit is a located zero.
@@ -245,7 +249,7 @@ func (d *Driver) search(t0, t1 float64) {
 	if unarmed {
 		take(t0 + math.Max(1e-4*h, math.Min(0.5*h, 64*ulp(t0))))
 	}
-	for k := 1; k <= rootSamples; k++ {
+	for k := 1; k <= rootSamples && !d.roots.EndsOnly; k++ {
 		take(t0 + h*float64(k)/(rootSamples+1))
 	}
 	take(t1)

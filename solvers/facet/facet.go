@@ -210,3 +210,15 @@ type Sized interface {
 	// the index of the channel (A rms) to compare with CurrentLimit/sqrt 2.
 	CurrentLimit() (limit float64, channel int)
 }
+
+// Kinked is a block whose equations have kinks: places where they are
+// continuous and their derivatives are not, such as the entry of a limiter.
+// The engine ends a step there and tells of it.
+type Kinked interface {
+	// Kinks names what each function marks, "current limit". It never
+	// changes.
+	Kinks() []string
+	// EvalKinks writes the functions into dst (len(Kinks())): positive where
+	// the limit acts, negative where it doesn't.
+	EvalKinks(dst []float64, t float64, v, x []float64)
+}

@@ -1,0 +1,164 @@
+package compare
+
+import (
+	"encoding/csv"
+	"encoding/json"
+	"fmt"
+	"io"
+	"math"
+	"strconv"
+	"strings"
+)
+
+// WriteText prints the comparison as tables and a sentence for each setting.
+func (c *Comparison) WriteText(w io.Writer) error {
+	p := &printer{w: w}
+	p.printf("%-34s %9s %8s %8s %8s %10s %8s\n", "setting", "unknowns", "steps", "rejected", "factor.", "time", "speed-up")
+	for _, r := range c.Results {
+		t, s := "-", "-"
+		if r.Time > 0 {
+			t, s = duration(r.Time), fmt.Sprintf("%.2f", r.Speedup)
+		}
+		p.printf("%-34s %9d %8d %8d %8d %10s %8s\n", r.Setting, r.Unknowns, r.Steps, r.Rejected, r.Factorizations, t, s)
+	}
+	for _, r := range c.Results[1:] {
+		if len(r.Groups) == 0 {
+			continue
+		}
+		p.printf("\n%s against %s: largest deviation, %% of the channel's range\n", r.Setting, c.Results[0].Setting)
+		p.printf("  %-10s", "")
+		for k := range numWindows {
+			p.printf(" %-28s", k)
+		}
+		p.printf("\n")
+		for _, g := range r.Groups {
+			p.printf("  %-10s", g.Name)
+			for k, ch := range g.Worst {
+				cell := "-"
+				if ch != nil {
+					d := ch.Windows[k]
+					cell = fmt.Sprintf("%.3g %% %s", 100*d.Relative(), ch.Name)
+				}
+				p.printf(" %-28s", cell)
+			}
+			p.printf("\n")
+		}
+	}
+	p.printf("\n")
+	for _, r := range c.Results {
+		p.printf("%s\n", r.Summary)
+	}
+	return p.err
+}
+
+type printer struct {
+	w   io.Writer
+	err error
+}
+
+func (p *printer) printf(format string, a ...any) {
+	if p.err == nil {
+		_, p.err = fmt.Fprintf(p.w, format, a...)
+	}
+}
+
+// WriteCSV writes a row for every setting, channel and window.
+func (c *Comparison) WriteCSV(w io.Writer) error {
+	out := csv.NewWriter(w)
+	row := []string{"setting", "channel", "unit", "group", "window", "max", "rms", "range", "max_over_range", "rms_over_range", "at_s"}
+	if err := out.Write(row); err != nil {
+		return err
+	}
+	num := func(x float64) string { return strconv.FormatFloat(x, 'g', -1, 64) }
+	for _, r := range c.Results {
+		for _, ch := range r.Channels {
+			for k, d := range ch.Windows {
+				if d.Count == 0 {
+					continue
+				}
+				if err := out.Write([]string{r.Setting, ch.Name, ch.Unit, ch.Group, Window(k).String(), num(d.Max), num(d.RMS), num(d.Range), num(d.Relative()), num(d.RelativeRMS()), num(d.At)}); err != nil {
+					return err
+				}
+			}
+		}
+	}
+	out.Flush()
+	return out.Error()
+}
+
+// WriteJSON writes the results without the waveforms.
+func (c *Comparison) WriteJSON(w io.Writer) error {
+	type deviation struct {
+		Window   string   `json:"window"`
+		Max      float64  `json:"max"`
+		RMS      float64  `json:"rms"`
+		At       float64  `json:"at_s"`
+		Relative *float64 `json:"max_over_range"` // null where the channel doesn't move
+	}
+	type channel struct {
+		Name    string      `json:"name"`
+		Unit    string      `json:"unit"`
+		Group   string      `json:"group"`
+		Range   float64     `json:"range"`
+		Windows []deviation `json:"windows"`
+	}
+	type result struct {
+		Setting        string    `json:"setting"`
+		Unknowns       int       `json:"unknowns"`
+		Steps          int       `json:"steps"`
+		Rejected       int       `json:"rejected"`
+		Factorizations int       `json:"factorizations"`
+		Time           float64   `json:"time_s"`
+		Speedup        float64   `json:"speedup"`
+		Diverged       bool      `json:"diverged"`
+		Failure        string    `json:"failure,omitempty"`
+		Reached        float64   `json:"reached_s"`
+		Verdicts       []string  `json:"verdicts"`
+		Changes        []string  `json:"changes"`
+		Summary        string    `json:"summary"`
+		Channels       []channel `json:"channels,omitempty"`
+	}
+	doc := struct {
+		Until   float64   `json:"until_s"`
+		Events  []float64 `json:"events_s"`
+		Results []result  `json:"results"`
+	}{Until: c.Until, Events: c.Events}
+	for _, r := range c.Results {
+		x := result{Setting: r.Setting, Unknowns: r.Unknowns, Steps: r.Steps, Rejected: r.Rejected, Factorizations: r.Factorizations,
+			Time: r.Time.Seconds(), Speedup: r.Speedup, Diverged: r.Diverged, Failure: r.Failure, Reached: r.Reached,
+			Verdicts: r.Verdicts, Changes: r.Changes, Summary: r.Summary}
+		for _, ch := range r.Channels {
+			y := channel{Name: ch.Name, Unit: ch.Unit, Group: ch.Group, Range: ch.Windows[0].Range}
+			for k, d := range ch.Windows {
+				if d.Count == 0 {
+					continue
+				}
+				v := deviation{Window: Window(k).String(), Max: finite(d.Max), RMS: finite(d.RMS), At: d.At}
+				if rel := d.Relative(); !math.IsInf(rel, 0) && rel == rel {
+					v.Relative = &rel
+				}
+				y.Windows = append(y.Windows, v)
+			}
+			x.Channels = append(x.Channels, y)
+		}
+		doc.Results = append(doc.Results, x)
+	}
+	e := json.NewEncoder(w)
+	e.SetIndent("", " ")
+	return e.Encode(doc)
+}
+
+// finite keeps JSON valid for a run that left all bounds.
+func finite(x float64) float64 {
+	if math.IsNaN(x) || math.IsInf(x, 0) {
+		return math.MaxFloat64
+	}
+	return x
+}
+
+// Text returns what WriteText prints.
+func (c *Comparison) Text() string {
+	var b strings.Builder
+	c.WriteText(&b) // a Builder doesn't fail
+	return b.String()
+}
