@@ -18,7 +18,7 @@ type Case struct {
 	Start, End float64
 	// Initial is the state at Start.
 	Initial []float64
-	// Measured lists the components that count for accuracy; nil: all.
+	// Measured lists the components that count for accuracy at End; nil: all.
 	Measured []int
 	// Points are known states in ascending order of time, after Start.
 	Points []Point
@@ -121,7 +121,7 @@ func digits(which []int, e func(int) float64) float64 {
 func Smooth() []*Case {
 	return []*Case{
 		Robertson(), HIRES(), Oregonator(), VanDerPol(), VanDerPolUnscaled(),
-		E5(), Pleiades(), TransistorAmplifier(), RobertsonDAE(),
+		E5(), E5DAE(), Pleiades(), TransistorAmplifier(), RobertsonDAE(),
 		InconsistentStart(), CubicDAE(),
 		ProtheroRobinson(-1e2, 1), ProtheroRobinson(-1e4, 1), ProtheroRobinson(-1e6, 2),
 		Kaps(1), Kaps(1e-2), Kaps(1e-4), Kaps(1e-8), Kaps(0),
