@@ -61,9 +61,7 @@ func (m *Simulation) When(c Condition, e Event) error {
 	}
 	w := &watch{id: m.nextID(), cond: c, probe: p, then: e, since: math.NaN()}
 	m.conditions = append(m.conditions, w)
-	if w.value(m.t, m.step.State()) > 0 {
-		m.crossed(w, solvers.Rising)
-	}
+	m.reviewConditions()
 	m.rearm()
 	return nil
 }
@@ -173,6 +171,35 @@ func (m *Simulation) crossed(w *watch, dir solvers.Direction) {
 	}
 	w.since = m.t
 	m.schedule(m.t+w.cond.For, Event{Action: actionDelay, Device: w.then.Device, watch: w.id})
+}
+
+// reviewConditions notes conditions that an event made hold, or cease to, in a
+// jump. What they cause at once is due now.
+func (m *Simulation) reviewConditions() {
+	y := m.step.State()
+	for _, w := range m.conditions {
+		if w.fired {
+			continue
+		}
+		if w.sync {
+			if m.syncMargin(w, m.t, y) >= 0 {
+				m.crossed(w, solvers.Rising)
+			}
+			continue
+		}
+		v := w.value(m.t, y)
+		if math.Abs(v) <= 1e-9*math.Abs(w.cond.Limit) {
+			continue // on the limit: what the crossing said stands
+		}
+		holds, held := v > 0, w.since == w.since
+		if holds != held {
+			dir := solvers.Falling
+			if holds {
+				dir = solvers.Rising
+			}
+			m.crossed(w, dir)
+		}
+	}
 }
 
 // syncSides returns the differences across a breaker: magnitudes in per unit

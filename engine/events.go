@@ -227,6 +227,7 @@ func (m *Simulation) handle(hits []solvers.Hit) error {
 		}
 		m.ledger.jump(before, m.t, m.step.State())
 		m.rec.row(m.t, m.step.State(), false)
+		m.reviewConditions()
 	} else {
 		// A derivative may jump, nothing else: go on from here.
 		m.rearm()

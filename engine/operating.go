@@ -156,8 +156,9 @@ func (s *pointSearch) flat() {
 	}
 	for k := range m.topo.islands {
 		lead := m.sys.devices[m.topo.islands[k].formers[0]]
-		var v [16]float64
-		m.setSpeed(k, lead.former.Speed(m.t, v[:lead.ports], m.y[lead.lo:lead.lo+lead.own]))
+		v := m.ports[:lead.ports]
+		clear(v)
+		m.setSpeed(k, lead.former.Speed(m.t, v, m.y[lead.lo:lead.lo+lead.own]))
 		if w := m.topo.islands[k].frame.speed; !(w > 0.5*m.sys.nominal && w < 1.5*m.sys.nominal) {
 			m.setSpeed(k, m.sys.nominal)
 		}
@@ -327,12 +328,12 @@ func (s *pointSearch) pseudoTransient() error {
 	const start, most = 1e-4, 600
 	h := start
 	before := math.NaN()
-	var v [16]float64
 	for range most {
 		for k := range m.topo.islands {
 			lead := m.sys.devices[m.topo.islands[k].formers[0]]
-			m.net.Ports(lead.block, v[:lead.ports], m.y)
-			m.setSpeed(k, lead.former.Speed(m.t, v[:lead.ports], m.y[lead.lo:lead.lo+lead.own]))
+			v := m.ports[:lead.ports]
+			m.net.Ports(lead.block, v, m.y)
+			m.setSpeed(k, lead.former.Speed(m.t, v, m.y[lead.lo:lead.lo+lead.own]))
 		}
 		if err := m.net.Eval(s.d, m.t, m.y); err != nil {
 			return m.named(err)

@@ -67,6 +67,7 @@ type Simulation struct {
 	driver *solvers.Driver
 	topo   *topology
 	y      []float64 // workspace: the state during changes
+	ports  []float64 // workspace: values at a device's ports
 	t      float64
 
 	queue      []scheduled // by time, then order of entry
@@ -121,6 +122,11 @@ func Start(s *System, o *Options) (*Simulation, error) {
 		m.opt.Method = solvers.Rodas5P
 	}
 	m.y = make([]float64, net.Dim())
+	widest := 0
+	for _, d := range s.devices {
+		widest = max(widest, d.ports)
+	}
+	m.ports = make([]float64, widest)
 	if m.rec, err = newRecorder(m, o.Record); err != nil {
 		return nil, err
 	}
@@ -430,12 +436,12 @@ type leanFrame struct {
 // by rating, rad/s.
 func (m *Simulation) islandSpeed(is *island, y []float64) float64 {
 	sum, weight := 0.0, 0.0
-	var v [16]float64
 	for _, i := range is.formers {
 		d := m.sys.devices[i]
-		m.net.Ports(d.block, v[:d.ports], y)
+		v := m.ports[:d.ports]
+		m.net.Ports(d.block, v, y)
 		w := d.former.Weight()
-		sum += w * d.former.Speed(m.t, v[:d.ports], y[d.lo:d.lo+d.own])
+		sum += w * d.former.Speed(m.t, v, y[d.lo:d.lo+d.own])
 		weight += w
 	}
 	return sum / weight
