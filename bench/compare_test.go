@@ -1,0 +1,79 @@
+//go:build sundials
+
+package bench
+
+import (
+	"context"
+	"flag"
+	"os"
+	"testing"
+
+	"islet/bench/sundials"
+	"islet/solvers"
+)
+
+var (
+	full    = flag.Bool("full", false, "compare at full length, with repetitions")
+	csvPath = flag.String("csv", "", "write the raw data of the comparison to this file")
+)
+
+// tight is the setup of references: IDA, so that no method is measured by
+// itself alone, at a tolerance where the error is far below all others.
+func reference(rel float64) Setup {
+	return Setup{Name: "reference", Method: sundials.IDA, Solver: solvers.Options{RelTol: rel}}
+}
+
+func studies() []Study {
+	s := []Study{MicrogridStudy(10)}
+	if *full {
+		s = append(s, MicrogridStudy(100))
+	}
+	return s
+}
+
+const sampling = 5e-3
+
+func TestCompare(t *testing.T) {
+	t.Logf("SUNDIALS %s, %.2f ns an entry of a linear sum (0.3 to 0.5 if built with optimisation)", sundials.Version(), sundials.KernelTime())
+	ctx := context.Background()
+	setups := []Setup{
+		{Name: "Rodas5P"},
+		{Name: "Rodas5P, turning frame", TurningFrame: true},
+		{Name: "Rodas5P, general LU", GeneralLU: true},
+		{Name: "IDA + KLU", Method: sundials.IDA},
+		{Name: "IDA + KLU with AMD", Method: sundials.Method{Ordering: sundials.AMD}},
+	}
+	tols, repeat := []float64{1e-4}, 1
+	if *full {
+		tols, repeat = []float64{1e-2, 1e-3, 1e-4, 1e-5, 1e-6}, 5
+	}
+	var all []Row
+	for _, s := range studies() {
+		ref, st, err := s.Waveforms(ctx, reference(1e-10), nil, sampling)
+		if err != nil {
+			t.Fatal(err)
+		}
+		t.Logf("%s: reference in %d steps", s.Name, st.Steps)
+		rows, err := s.WorkPrecision(ctx, setups, tols, ref, nil, sampling, repeat)
+		if err != nil {
+			t.Fatal(err)
+		}
+		all = append(all, rows...)
+	}
+	if err := WriteTable(os.Stdout, all); err != nil {
+		t.Fatal(err)
+	}
+	if *csvPath == "" {
+		return
+	}
+	f, err := os.Create(*csvPath)
+	if err != nil {
+		t.Fatal(err)
+	}
+	if err := WriteCSV(f, all); err != nil {
+		t.Fatal(err)
+	}
+	if err := f.Close(); err != nil {
+		t.Fatal(err)
+	}
+}
