@@ -1,7 +1,6 @@
 package devices
 
 import (
-	"errors"
 	"fmt"
 	"math"
 	"testing"
@@ -133,14 +132,4 @@ func TestLineFaults(t *testing.T) {
 	wantFaults(t, err, "Length", "want one of them", "Frequency")
 	_, err = LineData{Length: 1}.Params()
 	wantFaults(t, err, "R = 0 and L = 0", "RatedCurrent")
-}
-
-// A lossless inductor has no phasor model in a frame at rest.
-func TestLineWithoutImpedance(t *testing.T) {
-	l := must(NewLine(LineParams{L: 1e-3, RatedCurrent: 1}))
-	q := must(l.WithDetail(QuasiSteady))
-	v := []float64{1, 0, 0, 0}
-	if err := q.Eval(make([]float64, 4), nil, 0, v, nil); !errors.Is(err, errNoImpedance) {
-		t.Errorf("Eval: error %v, want errNoImpedance", err)
-	}
 }

@@ -1,6 +1,7 @@
 package devices
 
 import (
+	"errors"
 	"math"
 	"math/cmplx"
 	"strings"
@@ -147,5 +148,94 @@ func TestUnknownLevel(t *testing.T) {
 	l := must(NewLine(LineParams{R: 1, RatedCurrent: 1}))
 	if _, err := l.WithDetail("phasor"); err == nil || !strings.Contains(err.Error(), `"quasi-steady"`) {
 		t.Errorf("WithDetail(phasor): error %v, want one that lists the levels", err)
+	}
+}
+
+// A lossless inductor has no phasor model in a frame at rest: an error, since
+// no shorter step would help, and no NaN.
+func TestNoImpedance(t *testing.T) {
+	rated := LoadParams{Voltage: 400, Frequency: 50, L: 1e-3}
+	transformer := must(TransformerRating{
+		VA: 1e5, HV: 1e4, LV: 400, Frequency: 50, Group: group("Dyn5"), Impedance: 4, XR: math.Inf(1),
+	}.Params())
+	for name, b := range map[string]facet.Detailed{
+		"line":        must(NewLine(LineParams{L: 1e-3, RatedCurrent: 1})),
+		"load":        must(NewLoad(rated)),
+		"series load": must(NewSeriesLoad(SeriesLoadParams{Voltage: 400, Frequency: 50, L: 1e-3})),
+		"transformer": must(NewTransformer(transformer)),
+		"grid":        must(NewGrid(GridParams{Voltage: 400, Frequency: 50, L: 1e-3})),
+	} {
+		q := quasiSteady(t, b, 0)
+		ports, own := q.Dims()
+		v, flow := make([]float64, ports), make([]float64, ports)
+		v[0] = 1
+		err := q.Eval(flow, make([]float64, own), 0, v, make([]float64, own))
+		if !errors.Is(err, errNoImpedance) || errors.Is(err, solvers.ErrReject) {
+			t.Errorf("%s: error %v, want errNoImpedance", name, err)
+		}
+	}
+}
+
+// TestParams: a device gives its parameters back.
+func TestParams(t *testing.T) {
+	line := LineParams{R: 1, L: 2, C: 3, RatedCurrent: 4}
+	load := LoadParams{Voltage: 1, Frequency: 2, R: 3, L: 4, RL: 5, C: 6}
+	series := SeriesLoadParams{R: 1, L: 2, Voltage: 3, Frequency: 4}
+	capacitor := ShuntCapacitorParams{C: 1, R: 2, Voltage: 3}
+	transformer := must(distribution.Params())
+	grid := GridParams{Voltage: 1, Frequency: 2, R: 3, L: 4, VA: 5}
+	breaker := BreakerParams{Resistance: 1, Open: true}
+	fault := FaultParams{R: 1, L: 2, RatedCurrent: 3, Closed: true}
+	for _, test := range []struct{ got, want any }{
+		{must(NewLine(line)).Params(), line},
+		{must(NewLoad(load)).Params(), load},
+		{must(NewSeriesLoad(series)).Params(), series},
+		{must(NewShuntCapacitor(capacitor)).Params(), capacitor},
+		{must(NewTransformer(transformer)).Params(), transformer},
+		{must(NewGrid(grid)).Params(), grid},
+		{must(NewBreaker(breaker)).Params(), breaker},
+		{must(NewFault(fault)).Params(), fault},
+	} {
+		if test.got != test.want {
+			t.Errorf("%+v, want %+v", test.got, test.want)
+		}
+	}
+}
+
+// Evaluation and Jacobian of the network elements, per device.
+func BenchmarkNetworkElements(b *testing.B) {
+	type device interface {
+		solvers.Block
+		solvers.Differentiable
+	}
+	for _, d := range []struct {
+		name   string
+		device device
+	}{
+		{"line", must(NewLine(LineParams{R: 0.3, L: 1e-3, C: 1e-7, RatedCurrent: 100}))},
+		{"load", must(NewLoad(LoadParams{Voltage: 400, Frequency: 50, R: 10, L: 0.05, RL: 1, C: 1e-5}))},
+		{"transformer", must(NewTransformer(must(distribution.Params())))},
+		{"grid", must(NewGrid(GridParams{Voltage: 400, Frequency: 50, R: 0.01, L: 1e-4}))},
+		{"meter", must(NewFrequencyMeter(FrequencyMeterParams{Voltage: 400, Frequency: 50}))},
+	} {
+		ports, own := d.device.Dims()
+		v, x := make([]float64, ports), make([]float64, own)
+		flow, rate := make([]float64, ports), make([]float64, own)
+		jac := make([]float64, (ports+own)*(ports+own))
+		for k := range v {
+			v[k] = 300 - float64(k)
+		}
+		b.Run(d.name+"/Eval", func(b *testing.B) {
+			for b.Loop() {
+				if err := d.device.Eval(flow, rate, 0, v, x); err != nil {
+					b.Fatal(err)
+				}
+			}
+		})
+		b.Run(d.name+"/Jacobian", func(b *testing.B) {
+			for b.Loop() {
+				d.device.Jacobian(jac, 0, v, x)
+			}
+		})
 	}
 }

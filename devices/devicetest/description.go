@@ -3,6 +3,7 @@ package devicetest
 import (
 	"math"
 	"math/cmplx"
+	"slices"
 	"strings"
 
 	"islet/solvers/facet"
@@ -133,7 +134,41 @@ func checkDescription(t reporter, s *subject) {
 	if d, ok := s.b.(facet.Detailed); ok && d.Detail() != s.level {
 		t.Errorf("Detail: %q after WithDetail(%q)", d.Detail(), s.level)
 	}
-	if sw, ok := s.b.(facet.Switchable); ok && sw.Closed() != s.closing {
-		t.Errorf("Closed: %v after SetClosed(%v)", sw.Closed(), s.closing)
+	if sw, ok := s.b.(facet.Switchable); ok {
+		if sw.Closed() != s.closing {
+			t.Errorf("Closed: %v after SetClosed(%v)", sw.Closed(), s.closing)
+		}
+		checkSwitched(t, s, channels)
+	}
+}
+
+// checkSwitched checks that switching leaves alone what mustn't change in the
+// life of a block: dimensions, masses, unknowns, channels.
+func checkSwitched(t reporter, s *subject, channels []facet.Channel) {
+	t.Helper()
+	b, err := s.fresh()
+	if err != nil {
+		t.Errorf("%v", err)
+		return
+	}
+	b.(facet.Switchable).SetClosed(!s.closing)
+	if ports, own := b.Dims(); ports != s.ports || own != s.own {
+		t.Errorf("Dims: %d, %d, and %d, %d when switched", s.ports, s.own, ports, own)
+		return
+	}
+	d := b.(facet.Described).Describe()
+	if len(d.Terminals) != len(s.d.Terminals) {
+		t.Errorf("Describe: %d terminals, %d when switched", len(s.d.Terminals), len(d.Terminals))
+	}
+	if !slices.Equal(d.Unknowns, s.d.Unknowns) {
+		t.Errorf("Describe: unknowns %v, %v when switched", s.d.Unknowns, d.Unknowns)
+	}
+	port, own := floats(s.ports), floats(s.own)
+	b.Mass(port, own)
+	if !sameBits(port, s.portMass) || !sameBits(own, s.mass) {
+		t.Errorf("Mass: %v, %v, and %v, %v when switched", s.portMass, s.mass, port, own)
+	}
+	if m, ok := b.(facet.Measurer); ok && !slices.Equal(m.Channels(), channels) {
+		t.Errorf("Channels: %v, %v when switched", channels, m.Channels())
 	}
 }

@@ -3,9 +3,11 @@
 // no engine, and holds for a user's own device as for the shipped ones:
 //
 //	func TestHeater(t *testing.T) {
-//		devicetest.Run(t, func() solvers.Block { return NewHeater(3e3, 400) },
+//		devicetest.Run(t, func() solvers.Block { return heater{ohms: 20} },
 //			devicetest.Options{Voltages: []float64{326.6}})
 //	}
+//
+// (example_test.go has the whole device, which needs no more than one file.)
 //
 // Run takes the device through every level of detail and every switch position
 // it has and checks, at random states, that what it says about itself is true:

@@ -54,6 +54,10 @@ func (y *toy) Mass(port, own []float64) {
 		copy(own, []float64{toyL, toyL, 1, 0})
 	}
 	switch y.bug {
+	case "mass changes when switched":
+		if !y.closed {
+			own[2] = 2
+		}
 	case "mass of one axis":
 		port[2] = 0
 	case "negative mass":
@@ -224,6 +228,10 @@ func (y *toy) Describe() facet.Description {
 		d.Terminals[0].Flow = facet.FlowHeld
 	}
 	switch y.bug {
+	case "unknowns change when switched":
+		if !y.closed {
+			d.Unknowns[3].Name = "cubed"
+		}
 	case "no kind":
 		d.Kind = ""
 	case "terminal missing":
@@ -271,6 +279,10 @@ func (y *toy) Channels() []facet.Channel {
 		{Name: "frequency", Unit: "Hz", Doc: "of the source"},
 	}
 	switch y.bug {
+	case "channels change when switched":
+		if !y.closed {
+			c = c[:4]
+		}
 	case "channel named as an unknown":
 		c[4].Name = "delta"
 	case "channel without sign":
