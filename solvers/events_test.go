@@ -31,8 +31,9 @@ func record(t testing.TB, c *tp.Case, m solvers.Method, o solvers.Options, times
 		for _, hit := range hits {
 			r.events = append(r.events, tp.Event{Time: at, Root: hit.Root, Direction: hit.Direction})
 		}
-		if len(r.events) > 10000 {
-			t.Fatalf("%s: more than ten thousand events", c.Name)
+		if len(r.events) >= 10000 {
+			t.Errorf("%s, %s: ten thousand events up to %.9g", c.Name, m.Name(), at)
+			return solvers.Stop, nil
 		}
 		if c.Handlers.AtRoot == nil {
 			return solvers.Continue, nil
@@ -547,7 +548,11 @@ func TestSliding(t *testing.T) {
 				}
 			}
 			r := record(t, c, m, same(1e-6))
-			if len(r.events) == 0 || math.Abs(r.events[0].Time-1) > 1e-9 || r.events[0].Direction != solvers.Rising {
+			bound := 1e-9
+			if !remembers {
+				bound = 1e-5 // f is discontinuous within the step that is cut
+			}
+			if len(r.events) == 0 || math.Abs(r.events[0].Time-1) > bound || r.events[0].Direction != solvers.Rising {
 				t.Fatalf("%s, remembers %v: events %+v, want the first at 1, rising", m.Name(), remembers, r.events)
 			}
 			var chatter *solvers.ChatterError
