@@ -36,6 +36,9 @@ type Bus struct {
 // Name is the name the bus was made with.
 func (b Bus) Name() string { return b.sys.buses[b.index].name }
 
+// Rated is the bus's rated line-line rms voltage, V.
+func (b Bus) Rated() float64 { return b.sys.buses[b.index].rated }
+
 // member is a device in a system, with its facets.
 type member struct {
 	name  string

@@ -1,0 +1,153 @@
+package main
+
+import (
+	"context"
+	"fmt"
+	"os"
+	"path/filepath"
+	"sort"
+	"strings"
+
+	"islet/cases"
+	"islet/engine"
+	"islet/engine/compare"
+)
+
+func compareFlags(c *call) {
+	studyFlags(c)
+	c.fs.Var(&c.settings, "setting", "`NAME: PATTERN=LEVEL, ...`: a setting to compare, applied after --detail; may be repeated (default: every level that the devices offer, each on all devices that offer it)")
+	c.fs.Var(&c.record, "record", "`PATTERN`: channels to compare; may be repeated")
+	c.fs.IntVar(&c.repeat, "repeat", 5, "timed runs of each setting, taken in turns; the median counts")
+	c.fs.StringVar(&c.out, "out", "", "write table (text), deviations (CSV) and results (JSON) into `DIR`")
+	c.fs.BoolVar(&c.quiet, "quiet", false, "no progress")
+	c.fs.BoolVar(&c.asJSON, "json", false, "print JSON instead of text")
+	c.fs.BoolVar(&c.asCSV, "csv", false, "print CSV instead of text")
+}
+
+func cmdCompare(ctx context.Context, c *call) error {
+	k, err := c.openCase()
+	if err != nil {
+		return err
+	}
+	o, err := c.engineOptions()
+	if err != nil {
+		return err
+	}
+	base, err := rules(c.details)
+	if err != nil {
+		return err
+	}
+	setting := func(name string, extra []cases.DetailRule) compare.Setting {
+		all := append(append([]cases.DetailRule(nil), base...), extra...)
+		return compare.Setting{Name: name, Start: func(o *engine.Options) (*engine.Simulation, error) { return k.Start(o, all...) }}
+	}
+	settings := []compare.Setting{setting("as given", nil)}
+	for _, s := range c.settings {
+		name, spec, ok := strings.Cut(s, ":")
+		if !ok {
+			return fmt.Errorf("%w: --setting %q: want NAME: PATTERN=LEVEL, ...", errUsage, s)
+		}
+		extra, err := rules(strings.Split(spec, ","))
+		if err != nil {
+			return err
+		}
+		settings = append(settings, setting(strings.TrimSpace(name), extra))
+	}
+	if len(c.settings) == 0 {
+		for _, s := range everyLevel(k) {
+			settings = append(settings, setting(s.name, s.rules))
+		}
+	}
+	co := compare.Options{Until: k.Until, Sample: c.sample, Repetitions: c.repeat, Engine: o}
+	if c.until != 0 {
+		co.Until = c.until
+	}
+	if len(c.record) > 0 {
+		co.Channels = c.record
+	}
+	hook, clear := c.progress()
+	if hook != nil {
+		co.Progress = func(name string, run, of int) { hook(float64(run-1), float64(of)) }
+	}
+	result, err := compare.Run(ctx, settings, co)
+	clear()
+	if err != nil {
+		return startError(err)
+	}
+	switch {
+	case c.asJSON:
+		err = result.WriteJSON(c.stdout)
+	case c.asCSV:
+		err = result.WriteCSV(c.stdout)
+	default:
+		fmt.Fprintf(c.stdout, "%s: %s\n\n", k.Name, k.Title)
+		err = result.WriteText(c.stdout)
+	}
+	if err != nil || c.out == "" {
+		return err
+	}
+	return writeComparison(c, result)
+}
+
+type levelSetting struct {
+	name  string
+	rules []cases.DetailRule
+}
+
+// everyLevel lists, for each level that some devices offer beyond their
+// present one, the setting that puts all of those at it.
+func everyLevel(k *cases.Case) []levelSetting {
+	at := make(map[string][]cases.DetailRule)
+	rank := make(map[string]int)
+	for name, levels := range k.Details() {
+		for i, l := range levels {
+			if i == 0 {
+				continue // the fullest
+			}
+			at[l] = append(at[l], cases.DetailRule{Pattern: name, Level: l})
+			rank[l] = max(rank[l], i)
+		}
+	}
+	var out []levelSetting
+	for l, r := range at {
+		sort.Slice(r, func(i, j int) bool { return r[i].Pattern < r[j].Pattern })
+		out = append(out, levelSetting{l, r})
+	}
+	sort.Slice(out, func(i, j int) bool {
+		if rank[out[i].name] != rank[out[j].name] {
+			return rank[out[i].name] < rank[out[j].name]
+		}
+		return out[i].name < out[j].name
+	})
+	return out
+}
+
+func writeComparison(c *call, result *compare.Comparison) error {
+	if err := os.MkdirAll(c.out, 0o777); err != nil {
+		return err
+	}
+	for _, f := range []struct {
+		name  string
+		write func(f *os.File) error
+	}{
+		{"comparison.txt", func(f *os.File) error { return result.WriteText(f) }},
+		{"comparison.csv", func(f *os.File) error { return result.WriteCSV(f) }},
+		{"comparison.json", func(f *os.File) error { return result.WriteJSON(f) }},
+	} {
+		file, err := os.Create(filepath.Join(c.out, f.name))
+		if err != nil {
+			return err
+		}
+		if err := f.write(file); err != nil {
+			file.Close()
+			return err
+		}
+		if err := file.Close(); err != nil {
+			return err
+		}
+	}
+	if !c.asJSON && !c.asCSV {
+		fmt.Fprintf(c.stdout, "written to %s: comparison.txt, comparison.csv, comparison.json\n", c.out)
+	}
+	return nil
+}
