@@ -261,6 +261,7 @@ type recorder struct {
 	y      []float64 // interpolated state
 	sample int       // number of the next uniform sample
 	fixed  []int     // columns of probes that are not measured in groups
+	speed  []float64 // frequency of every island, Hz, NaN if not yet known in this row
 }
 
 // group is a device whose measured quantities are recorded.
@@ -377,8 +378,16 @@ func (r *recorder) row(t float64, y []float64, before bool) {
 		tr.data[i] = append(tr.data[i], 0)
 	}
 	n := len(tr.Time) - 1
+	for k := range r.speed {
+		r.speed[k] = math.NaN()
+	}
 	for _, c := range r.fixed {
-		tr.data[c][n] = r.rows[c].value(t, y)
+		p := &r.rows[c]
+		if p.kind == fromBus && p.index == busFrequency {
+			tr.data[c][n] = r.frequency(p.bus, y)
+			continue
+		}
+		tr.data[c][n] = p.value(t, y)
 	}
 	for i := range r.groups {
 		g := &r.groups[i]
@@ -395,6 +404,21 @@ func (r *recorder) row(t float64, y []float64, before bool) {
 			}
 		}
 	}
+}
+
+// frequency is the frequency of a bus's island, computed once a row.
+func (r *recorder) frequency(b int, y []float64) float64 {
+	k := r.m.topo.busOf[b]
+	if k < 0 {
+		return 0
+	}
+	for len(r.speed) <= k {
+		r.speed = append(r.speed, math.NaN())
+	}
+	if r.speed[k] != r.speed[k] {
+		r.speed[k] = r.m.islandSpeed(&r.m.topo.islands[k], y) / (2 * math.Pi)
+	}
+	return r.speed[k]
 }
 
 // step records what falls into the last step.
