@@ -4,6 +4,8 @@ import (
 	"context"
 	"errors"
 	"math"
+	"math/rand/v2"
+	"sort"
 	"testing"
 
 	"islet/solvers"
@@ -70,13 +72,14 @@ func locate(t testing.TB, c *tp.Case, m solvers.Method, o solvers.Options) []tp.
 }
 
 // compare holds events against those known; times may differ by tol, relative
-// to the time or absolutely.
-func compare(t testing.TB, what string, got, want []tp.Event, tol float64, relative bool) {
+// to the time or absolutely. It reports the first difference, and whether there
+// was none.
+func compare(t testing.TB, what string, got, want []tp.Event, tol float64, relative bool) bool {
 	t.Helper()
 	for i, w := range want {
 		if i >= len(got) {
 			t.Errorf("%s: %d events, want %d", what, len(got), len(want))
-			return
+			return false
 		}
 		g, bound := got[i], tol
 		if relative {
@@ -85,12 +88,14 @@ func compare(t testing.TB, what string, got, want []tp.Event, tol float64, relat
 		if g.Root != w.Root || g.Direction != w.Direction || !(math.Abs(g.Time-w.Time) <= bound) {
 			t.Errorf("%s: event %d is root %d direction %+d at %.16g, want root %d direction %+d at %.16g (off by %.2g)",
 				what, i, g.Root, g.Direction, g.Time, w.Root, w.Direction, w.Time, g.Time-w.Time)
-			return
+			return false
 		}
 	}
 	if len(got) > len(want) {
 		t.Errorf("%s: %d events, want %d; the first too many is %+v", what, len(got), len(want), got[len(want)])
+		return false
 	}
+	return true
 }
 
 // states holds samples against the closed form of c.
@@ -460,7 +465,7 @@ func TestRootTwice(t *testing.T) {
 			}}
 			got := locate(t, c, m, same(1e-8))
 			if len(got) != 2 || got[0].Root == got[1].Root || got[0].Time != got[1].Time {
-				t.Errorf("%s, %s: events %+v, want each root once at one time", c.Name, m.Name(), got)
+				t.Errorf("%s, %s: %d events, first %+v, want each root once at one time", c.Name, m.Name(), len(got), got[:min(3, len(got))])
 			}
 		}
 	}
@@ -527,6 +532,108 @@ func TestEventAtEndResumed(t *testing.T) {
 	}
 }
 
+// TestRootAtStop has a root at the time of a stop: both are handled, once each.
+func TestRootAtStop(t *testing.T) {
+	for _, m := range adaptive {
+		for _, act := range []solvers.Action{solvers.Continue, solvers.Jump} {
+			stops := 0
+			c := tp.EventAtEnd()
+			c.End = 2
+			c.Handlers.Stops = []float64{0.5, 1, 1.5}
+			c.Handlers.AtRoot = func(t float64, hits []solvers.Hit, y []float64) (solvers.Action, error) { return act, nil }
+			c.Handlers.AtStop = func(t float64, y []float64) (solvers.Action, error) {
+				stops++
+				return act, nil
+			}
+			compare(t, "root at a stop, "+m.Name(), locate(t, c, m, same(1e-6)), c.Events, 1e-14, false)
+			if stops != 3 {
+				t.Errorf("%s: %d stops, want 3", m.Name(), stops)
+			}
+		}
+	}
+}
+
+// TestForcedRoots locates the roots of an algebraic unknown that follows a
+// function of time, 0 = z - sin t beside x' = -x at rest: z = 1/2 at pi/6,
+// 5 pi/6 and a full turn later.
+func TestForcedRoots(t *testing.T) {
+	var want []tp.Event
+	for turn := range 2 {
+		start := 2 * math.Pi * float64(turn)
+		want = append(want,
+			tp.Event{Time: start + math.Pi/6, Direction: solvers.Rising},
+			tp.Event{Time: start + 5*math.Pi/6, Direction: solvers.Falling})
+	}
+	for _, m := range adaptive {
+		for _, tol := range []float64{1e-4, 1e-8} {
+			c := forced()
+			c.Handlers.Roots = &solvers.Roots{
+				N:     1,
+				Func:  func(dst []float64, t float64, y []float64) { dst[0] = y[1] - 0.5 },
+				Needs: []int{1},
+			}
+			compare(t, c.Name+" "+m.Name(), locate(t, c, m, same(tol)), want, 10*tol, false)
+		}
+	}
+}
+
+// TestRandomRoots has up to four root functions at once on y = t, polynomials
+// with known zeros and restricted directions, no two zeros of one function
+// closer than three of the points at which roots are looked for.
+func TestRandomRoots(t *testing.T) {
+	rng := rand.New(rand.NewPCG(3, 4))
+	failures := 0
+	for trial := range 400 {
+		c := &tp.Case{
+			Name: "random-roots",
+			Problem: &solvers.Problem{
+				N: 1,
+				F: func(dst []float64, t float64, y []float64) error {
+					dst[0] = 1
+					return nil
+				},
+				Autonomous: true,
+			},
+			End:     2.5,
+			Initial: []float64{0},
+		}
+		n := 1 + rng.IntN(4)
+		zeros, first := make([][]float64, n), make([]float64, n)
+		roots := &solvers.Roots{N: n, Func: func(dst []float64, t float64, y []float64) {
+			for i := range dst {
+				dst[i] = first[i]
+				for _, z := range zeros[i] {
+					dst[i] *= 1 - y[0]/z
+				}
+			}
+		}}
+		for i := range n {
+			want := solvers.Direction(rng.IntN(3) - 1)
+			roots.Direction = append(roots.Direction, want)
+			way := solvers.Direction(2*rng.IntN(2) - 1) // of the first zero
+			first[i] = -float64(way)
+			for z := 0.46 * rng.Float64(); len(zeros[i]) < 5; way = -way {
+				z += 0.16 + 0.5*rng.Float64()
+				zeros[i] = append(zeros[i], z)
+				if z < c.End && (want == solvers.Both || want == way) {
+					c.Events = append(c.Events, tp.Event{Time: z, Root: i, Direction: way})
+				}
+			}
+		}
+		sort.Slice(c.Events, func(i, j int) bool { return c.Events[i].Time < c.Events[j].Time })
+		action := solvers.Action(trial % 2) // Continue or Jump
+		c.Handlers.Roots = roots
+		c.Handlers.AtRoot = func(t float64, hits []solvers.Hit, y []float64) (solvers.Action, error) { return action, nil }
+		m := adaptive[trial/2%2]
+		got := locate(t, c, m, solvers.Options{RelTol: 1e-6, MaxStep: 0.05 + 0.2*rng.Float64()})
+		if !compare(t, c.Name+" "+m.Name(), got, c.Events, 1e-12, false) {
+			if failures++; failures == 3 {
+				t.Fatalf("given up at the third failure, trial %d of 400", trial)
+			}
+		}
+	}
+}
+
 // TestSliding pushes a switch back from both sides, with a right-hand side that
 // remembers its side and with one that looks at the sign of x. The event at
 // t = 1 must be found; then x must slide at 0, or the run stop with an error
@@ -553,7 +660,7 @@ func TestSliding(t *testing.T) {
 				bound = 1e-5 // f is discontinuous within the step that is cut
 			}
 			if len(r.events) == 0 || math.Abs(r.events[0].Time-1) > bound || r.events[0].Direction != solvers.Rising {
-				t.Fatalf("%s, remembers %v: events %+v, want the first at 1, rising", m.Name(), remembers, r.events)
+				t.Fatalf("%s, remembers %v: %d events, first %+v, want the first at 1, rising", m.Name(), remembers, len(r.events), r.events[:min(1, len(r.events))])
 			}
 			var chatter *solvers.ChatterError
 			switch x := r.stepper.State()[0]; {
