@@ -155,7 +155,7 @@ type Adjustable interface {
 }
 
 // Stepped is an [Adjustable] some of whose setpoints act by a jump of an
-// unknown (the angle of a source). The engine calls ApplyJumps once after Set.
+// unknown (the angle of a source). The engine calls ApplyJumps once after Set and, on a [Switchable], after SetClosed.
 type Stepped interface {
 	// ApplyJumps adds pending jumps to the own unknowns x.
 	ApplyJumps(x []float64)
