@@ -152,3 +152,18 @@ func TestTrapezoidalSine(t *testing.T) {
 		}
 	}
 }
+
+// TestTrapezoidalTransistor measures the order on the amplifier, whose mass
+// matrix is singular without a zero row, against the published end state.
+func TestTrapezoidalTransistor(t *testing.T) {
+	var errs []float64
+	for _, h := range []float64{8e-5, 4e-5, 2e-5} {
+		c := tp.TransistorAmplifier()
+		s := begin(t, c, solvers.Trapezoidal, solvers.Options{RelTol: 1e-9, AbsTol: 1e-9, MaxStep: h})
+		reach(t, s, c.End)
+		errs = append(errs, maxError(s.State(), c.At(c.End)))
+	}
+	if got := slope(errs); math.Abs(got-2) > 0.05 || errs[0] > 1e-3 {
+		t.Errorf("order %.3f, want 2; errors %.3g", got, errs)
+	}
+}
