@@ -17,8 +17,8 @@ var (
 	csvPath = flag.String("csv", "", "write the raw data of the comparison to this file")
 )
 
-// tight is the setup of references: IDA, so that no method is measured by
-// itself alone, at a tolerance where the error is far below all others.
+// reference is the setup of reference runs: IDA, so that our methods are not
+// measured by themselves, at a tolerance where its error is far below theirs.
 func reference(rel float64) Setup {
 	return Setup{Name: "reference", Method: sundials.IDA, Solver: solvers.Options{RelTol: rel}}
 }
@@ -41,7 +41,9 @@ func TestCompare(t *testing.T) {
 		{Name: "Rodas5P, turning frame", TurningFrame: true},
 		{Name: "Rodas5P, general LU", GeneralLU: true},
 		{Name: "IDA + KLU", Method: sundials.IDA},
-		{Name: "IDA + KLU with AMD", Method: sundials.Method{Ordering: sundials.AMD}},
+		// Its orders above 2 are unstable on the filters' weakly damped
+		// resonances, as every BDF's.
+		{Name: "IDA + KLU, order <= 2", Method: sundials.Method{MaxOrder: 2}},
 	}
 	tols, repeat := []float64{1e-4}, 1
 	if *full {
