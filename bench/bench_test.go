@@ -131,7 +131,7 @@ func TestStepAllocatesNothing(t *testing.T) {
 	}
 }
 
-func own() []Study { return []Study{MicrogridStudy(10), MicrogridStudy(100)} }
+func own() []Study { return []Study{FeederStudy(), MicrogridStudy(10), MicrogridStudy(100)} }
 
 func TestMicrogridRefusesTooFew(t *testing.T) {
 	if _, err := Microgrid(3); err == nil {

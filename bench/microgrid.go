@@ -13,9 +13,8 @@ import (
 // Microgrid builds an islanded 400 V microgrid of any number of inverters (at
 // least 4), invented for this benchmark: four inverters of 20 to 50 kVA a bus,
 // 70 % of them grid-forming with droop and 30 % followers at half their
-// rating, buses in a square mesh of short cables with their capacitance left
-// out, so that inductors alone would meet at them, and at every bus a parallel
-// RLC load of about 60 % of what the bus can give. Every device at full
+// rating, buses in a square mesh of short cables, and at every bus a parallel
+// R-L load of about 60 % of what the bus can give. Every device at full
 // detail. The same number gives the same network.
 func Microgrid(inverters int) (*engine.System, error) {
 	if inverters < 4 {
