@@ -37,6 +37,10 @@ type GridFollowingParams struct {
 	Kff  float64 // feed-forward of v_m to the bridge's voltage, 0 to 1
 	IMax float64 // largest |i_ref|, A peak, > 0; +Inf for no limit
 
+	// Priority tells which part of i_ref gives way to IMax; "" is [AngleKept]. The d
+	// part is the active current.
+	Priority LimitPriority
+
 	Filter LCL // LCL, or L with Cf = Lg = Rg = 0
 }
 
@@ -64,6 +68,7 @@ func (p GridFollowingParams) Validate() error {
 	f.notNegative("Kic", p.Kic, "V/(A s)")
 	f.within("Kff", p.Kff, 0, 1, "")
 	checkLimit(f, "IMax", p.IMax, "A")
+	p.Priority.check(f)
 	p.Filter.check(f, true)
 	return f.err()
 }
@@ -79,7 +84,7 @@ func (p GridFollowingParams) Validate() error {
 //	           d delta/dt = omega - omega_f           omega = omega_0 + dw, dw = dw* kept within limits
 //	reference  dv_md/dt = w_v (v_m.d - v_md)
 //	           i_ref = (2/3) (P* - j Q*) / max(v_md, floor) + j omega_0 C_f v_c
-//	current    dgamma/dt = i_ref' - i_f               |i_ref'| = min(|i_ref|, I_max), angle kept
+//	current    dgamma/dt = i_ref' - i_f               |i_ref'| = min(|i_ref|, I_max) by a [LimitPriority]
 //	           v_i = K_pc (i_ref' - i_f) + K_ic gamma + j omega_0 L_f i_f + K_ff v_m
 //	filter     LCL as in [GridForming]; L, in the network frame:
 //	           L_f di_g/dt = e^{j delta} v_i - v_bus - (R_f + j omega_f L_f) i_g,    i_f = e^{-j delta} i_g
@@ -99,29 +104,65 @@ func (p GridFollowingParams) Validate() error {
 // i_g (A), a network-frame pair, the current out of the inverter. The flow into
 // the block is -i_g.
 //
-// Detail "primary only" keeps delta, eps and v_md. The current is at its
-// reference, i_f = i_ref'. With an LCL filter v_c stays as an algebraic unknown,
-// since the PLL reads it:
+// # Detail
+//
+// Each level drops the derivatives of a further group:
+//
+//	current loop gone   without gamma, i_f (with an L filter i_g):  i_f = i_ref'
+//	primary only        without v_c, i_g: the PLL (delta, eps) and v_md
+//	injection only      without the PLL's dynamics: v_md alone
+//
+// The names are those of [GridForming], the PLL being a follower's primary control;
+// there is no voltage loop to drop. With an L filter "current loop gone" and
+// "primary only" are the same equations. At "primary only" an LCL filter's v_c stays
+// as an algebraic unknown, since the PLL reads it:
 //
 //	i_g = i_ref' - j omega C_f v_c        0 = v_c - e^{-j delta} v_bus - (R_g + j omega_f L_g) i_g
 //
-// Either way the flow is an injection: at nominal speed the capacitor's current
-// cancels out of i_g, which then doesn't depend on the terminal voltage and can't
-// fix that of a bus of inductors. With OmitCapacitor a small admittance to ground
+// At "injection only" the PLL is in lock: delta is the angle of v_m, v_mq = 0, omega
+// = omega_f (zero order: the angle doesn't move in the network frame), eps is gone
+// and with it the limit of the speed. What remains is a current in line with v_m and
+// of the size that the filtered v_md gives:
+//
+//	i_g e^{-j delta} = (2/3) (P* - j Q*)/max(v_md, floor) + ...   limited    dv_md/dt = w_v (v_m.d - v_md)
+//	0 = Im(e^{-j delta} v_bus)/max(|v_bus|, floor)                           L filter
+//	0 = v_c.d - e^{-j delta} v_bus - (R_g + j omega_f L_g) i_g               LCL filter, v_c.q = 0
+//
+// with delta, and v_c.d of an LCL filter, as algebraic unknowns: they tell which of
+// the two angles the lock is at, and a terminal voltage of zero has no angle, where
+// the equation for delta is singular.
+//
+// At both coarsest levels (and with an L filter without its current loop) the flow is
+// an injection: at nominal speed the capacitor's current cancels out of i_g, which
+// then doesn't depend on the terminal voltage, or on its angle alone, and can't fix
+// that of a bus of inductors. With OmitCapacitor a small admittance to ground
 // remains, j omega C_f behind L_g. It is declared an injection all the same: the
 // voltage it would fix, i/(omega C_f), is one no equipment survives.
 //
+// Where K_ic is 0 there is no level below "full" (the current then settles off its
+// reference), and where K_i is 0 no "injection only".
+//
 // A GridFollowing is no use to two goroutines at once.
 type GridFollowing struct {
-	par    GridFollowingParams
-	detail string
-	lcl    bool
+	par     GridFollowingParams
+	limiter limiter
+	detail  string
+	lcl     bool
+	layout  followingLayout
 
 	pRef, qRef input
 	frame      float64 // omega_f, rad/s
 
 	iBase    float64
 	sparsity *sparsity
+}
+
+// followingLayout tells where in x the unknowns are that depend on the level of
+// detail; -1 for those left out.
+type followingLayout struct {
+	eps, vMD, gamma, iF, vC, iG int
+	own                         int
+	locked                      bool // the PLL is in lock: no eps, v_c.d alone
 }
 
 var (
@@ -136,6 +177,7 @@ var (
 	_ facet.Starter              = (*GridFollowing)(nil)
 	_ facet.Detailed             = (*GridFollowing)(nil)
 	_ facet.Sized                = (*GridFollowing)(nil)
+	_ facet.Kinked               = (*GridFollowing)(nil)
 	_ encoding.BinaryAppender    = (*GridFollowing)(nil)
 	_ encoding.BinaryUnmarshaler = (*GridFollowing)(nil)
 )
@@ -147,11 +189,12 @@ func NewGridFollowing(p GridFollowingParams) (*GridFollowing, error) {
 		return nil, err
 	}
 	g := &GridFollowing{
-		par:   p,
-		lcl:   !p.Filter.isL(),
-		pRef:  constant(p.P),
-		qRef:  constant(p.Q),
-		iBase: p.Rating / (1.5 * p.V0),
+		par:     p,
+		limiter: limiter{max: p.IMax, priority: p.Priority},
+		lcl:     !p.Filter.isL(),
+		pRef:    constant(p.P),
+		qRef:    constant(p.Q),
+		iBase:   p.Rating / (1.5 * p.V0),
 	}
 	g.setDetail(Full)
 	return g, nil
@@ -160,7 +203,27 @@ func NewGridFollowing(p GridFollowingParams) (*GridFollowing, error) {
 // setDetail builds what depends on the level of detail.
 func (g *GridFollowing) setDetail(level string) {
 	g.detail = level
-	_, own := g.Dims()
+	l := followingLayout{eps: -1, gamma: -1, iF: -1, vC: -1, iG: -1, own: 1}
+	l.locked = level == InjectionOnly
+	place := func(at *int, kept bool, size int) {
+		if kept {
+			*at = l.own
+			l.own += size
+		}
+	}
+	full, wired := level == Full, level == Full || level == CurrentLoopGone && g.lcl
+	place(&l.eps, !l.locked, 1)
+	place(&l.vMD, true, 1)
+	place(&l.gamma, full, 2)
+	place(&l.iF, full && g.lcl, 2)
+	if l.locked {
+		place(&l.vC, g.lcl, 1)
+	} else {
+		place(&l.vC, g.lcl, 2)
+	}
+	place(&l.iG, wired, 2)
+	g.layout = l
+	own := l.own
 	unknowns := g.Describe().Unknowns
 	var (
 		rnd   = scatter(2)
@@ -183,43 +246,49 @@ func (g *GridFollowing) setDetail(level string) {
 }
 
 // full tells whether all unknowns are present.
-func (g *GridFollowing) full() bool { return g.detail == Full }
+func (g *GridFollowing) full() bool { return g.layout.gamma >= 0 }
+
+// wired tells whether i_g is an unknown.
+func (g *GridFollowing) wired() bool { return g.layout.iG >= 0 }
 
 // Params returns the parameters the inverter was built with; setpoints moved
 // since then don't show in them.
 func (g *GridFollowing) Params() GridFollowingParams { return g.par }
 
-// Dims returns 2 port components and the number of unknowns: 11 with an LCL
-// filter, 7 with an L filter; 5 and 3 at detail "primary only".
-func (g *GridFollowing) Dims() (ports, own int) {
-	switch {
-	case g.full() && g.lcl:
-		return 2, 11
-	case g.full():
-		return 2, 7
-	case g.lcl:
-		return 2, 5
-	}
-	return 2, 3
-}
+// Dims returns 2 port components and the number of unknowns: with an LCL filter 11,
+// 7, 5 and 3 at the levels from fine to coarse, with an L filter 7, 3, 3 and 2.
+func (g *GridFollowing) Dims() (ports, own int) { return 2, g.layout.own }
 
-// Mass writes no mass at the terminal, and L_f, C_f and L_g for the filter; 0
-// for the algebraic v_c of detail "primary only".
+// Mass writes no mass at the terminal, L_f, C_f and L_g for the filter, and 0 for
+// the algebraic unknowns of the two coarsest levels.
 func (g *GridFollowing) Mass(port, own []float64) {
 	clear(port)
 	for i := range own {
 		own[i] = 1
 	}
-	f := &g.par.Filter
+	l, f := &g.layout, &g.par.Filter
+	if l.iF >= 0 {
+		own[l.iF], own[l.iF+1] = f.Lf, f.Lf
+	}
 	switch {
-	case g.full() && g.lcl:
-		own[5], own[6] = f.Lf, f.Lf
-		own[7], own[8] = f.Cf, f.Cf
-		own[9], own[10] = f.Lg, f.Lg
-	case g.full():
-		own[5], own[6] = f.Lf, f.Lf
-	case g.lcl:
-		own[3], own[4] = 0, 0
+	case l.locked:
+		own[0] = 0
+		if l.vC >= 0 {
+			own[l.vC] = 0
+		}
+	case l.vC >= 0:
+		c := f.Cf
+		if !g.wired() {
+			c = 0
+		}
+		own[l.vC], own[l.vC+1] = c, c
+	}
+	if l.iG >= 0 {
+		m := f.Lg
+		if !g.lcl {
+			m = f.Lf
+		}
+		own[l.iG], own[l.iG+1] = m, m
 	}
 }
 
@@ -231,25 +300,33 @@ func (g *GridFollowing) Describe() facet.Description {
 	p := &g.par
 	// The integrator counts in terms of the speed it orders, to the limit.
 	swing := min(p.SpeedLimit, 0.1*p.Omega0)
-	u := []facet.Unknown{
-		{Name: "delta", Unit: "rad", Base: 1, Frame: facet.Angle, Dynamics: "PLL"},
-		{Name: "eps", Unit: "s", Base: ratio(swing, p.Ki, 1/p.Omega0), Dynamics: "PLL"},
-		{Name: "v_md", Unit: "V", Base: p.V0, Dynamics: "primary control"},
+	l := &g.layout
+	u := []facet.Unknown{{Name: "delta", Unit: "rad", Base: 1, Frame: facet.Angle, Dynamics: dynPLL}}
+	if l.eps >= 0 {
+		u = append(u, facet.Unknown{Name: "eps", Unit: "s", Base: ratio(swing, p.Ki, 1/p.Omega0), Dynamics: dynPLL})
 	}
-	add := func(q [2]facet.Unknown) { u = append(u, q[:]...) }
-	flow := facet.FlowState
-	if g.full() {
-		add(statePair("gamma", "A s", ratio(p.V0, p.Kic, g.iBase/p.Omega0), false, "current loop"))
-		if g.lcl {
-			add(statePair("i_f", "A", g.iBase, false, "filter"))
-			add(statePair("v_c", "V", p.V0, false, "filter"))
+	u = append(u, facet.Unknown{Name: "v_md", Unit: "V", Base: p.V0, Dynamics: dynPrimary})
+	add := func(at int, q [2]facet.Unknown) {
+		if at >= 0 {
+			u = append(u, q[:]...)
 		}
-		add(statePair("i_g", "A", g.iBase, true, "network"))
+	}
+	add(l.gamma, statePair("gamma", "A s", ratio(p.V0, p.Kic, g.iBase/p.Omega0), false, dynCurrent))
+	add(l.iF, statePair("i_f", "A", g.iBase, false, dynCurrent))
+	vC := statePair("v_c", "V", p.V0, false, dynFilter)
+	if l.locked && l.vC >= 0 {
+		u = append(u, vC[0])
 	} else {
-		flow = facet.FlowInjected
-		if g.lcl {
-			add(statePair("v_c", "V", p.V0, false, "filter"))
-		}
+		add(l.vC, vC)
+	}
+	wire := dynNetwork
+	if !g.lcl {
+		wire = dynCurrent
+	}
+	add(l.iG, statePair("i_g", "A", g.iBase, true, wire))
+	flow := facet.FlowInjected
+	if g.wired() {
+		flow = facet.FlowState
 	}
 	return facet.Description{
 		Kind:      "grid-following inverter",
@@ -286,23 +363,20 @@ func (g *GridFollowing) at(pt *followingPoint, u orders, v, x []float64) {
 	p, f := &g.par, &g.par.Filter
 	pt.e = rotor(x[0])
 	ei := conj(pt.e)
+	l := &g.layout
 	switch {
-	case g.full() && g.lcl:
-		x = x[:11]
-		pt.gamma, pt.iF, pt.vC, pt.iNet = pair(x, 3), pair(x, 5), pair(x, 7), pair(x, 9)
-		pt.iG = ei * pt.iNet
+	case l.locked && g.lcl:
+		pt.vC = complex(x[l.vC], 0)
 		pt.vM = pt.vC
-	case g.full():
-		x = x[:7]
-		pt.gamma, pt.iNet = pair(x, 3), pair(x, 5)
-		pt.iG = ei * pt.iNet
-		pt.iF = pt.iG
-		pt.vM = ei * pair(v, 0)
 	case g.lcl:
-		pt.vC = pair(x, 3)
+		pt.vC = pair(x, l.vC)
 		pt.vM = pt.vC
 	default:
 		pt.vM = ei * pair(v, 0)
+	}
+	if l.iG >= 0 {
+		pt.iNet = pair(x, l.iG)
+		pt.iG = ei * pt.iNet
 	}
 
 	if p.FixedAmplitude {
@@ -311,19 +385,29 @@ func (g *GridFollowing) at(pt *followingPoint, u orders, v, x []float64) {
 		pt.amplitude = max(abs(pt.vM), p.VFloor)
 	}
 	pt.y = imag(pt.vM) / pt.amplitude
-	pt.wanted = p.Kp*pt.y + p.Ki*x[1]
-	pt.omega = p.Omega0 + min(max(pt.wanted, -p.SpeedLimit), p.SpeedLimit)
-	pt.vD = max(x[2], p.VFloor)
+	if l.locked {
+		pt.omega = g.frame
+	} else {
+		pt.wanted = p.Kp*pt.y + p.Ki*x[l.eps]
+		pt.omega = p.Omega0 + min(max(pt.wanted, -p.SpeedLimit), p.SpeedLimit)
+	}
+	pt.vD = max(x[l.vMD], p.VFloor)
 	pt.iRef = complex(u.p/(1.5*pt.vD), -u.q/(1.5*pt.vD)) + jtimes(g.compensation(), pt.vC)
-	pt.lim = saturate(pt.iRef, p.IMax)
-	if g.full() {
+	pt.lim = g.limiter.apply(pt.iRef)
+	if l.gamma >= 0 {
+		pt.gamma, pt.iF = pair(x, l.gamma), pt.iG
+		if l.iF >= 0 {
+			pt.iF = pair(x, l.iF)
+		}
 		pt.vI = times(p.Kpc, pt.lim.out-pt.iF) + times(p.Kic, pt.gamma) +
 			jtimes(p.Omega0*f.Lf, pt.iF) + times(p.Kff, pt.vM)
 		return
 	}
 	pt.iF = pt.lim.out
-	pt.iG = pt.iF - jtimes(pt.omega*f.Cf, pt.vC)
-	pt.iNet = pt.e * pt.iG
+	if l.iG < 0 {
+		pt.iG = pt.iF - jtimes(pt.omega*f.Cf, pt.vC)
+		pt.iNet = pt.e * pt.iG
+	}
 }
 
 // compensation is the admittance of the capacitor in i_ref.
@@ -343,24 +427,33 @@ func (g *GridFollowing) gridImpedance() complex128 {
 func (g *GridFollowing) Eval(flow, rate []float64, t float64, v, x []float64) error {
 	var pt followingPoint
 	g.at(&pt, g.orders(t), v, x)
-	p, f := &g.par, &g.par.Filter
+	p, f, l := &g.par, &g.par.Filter, &g.layout
 	flow[0], flow[1] = -real(pt.iNet), -imag(pt.iNet)
+	rate[l.vMD] = p.OmegaV * (real(pt.vM) - x[l.vMD])
+	if l.locked {
+		if rate[0] = pt.y; l.vC >= 0 {
+			drop := pt.vC - conj(pt.e)*pair(v, 0) - g.gridImpedance()*pt.iG
+			rate[0], rate[l.vC] = imag(drop)/p.V0, real(drop)
+		}
+		return nil
+	}
 	rate[0] = pt.omega - g.frame
-	rate[1] = pt.y + (pt.omega-p.Omega0-pt.wanted)/p.Kp
-	rate[2] = p.OmegaV * (real(pt.vM) - x[2])
+	rate[l.eps] = pt.y + (pt.omega-p.Omega0-pt.wanted)/p.Kp
+	if l.gamma >= 0 {
+		setPair(rate, l.gamma, pt.lim.out-pt.iF)
+	}
 	switch {
-	case g.full() && g.lcl:
-		rate = rate[:11]
-		setPair(rate, 3, pt.lim.out-pt.iF)
-		setPair(rate, 5, pt.vI-pt.vC-complex(f.Rf, pt.omega*f.Lf)*pt.iF)
-		setPair(rate, 7, pt.iF-pt.iG-jtimes(pt.omega*f.Cf, pt.vC))
-		setPair(rate, 9, pt.e*pt.vC-pair(v, 0)-g.gridImpedance()*pt.iNet)
-	case g.full():
-		rate = rate[:7]
-		setPair(rate, 3, pt.lim.out-pt.iF)
-		setPair(rate, 5, pt.e*pt.vI-pair(v, 0)-complex(f.Rf, g.frame*f.Lf)*pt.iNet)
-	case g.lcl:
-		setPair(rate, 3, pt.vC-conj(pt.e)*pair(v, 0)-g.gridImpedance()*pt.iG)
+	case l.iF >= 0:
+		setPair(rate, l.iF, pt.vI-pt.vC-complex(f.Rf, pt.omega*f.Lf)*pt.iF)
+	case l.iG >= 0 && !g.lcl:
+		setPair(rate, l.iG, pt.e*pt.vI-pair(v, 0)-complex(f.Rf, g.frame*f.Lf)*pt.iNet)
+	}
+	switch {
+	case l.iG >= 0 && g.lcl:
+		setPair(rate, l.vC, pt.iF-pt.iG-jtimes(pt.omega*f.Cf, pt.vC))
+		setPair(rate, l.iG, pt.e*pt.vC-pair(v, 0)-g.gridImpedance()*pt.iNet)
+	case l.vC >= 0:
+		setPair(rate, l.vC, pt.vC-conj(pt.e)*pair(v, 0)-g.gridImpedance()*pt.iG)
 	}
 	return nil
 }
@@ -397,7 +490,7 @@ func (g *GridFollowing) fill(u orders, v, x []float64) {
 	if math.Abs(pt.wanted) > p.SpeedLimit {
 		d.inside = 0
 	}
-	if x[2] >= p.VFloor {
+	if x[g.layout.vMD] >= p.VFloor {
 		d.ref = complex(-u.p/(1.5*pt.vD*pt.vD), u.q/(1.5*pt.vD*pt.vD))
 	}
 	switch {
@@ -405,12 +498,17 @@ func (g *GridFollowing) fill(u orders, v, x []float64) {
 		g.fillLCL(&pt, &d)
 	case g.full():
 		g.fillL(&pt, &d)
+	case g.layout.locked:
+		g.fillLocked(&pt, &d, v)
+	case g.wired():
+		g.fillWired(&pt, &d)
 	default:
 		g.fillPrimary(&pt, &d, v)
 	}
 }
 
-// Rows and columns of the first unknowns, after the two of the terminal.
+// Rows and columns of the first unknowns, after the two of the terminal, where the
+// PLL is present.
 const (
 	followDelta = 2
 	followEps   = 3
@@ -508,6 +606,74 @@ func (g *GridFollowing) fillL(pt *followingPoint, d *followingSlopes) {
 	block(w, n, rGamma, rIG, -ei)
 	block(w, n, rIG, rIG, ownZ-complex(f.Rf, g.frame*f.Lf))
 	block(w, n, 0, rIG, -1)
+}
+
+// fillWired computes the Jacobian of detail "current loop gone" with an LCL filter.
+func (g *GridFollowing) fillWired(pt *followingPoint, d *followingSlopes) {
+	const rVC, rIG = followNext, followNext + 2
+	var (
+		f   = &g.par.Filter
+		w   = g.sparsity.work
+		n   = g.sparsity.order
+		vCW = jtimes(-f.Cf, pt.vC) // d(row of v_c)/d omega
+	)
+	// delta turns i_g
+	column(w, n, rVC, followDelta, jtimes(1, pt.iG))
+	column(w, n, rIG, followDelta, jtimes(1, pt.e*pt.vC))
+	// eps, v_md
+	column(w, n, rVC, followEps, times(g.lock(d, followEps, 0, 1, 0), vCW))
+	g.lock(d, followVmd, 0, 0, 1)
+	column(w, n, rVC, followVmd, pt.lim.slope(d.ref))
+	// v_c
+	for q := range 2 {
+		u := unit(q)
+		dw := g.lock(d, rVC+q, u, 0, 0)
+		column(w, n, rVC, rVC+q, pt.lim.slope(jtimes(g.compensation(), u))+times(dw, vCW)-jtimes(pt.omega*f.Cf, u))
+	}
+	// the grid side, network frame
+	block(w, n, rVC, rIG, -conj(pt.e))
+	block(w, n, rIG, rVC, pt.e)
+	block(w, n, rIG, rIG, -g.gridImpedance())
+	block(w, n, rIG, 0, -1)
+	block(w, n, 0, rIG, -1)
+}
+
+// fillLocked computes the Jacobian of detail "injection only". The columns are those
+// of v_bus (2), delta, v_md and, with an LCL filter, v_c.d.
+func (g *GridFollowing) fillLocked(pt *followingPoint, d *followingSlopes, v []float64) {
+	const rDelta, rVmd, rVC = 2, 3, 4
+	var (
+		p, f = &g.par, &g.par.Filter
+		w    = g.sparsity.work
+		n    = g.sparsity.order
+		ei   = conj(pt.e)
+		zg   = g.gridImpedance()
+	)
+	for c := range n {
+		var dV, dC, dRef complex128 // of v_bus and v_c, own frame, and of i_ref
+		var turn, dVmd float64
+		switch c {
+		case rDelta:
+			dV, turn = jtimes(-1, ei*pair(v, 0)), 1
+		case rVmd:
+			dVmd, dRef = 1, d.ref
+		case rVC:
+			dC = 1
+		default:
+			dV = ei * unit(c)
+		}
+		dG := pt.lim.slope(dRef+jtimes(g.compensation(), dC)) - jtimes(pt.omega*f.Cf, dC)
+		dM := dC
+		if g.lcl {
+			drop := dC - dV - zg*dG
+			w[rDelta*n+c], w[rVC*n+c] = imag(drop)/p.V0, real(drop)
+		} else {
+			dM = dV
+			w[rDelta*n+c] = imag(dM)*real(d.y) - real(dM)*imag(d.y)
+		}
+		w[rVmd*n+c] = p.OmegaV * (real(dM) - dVmd)
+		column(w, n, 0, c, -pt.e*(dG+jtimes(turn, pt.iG)))
+	}
 }
 
 // fillPrimary computes the Jacobian of detail "primary only".

@@ -3,6 +3,7 @@ package devices
 import (
 	"fmt"
 	"math"
+	"slices"
 
 	"islet/solvers"
 	"islet/solvers/facet"
@@ -17,17 +18,26 @@ func (g *GridFollowing) TimeDerivative(flow, rate []float64, t float64, v, x []f
 	var pt followingPoint
 	g.at(&pt, g.orders(t), v, x)
 	dLim := pt.lim.slope(complex(dp/(1.5*pt.vD), -dq/(1.5*pt.vD)))
+	p, l := &g.par, &g.layout
+	if l.gamma >= 0 {
+		addPair(rate, l.gamma, dLim)
+	}
 	switch {
-	case g.full() && g.lcl:
-		addPair(rate, 3, dLim)
-		addPair(rate, 5, times(g.par.Kpc, dLim))
-	case g.full():
-		addPair(rate, 3, dLim)
-		addPair(rate, 5, pt.e*times(g.par.Kpc, dLim))
+	case l.iF >= 0:
+		addPair(rate, l.iF, times(p.Kpc, dLim))
+	case l.gamma >= 0:
+		addPair(rate, l.iG, pt.e*times(p.Kpc, dLim))
+	case l.iG >= 0:
+		addPair(rate, l.vC, dLim)
 	default:
 		addPair(flow, 0, -pt.e*dLim)
-		if g.lcl {
-			addPair(rate, 3, -g.gridImpedance()*dLim)
+		drop := -g.gridImpedance() * dLim
+		switch {
+		case l.locked && l.vC >= 0:
+			rate[0] += imag(drop) / p.V0
+			rate[l.vC] += real(drop)
+		case l.vC >= 0:
+			addPair(rate, l.vC, drop)
 		}
 	}
 	return true
@@ -73,23 +83,28 @@ func (g *GridFollowing) Measure(dst []float64, t float64, v, x []float64) {
 	}
 }
 
-// Energy returns the energy in the filter, the bridge's power and the filter's
-// losses. At detail "primary only" nothing is stored, and the bridge gives the
-// power at the terminal and the losses.
+// Energy returns the energy in the filter's elements that the level keeps
+// dynamic, the bridge's power and the filter's losses. At the levels without i_g
+// nothing is stored, and the bridge gives the power at the terminal and the losses.
 func (g *GridFollowing) Energy(t float64, v, x []float64) facet.Energy {
 	var pt followingPoint
 	g.at(&pt, g.orders(t), v, x)
 	f := &g.par.Filter
-	e := facet.Energy{Dissipated: 1.5 * f.Rf * dot(pt.iF, pt.iF)}
+	lossF := 1.5 * f.Rf * dot(pt.iF, pt.iF)
+	e := facet.Energy{Dissipated: lossF}
 	if g.lcl {
 		e.Dissipated += 1.5 * f.Rg * dot(pt.iNet, pt.iNet)
 	}
-	if !g.full() {
+	switch {
+	case g.full():
+		e.Supplied = 1.5 * dot(pt.vI, pt.iF)
+		e.Stored = 0.75 * f.Lf * dot(pt.iF, pt.iF)
+	case g.wired():
+		e.Supplied = 1.5*dot(pt.vC, pt.iF) + lossF
+	default:
 		e.Supplied = 1.5*dot(pair(v, 0), pt.iNet) + e.Dissipated
 		return e
 	}
-	e.Supplied = 1.5 * dot(pt.vI, pt.iF)
-	e.Stored = 0.75 * f.Lf * dot(pt.iF, pt.iF)
 	if g.lcl {
 		e.Stored += 0.75 * (f.Cf*dot(pt.vC, pt.vC) + f.Lg*dot(pt.iNet, pt.iNet))
 	}
@@ -127,18 +142,75 @@ func (g *GridFollowing) CurrentLimit() (limit float64, channel int) {
 // Detail returns the level of detail.
 func (g *GridFollowing) Detail() string { return g.detail }
 
-// Details returns the levels: "full", "primary only".
-func (g *GridFollowing) Details() []string { return []string{Full, PrimaryOnly} }
+// Details returns the levels this inverter has, from fine to coarse: "full",
+// "current loop gone" and "primary only" (with K_ic > 0), "injection only" (with K_i
+// > 0 too).
+func (g *GridFollowing) Details() []string {
+	switch {
+	case !(g.par.Kic > 0):
+		return []string{Full}
+	case !(g.par.Ki > 0):
+		return []string{Full, CurrentLoopGone, PrimaryOnly}
+	}
+	return []string{Full, CurrentLoopGone, PrimaryOnly, InjectionOnly}
+}
+
+// DroppedDynamics returns the groups of dynamics ([facet.Unknown]) that a level
+// leaves out.
+func (g *GridFollowing) DroppedDynamics(level string) []string {
+	groups := []string{dynCurrent, dynFilter, dynNetwork}
+	if !g.lcl {
+		groups = groups[:1]
+	}
+	switch level {
+	case CurrentLoopGone:
+		return groups[:1]
+	case PrimaryOnly:
+		return groups
+	case InjectionOnly:
+		return append(groups, dynPLL)
+	}
+	return nil
+}
 
 // WithDetail returns an inverter of the same parameters, setpoints and frame
-// speed at another level.
+// speed at another level, one of Details.
 func (g *GridFollowing) WithDetail(level string) (solvers.Block, error) {
-	if level != Full && level != PrimaryOnly {
+	if !slices.Contains(g.Details(), level) {
 		return nil, fmt.Errorf("devices: grid-following inverter: no detail %q: want one of %q", level, g.Details())
 	}
 	h := *g
 	h.setDetail(level)
 	return &h, nil
+}
+
+// Kinks names where the equations have kinks: "current limit", with a second one
+// where a part of i_ref goes first, and "speed limit" of the PLL.
+func (g *GridFollowing) Kinks() []string {
+	list := g.limiter.kinks()
+	if g.speedLimited() {
+		list = append(list, "speed limit")
+	}
+	return list
+}
+
+// speedLimited tells whether there is a speed limit at this level.
+func (g *GridFollowing) speedLimited() bool {
+	return !g.layout.locked && !math.IsInf(g.par.SpeedLimit, 1)
+}
+
+// NKinks returns the number of kinks.
+func (g *GridFollowing) NKinks() int { return len(g.Kinks()) }
+
+// EvalKinks writes |i_ref| - I_max (A), with a part of i_ref going first |that
+// part| - I_max too, and |dw*| - its limit (rad/s) into dst.
+func (g *GridFollowing) EvalKinks(dst []float64, t float64, v, x []float64) {
+	var pt followingPoint
+	g.at(&pt, g.orders(t), v, x)
+	k := g.limiter.evalKinks(dst, pt.iRef)
+	if g.speedLimited() {
+		dst[k] = math.Abs(pt.wanted) - g.par.SpeedLimit
+	}
 }
 
 // AppendBinary appends the setpoints to b.
@@ -181,7 +253,7 @@ func (g *GridFollowing) Guess(x []float64, t float64, v []float64) {
 		if g.lcl {
 			vC = m
 		}
-		iRef = saturate(complex(u.p/(1.5*vD), -u.q/(1.5*vD)+g.compensation()*vC), p.IMax).out
+		iRef = g.limiter.apply(complex(u.p/(1.5*vD), -u.q/(1.5*vD)+g.compensation()*vC)).out
 		iNet = e * (iRef - complex(0, omg*f.Cf*vC))
 		if !g.lcl {
 			break
@@ -191,22 +263,27 @@ func (g *GridFollowing) Guess(x []float64, t float64, v []float64) {
 		vM += times(0.5, next-vM)
 	}
 	m := abs(vM)
+	l := &g.layout
 	x[0] = math.Atan2(imag(vM), real(vM))
-	x[1] = ratio(1, p.Ki, 0) * min(max(omg-p.Omega0, -p.SpeedLimit), p.SpeedLimit)
-	x[2] = m
+	x[l.vMD] = m
 	own := complex(m, 0)
-	if g.full() {
+	if l.eps >= 0 {
+		x[l.eps] = ratio(1, p.Ki, 0) * min(max(omg-p.Omega0, -p.SpeedLimit), p.SpeedLimit)
+	}
+	if l.gamma >= 0 {
 		vI := own + complex(f.Rf, (omg-p.Omega0)*f.Lf)*iRef - times(p.Kff, own)
-		setPair(x, 3, times(ratio(1, p.Kic, 0), vI))
+		setPair(x, l.gamma, times(ratio(1, p.Kic, 0), vI))
+	}
+	if l.iF >= 0 {
+		setPair(x, l.iF, iRef)
 	}
 	switch {
-	case g.full() && g.lcl:
-		setPair(x, 5, iRef)
-		setPair(x, 7, own)
-		setPair(x, 9, iNet)
-	case g.full():
-		setPair(x, 5, iNet)
-	case g.lcl:
-		setPair(x, 3, own)
+	case l.vC >= 0 && l.locked:
+		x[l.vC] = m
+	case l.vC >= 0:
+		setPair(x, l.vC, own)
+	}
+	if l.iG >= 0 {
+		setPair(x, l.iG, iNet)
 	}
 }

@@ -36,6 +36,10 @@ func TestGridFollowingConformance(t *testing.T) {
 	}{
 		{"plain", func(*GridFollowingParams) {}},
 		{"limits", func(p *GridFollowingParams) { p.IMax, p.SpeedLimit = 15, 40 }},
+		{"limit d first", func(p *GridFollowingParams) { p.IMax, p.Priority = 17, DFirst }},
+		{"limit q first", func(p *GridFollowingParams) { p.IMax, p.Priority = 15, QFirst }},
+		{"proportional PLL", func(p *GridFollowingParams) { p.Ki = 0 }},
+		{"proportional current loop", func(p *GridFollowingParams) { p.Kic = 0 }},
 		{"fixed amplitude", func(p *GridFollowingParams) { p.FixedAmplitude = true }},
 		{"no capacitor current", func(p *GridFollowingParams) { p.OmitCapacitor = true }},
 		{"feed-forward", func(p *GridFollowingParams) { p.Kff = 0.7 }},

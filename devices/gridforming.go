@@ -3,6 +3,7 @@ package devices
 import (
 	"encoding"
 	"errors"
+	"fmt"
 
 	"islet/solvers"
 	"islet/solvers/facet"
@@ -20,8 +21,11 @@ type GridFormingParams struct {
 	Omega0  float64        // omega_0, rad/s, > 0: nominal speed, first value of setpoint "frequency"
 	V0      float64        // V_0, V peak phase-to-neutral, > 0: first value of setpoint "voltage"
 	P, Q    float64        // P*, Q*, W and var generated: first values of setpoints "p" and "q"
-	Primary PrimaryControl // [Droop]
+	Primary PrimaryControl // [Droop], [VirtualMachine] or [Oscillator]
 	Rv, Xv  float64        // virtual impedance Z_v = R_v + j X_v, ohm (X_v at nominal frequency)
+
+	// LimitImpedance is added to Z_v at large currents; the zero value adds nothing.
+	LimitImpedance LimitImpedance
 
 	Kpv  float64 // K_pv of the voltage loop, A/V, >= 0
 	Kiv  float64 // K_iv, A/(V s), >= 0
@@ -30,6 +34,9 @@ type GridFormingParams struct {
 	Kpc  float64 // K_pc of the current loop, V/A, > 0
 	Kic  float64 // K_ic, V/(A s), >= 0
 	IMax float64 // largest |i_ref|, A peak, > 0; +Inf for no limit
+
+	// Priority tells which part of i_ref gives way to IMax; "" is [AngleKept].
+	Priority LimitPriority
 
 	// OwnSpeed puts the own speed omega for omega_n in the decoupling terms,
 	// which hold Omega0 otherwise.
@@ -49,12 +56,13 @@ func (p GridFormingParams) Validate() error {
 		f.within("Q", p.Q, -setpointReach*p.Rating, setpointReach*p.Rating, "var")
 	}
 	if p.Primary == nil {
-		f.add("Primary is missing: want a Droop")
+		f.add("Primary is missing: want a Droop, a VirtualMachine or an Oscillator")
 	} else {
 		p.Primary.check(f)
 	}
 	f.finite("Rv", p.Rv, "ohm")
 	f.finite("Xv", p.Xv, "ohm")
+	p.LimitImpedance.check(f)
 	f.notNegative("Kpv", p.Kpv, "A/V")
 	f.notNegative("Kiv", p.Kiv, "A/(V s)")
 	if p.Kpv == 0 && p.Kiv == 0 {
@@ -65,6 +73,7 @@ func (p GridFormingParams) Validate() error {
 	f.positive("Kpc", p.Kpc, "V/A")
 	f.notNegative("Kic", p.Kic, "V/(A s)")
 	checkLimit(f, "IMax", p.IMax, "A")
+	p.Priority.check(f)
 	p.Filter.check(f, false)
 	return f.err()
 }
@@ -73,6 +82,36 @@ func (p GridFormingParams) Validate() error {
 // enough for overload studies, narrow enough to catch a wrong unit.
 const setpointReach = 2
 
+// LimitImpedance is the virtual-impedance limiter, which lowers v_ref by an
+// impedance that grows with the current beyond a threshold:
+//
+//	Z_l = k max(0, |i_g| - I_t) (1 + j X/R)
+//
+// Source: A. D. Paquette, D. M. Divan, "Virtual impedance current limiting for
+// inverters in microgrids with synchronous generators", IEEE Trans. Industry
+// Applications 51(2), 2015 (form and citation from memory). It holds the current
+// in steady state; while the voltage loop settles only I_max does.
+type LimitImpedance struct {
+	Threshold float64 // I_t, A peak, >= 0
+	Gain      float64 // k, ohm/A, >= 0; 0: no limiter
+	XR        float64 // X/R of Z_l, >= 0
+}
+
+func (l LimitImpedance) check(to *faults) {
+	to.notNegative("LimitImpedance.Threshold", l.Threshold, "A")
+	to.notNegative("LimitImpedance.Gain", l.Gain, "ohm/A")
+	to.notNegative("LimitImpedance.XR", l.XR, "")
+}
+
+// at returns Z_l at a current of magnitude m, and its derivative in m.
+func (l *LimitImpedance) at(m float64) (z, slope complex128) {
+	if !(m > l.Threshold) {
+		return 0, 0
+	}
+	slope = complex(l.Gain, l.Gain*l.XR)
+	return times(m-l.Threshold, slope), slope
+}
+
 // GridForming is a grid-forming inverter: a bridge, averaged over a switching
 // period, with an LCL filter, a current and a voltage loop in cascade, an
 // optional virtual impedance and a primary control that orders frequency and
@@ -80,7 +119,7 @@ const setpointReach = 2
 // e^{-j delta} times the network-frame value:
 //
 //	d delta/dt  = omega - omega_f
-//	voltage     dphi/dt   = v_ref - v_c + K_aw (i_ref' - i_ref)        v_ref = V - Z_v i_g
+//	voltage     dphi/dt   = v_ref - v_c + K_aw (i_ref' - i_ref)        v_ref = V - (Z_v + Z_l) i_g
 //	            i_ref     = K_pv (v_ref - v_c) + K_iv phi + F i_g + j omega_n C_f v_c
 //	current     dgamma/dt = i_ref' - i_f
 //	            v_i       = K_pc (i_ref' - i_f) + K_ic gamma + j omega_n L_f i_f
@@ -92,13 +131,15 @@ const setpointReach = 2
 // The structure of the loops is that of N. Pogaku, M. Prodanovic, T. C. Green,
 // "Modeling, analysis and testing of autonomous operation of an inverter-based
 // microgrid", IEEE Trans. Power Electronics 22(2), 2007, with the anti-windup,
-// the current limit and the virtual impedance added. omega and V come from the
-// primary control, see [Droop].
+// the current limits and the virtual impedance added. omega and V come from the
+// primary control, see [Droop], [VirtualMachine] and [Oscillator]; Z_l is that of
+// [LimitImpedance].
 //
-// i_ref' is i_ref limited in magnitude to I_max, its angle kept. While the
-// limit acts, K_aw draws phi back: K_iv phi then loses the excess current with
-// the time constant 1/(K_iv K_aw), K_pv/K_iv for K_aw = 1/K_pv (tracking time =
-// reset time). A steady state with the limit acting has v_c = v_ref -
+// i_ref' is i_ref limited in magnitude to I_max by one of three priorities
+// ([AngleKept], [DFirst], [QFirst]). While the limit acts, K_aw draws phi back: K_iv
+// phi then loses the excess current with the time constant 1/(K_iv K_aw), K_pv/K_iv
+// for K_aw = 1/K_pv (tracking time = reset time). A steady state with the limit
+// acting has v_c = v_ref + K_aw (i_ref' - i_ref), with the angle kept v_ref -
 // K_aw (1/s - 1) i_ref', s = |i_ref'|/|i_ref|: the limit then works as an added
 // virtual resistance that holds |i_f| at I_max.
 //
@@ -107,20 +148,39 @@ const setpointReach = 2
 // a d, q pair in the own frame, and i_g (A), a network-frame pair, the current
 // out of the inverter. The flow into the block is -i_g.
 //
-// Detail "primary only" keeps delta and the primary control. Everything else is
-// at its quasi-steady state, with the reactance of L_g at the frame's speed:
+// # Detail
 //
-//	(Z_v + R_g + j omega_f L_g) i_g = V - e^{-j delta} v_bus      v_c = V - Z_v i_g
+// Each level drops the derivatives of a further group, solved in closed form:
 //
-// It has no current limit, since the current is not held by a loop; the channel
-// "limiting" tells by how much a limit would have to act.
+//	current loop gone   without gamma, i_f:  i_f = i_ref'
+//	inner loops gone    without phi, v_c:    v_c = v_ref       i_f = i_g + j omega C_f v_c
+//	primary only        without i_g:         (Z_v + R_g + j omega_f L_g) i_g = V - e^{-j delta} v_bus
+//	phase only          without the primary control's unknowns: delta alone, with
+//	                    V and omega from the control's law at instantaneous powers
+//
+// With a [LimitImpedance] the equation for i_g has no closed form; at the two
+// coarsest levels i_g stays as an algebraic unknown then, and V is found in closed
+// form with it given. At "phase only" V solves a quadratic equation with droop and
+// the virtual machine, omega = omega_0 - p~/D for the latter, and a cubic one with
+// the oscillator. Where there is no solution (a terminal voltage far from any the
+// control could stand) the equations return an error that wraps
+// [solvers.ErrReject].
+//
+// I_max acts at "full" and "current loop gone" alone: below, no loop holds the
+// current, and the channel "limiting" tells by how much a limit would have to act.
+// The LimitImpedance acts at every level. Where K_ic is 0 there is no level
+// "current loop gone", and where K_iv is 0 none of those below: the loops then
+// settle elsewhere than at their references. Where D is 0 there is no "phase only".
 //
 // A GridForming is no use to two goroutines at once.
 type GridForming struct {
 	par     GridFormingParams
+	limiter limiter
 	detail  string
+	layout  formingLayout
+	own     int // unknowns
 	primary primary
-	nz      int // unknowns of the primary control
+	nz      int // unknowns of the primary control that the level keeps
 
 	pRef, qRef, vRef, wRef input
 	frame                  float64 // omega_f, rad/s
@@ -128,7 +188,17 @@ type GridForming struct {
 	vBase, iBase float64
 	sparsity     *sparsity
 	gradient     primaryGradient
+	slopes       lawGradient
+	column       []float64           // scratch of fillReduced and TimeDerivative
 	drift        [maxPrimary]float64 // scratch of TimeDerivative
+}
+
+// formingLayout tells which unknowns a level of detail keeps, and where in x they
+// are: places of the first of each pair, -1 for those left out. z starts at 1.
+type formingLayout struct {
+	phi, gamma, iF, vC, iG int
+	phase                  bool // z is left out, and V follows the law
+	static                 bool // i_g has no mass
 }
 
 var (
@@ -144,6 +214,7 @@ var (
 	_ facet.Starter              = (*GridForming)(nil)
 	_ facet.Detailed             = (*GridForming)(nil)
 	_ facet.Sized                = (*GridForming)(nil)
+	_ facet.Kinked               = (*GridForming)(nil)
 	_ encoding.BinaryAppender    = (*GridForming)(nil)
 	_ encoding.BinaryUnmarshaler = (*GridForming)(nil)
 )
@@ -155,13 +226,14 @@ func NewGridForming(p GridFormingParams) (*GridForming, error) {
 		return nil, err
 	}
 	g := &GridForming{
-		par:   p,
-		pRef:  constant(p.P),
-		qRef:  constant(p.Q),
-		vRef:  constant(p.V0),
-		wRef:  constant(p.Omega0),
-		vBase: p.V0,
-		iBase: p.Rating / (1.5 * p.V0),
+		par:     p,
+		limiter: limiter{max: p.IMax, priority: p.Priority},
+		pRef:    constant(p.P),
+		qRef:    constant(p.Q),
+		vRef:    constant(p.V0),
+		wRef:    constant(p.Omega0),
+		vBase:   p.V0,
+		iBase:   p.Rating / (1.5 * p.V0),
 	}
 	g.setDetail(Full)
 	return g, nil
@@ -170,17 +242,38 @@ func NewGridForming(p GridFormingParams) (*GridForming, error) {
 // setDetail builds what depends on the level of detail.
 func (g *GridForming) setDetail(level string) {
 	g.detail = level
-	g.primary = g.par.Primary.build(g.par.Rating)
+	g.primary = g.par.Primary.build(rated{g.par.Rating, g.par.Omega0, g.par.V0})
+	g.gradient, g.slopes = primaryGradient{}, lawGradient{}
+	l := formingLayout{phi: -1, gamma: -1, iF: -1, vC: -1, iG: -1}
+	l.phase = level == PhaseOnly
+	l.static = level == PrimaryOnly || level == PhaseOnly
 	g.nz = len(g.primary.unknowns())
-	g.gradient = primaryGradient{}
-	_, own := g.Dims()
+	if l.phase {
+		g.nz = 0
+	}
+	next := 1 + g.nz
+	place := func(at *int, kept bool) {
+		if kept {
+			*at = next
+			next += 2
+		}
+	}
+	loop := level == Full || level == CurrentLoopGone
+	place(&l.phi, loop)
+	place(&l.gamma, level == Full)
+	place(&l.iF, level == Full)
+	place(&l.vC, loop)
+	place(&l.iG, !l.static || g.par.LimitImpedance.Gain > 0)
+	g.layout, g.own = l, next
+	g.column = make([]float64, 2+next)
+
 	unknowns := g.Describe().Unknowns
 	var (
 		rnd  = scatter(1)
-		v, x = make([]float64, 2), make([]float64, own)
+		v, x = make([]float64, 2), make([]float64, next)
 	)
 	frame := g.frame
-	g.sparsity = newSparsity(2 + own)
+	g.sparsity = newSparsity(2 + next)
 	g.sparsity.find(func(k int) {
 		size := patternScale(k)
 		for i := range v {
@@ -201,33 +294,38 @@ func (g *GridForming) setDetail(level string) {
 }
 
 // full tells whether all unknowns are present.
-func (g *GridForming) full() bool { return g.detail == Full }
+func (g *GridForming) full() bool { return g.layout.gamma >= 0 }
+
+// looped tells whether the voltage loop and the filter's capacitor are present.
+func (g *GridForming) looped() bool { return g.layout.phi >= 0 }
 
 // Params returns the parameters the inverter was built with; setpoints moved
 // since then don't show in them.
 func (g *GridForming) Params() GridFormingParams { return g.par }
 
-// Dims returns 2 port components and the number of unknowns: 13 with droop, 3
-// at detail "primary only".
-func (g *GridForming) Dims() (ports, own int) {
-	if g.full() {
-		return 2, 11 + g.nz
-	}
-	return 2, 1 + g.nz
-}
+// Dims returns 2 port components and the number of unknowns: with nz unknowns of
+// the primary control (droop 2, oscillator 1, virtual machine 1 to 4), 11 + nz at
+// detail "full", 7 + nz, 3 + nz, 1 + nz and 1 at the others, the last two with 2
+// more where there is a [LimitImpedance].
+func (g *GridForming) Dims() (ports, own int) { return 2, g.own }
 
-// Mass writes no mass at the terminal, and L_f, C_f and L_g for the filter.
+// Mass writes no mass at the terminal, L_f, C_f and L_g for the filter, and 0 for
+// an algebraic i_g.
 func (g *GridForming) Mass(port, own []float64) {
 	clear(port)
 	for i := range own {
 		own[i] = 1
 	}
-	if g.full() {
-		k := 5 + g.nz
-		f := &g.par.Filter
-		own[k], own[k+1] = f.Lf, f.Lf
-		own[k+2], own[k+3] = f.Cf, f.Cf
-		own[k+4], own[k+5] = f.Lg, f.Lg
+	l, f := &g.layout, &g.par.Filter
+	put := func(at int, m float64) {
+		if at >= 0 {
+			own[at], own[at+1] = m, m
+		}
+	}
+	put(l.iF, f.Lf)
+	put(l.vC, f.Cf)
+	if put(l.iG, f.Lg); l.static {
+		put(l.iG, 0)
 	}
 }
 
@@ -236,23 +334,30 @@ func (g *GridForming) SetFrame(speed float64) { g.frame = speed }
 
 // Describe describes the terminal and the unknowns.
 func (g *GridForming) Describe() facet.Description {
-	u := []facet.Unknown{{Name: "delta", Unit: "rad", Base: 1, Frame: facet.Angle, Dynamics: "primary control"}}
-	u = append(u, g.primary.unknowns()...)
-	d := facet.Description{Kind: "grid-forming inverter"}
-	if !g.full() {
-		d.Terminals = []facet.Terminal{{Name: "ac", Flow: facet.FlowHeld}}
-		d.Unknowns = u
-		return d
+	u := []facet.Unknown{{Name: "delta", Unit: "rad", Base: 1, Frame: facet.Angle, Dynamics: dynAngle}}
+	l := &g.layout
+	if !l.phase {
+		u = append(u, g.primary.unknowns()...)
 	}
-	add := func(p [2]facet.Unknown) { u = append(u, p[:]...) }
-	add(statePair("phi", "V s", ratio(g.iBase, g.par.Kiv, g.vBase/g.par.Omega0), false, "voltage loop"))
-	add(statePair("gamma", "A s", ratio(g.vBase, g.par.Kic, g.iBase/g.par.Omega0), false, "current loop"))
-	add(statePair("i_f", "A", g.iBase, false, "filter"))
-	add(statePair("v_c", "V", g.vBase, false, "filter"))
-	add(statePair("i_g", "A", g.iBase, true, "network"))
-	d.Terminals = []facet.Terminal{{Name: "ac", Flow: facet.FlowState}}
-	d.Unknowns = u
-	return d
+	add := func(at int, p [2]facet.Unknown) {
+		if at >= 0 {
+			u = append(u, p[:]...)
+		}
+	}
+	add(l.phi, statePair("phi", "V s", ratio(g.iBase, g.par.Kiv, g.vBase/g.par.Omega0), false, dynVoltage))
+	add(l.gamma, statePair("gamma", "A s", ratio(g.vBase, g.par.Kic, g.iBase/g.par.Omega0), false, dynCurrent))
+	add(l.iF, statePair("i_f", "A", g.iBase, false, dynCurrent))
+	add(l.vC, statePair("v_c", "V", g.vBase, false, dynFilter))
+	add(l.iG, statePair("i_g", "A", g.iBase, true, dynNetwork))
+	flow := facet.FlowState
+	if l.static {
+		flow = facet.FlowHeld
+	}
+	return facet.Description{
+		Kind:      "grid-forming inverter",
+		Terminals: []facet.Terminal{{Name: "ac", Flow: flow}},
+		Unknowns:  u,
+	}
 }
 
 // orders returns the setpoints at time t.
@@ -267,6 +372,9 @@ type formingPoint struct {
 	phi, gamma complex128
 	iF, vC, iG complex128
 	iNet       complex128 // i_g in the network frame
+	w          complex128 // v_bus, where i_g is no unknown
+	z          complex128 // Z_v + Z_l
+	zSlope     complex128 // dZ_l/d|i_g|
 	s          stimulus
 	omega, v   float64    // ordered by the primary control
 	omegaN     float64    // of the decoupling terms
@@ -274,40 +382,77 @@ type formingPoint struct {
 	iRef       complex128
 	lim        saturation // of i_ref
 	vI         complex128
+	solved     bool // whether V is found, at detail "phase only"
 }
 
 // at computes the point. z are the unknowns of the primary control.
 func (g *GridForming) at(pt *formingPoint, u orders, v, x []float64) (z []float64) {
-	p := &g.par
+	p, l := &g.par, &g.layout
 	z = x[1 : 1+g.nz]
 	pt.e = rotor(x[0])
-	pt.v = g.primary.voltage(z, u)
-	zv := complex(p.Rv, p.Xv)
-	if !g.full() {
-		ei := conj(pt.e)
-		pt.iG = (complex(pt.v, 0) - ei*pair(v, 0)) / (zv + g.gridImpedance())
+	pt.z = complex(p.Rv, p.Xv)
+	pt.solved = true
+	if l.iG >= 0 {
+		pt.iNet = pair(x, l.iG)
+		pt.iG = conj(pt.e) * pt.iNet
+		if p.LimitImpedance.Gain > 0 {
+			var zl complex128
+			zl, pt.zSlope = p.LimitImpedance.at(abs(pt.iG))
+			pt.z += zl
+		}
+		if l.phase {
+			s1, s0 := 1.5*conj(pt.iG), -1.5*pt.z*complex(dot(pt.iG, pt.iG), 0)
+			pt.v, pt.solved = g.primary.magnitude(u, response{s1: s1, s0: s0, i0: pt.iG})
+		} else {
+			pt.v = g.primary.voltage(z, u)
+		}
+	} else {
+		pt.w = conj(pt.e) * pair(v, 0)
+		y := 1 / (pt.z + g.gridImpedance())
+		if l.phase {
+			// v_c = c V + d w with c = Z_g y, d = Z_v y; i_g = y (V - w)
+			c, d := g.gridImpedance()*y, pt.z*y
+			pt.v, pt.solved = g.primary.magnitude(u, response{
+				s2: 1.5 * c * conj(y),
+				s1: 1.5 * conj(y) * (d*pt.w - c*conj(pt.w)),
+				s0: -1.5 * conj(y) * d * complex(dot(pt.w, pt.w), 0),
+				i1: y,
+				i0: -y * pt.w,
+			})
+		} else {
+			pt.v = g.primary.voltage(z, u)
+		}
+		pt.iG = (complex(pt.v, 0) - pt.w) * y
 		pt.iNet = pt.e * pt.iG
-		pt.vC = complex(pt.v, 0) - zv*pt.iG
-		sC := pt.vC * conj(pt.iG)
-		pt.s = stimulus{p: 1.5 * real(sC), q: 1.5 * imag(sC), i: pt.iG}
-		pt.omega = g.primary.speed(z, u, pt.s)
-		return z
 	}
-	k := 1 + g.nz
-	y := x[k : k+10]
-	pt.phi, pt.gamma = complex(y[0], y[1]), complex(y[2], y[3])
-	pt.iF, pt.vC, pt.iNet = complex(y[4], y[5]), complex(y[6], y[7]), complex(y[8], y[9])
-	pt.iG = conj(pt.e) * pt.iNet
+	ref := complex(pt.v, 0) - pt.z*pt.iG
+	pt.vC = ref
+	if l.vC >= 0 {
+		pt.vC = pair(x, l.vC)
+	}
 	sC := pt.vC * conj(pt.iG)
 	pt.s = stimulus{p: 1.5 * real(sC), q: 1.5 * imag(sC), i: pt.iG}
-	pt.omega = g.primary.speed(z, u, pt.s)
+	if l.phase {
+		pt.omega, _ = g.primary.law(u, pt.s, pt.v)
+	} else {
+		pt.omega = g.primary.speed(z, u, pt.s)
+	}
+	if !g.looped() {
+		return z
+	}
 	pt.omegaN = p.Omega0
 	if p.OwnSpeed {
 		pt.omegaN = pt.omega
 	}
-	pt.err = complex(pt.v, 0) - zv*pt.iG - pt.vC
+	pt.phi = pair(x, l.phi)
+	pt.err = ref - pt.vC
 	pt.iRef = times(p.Kpv, pt.err) + times(p.Kiv, pt.phi) + times(p.F, pt.iG) + jtimes(pt.omegaN*p.Filter.Cf, pt.vC)
-	pt.lim = saturate(pt.iRef, p.IMax)
+	pt.lim = g.limiter.apply(pt.iRef)
+	if l.gamma < 0 {
+		pt.iF = pt.lim.out
+		return z
+	}
+	pt.gamma, pt.iF = pair(x, l.gamma), pair(x, l.iF)
 	pt.vI = times(p.Kpc, pt.lim.out-pt.iF) + times(p.Kic, pt.gamma) + jtimes(pt.omegaN*p.Filter.Lf, pt.iF)
 	return z
 }
@@ -317,30 +462,41 @@ func (g *GridForming) gridImpedance() complex128 {
 	return complex(g.par.Filter.Rg, g.frame*g.par.Filter.Lg)
 }
 
+// errNoVoltage is what Eval returns at detail "phase only" where no V meets the
+// law of the primary control.
+var errNoVoltage = fmt.Errorf("devices: grid-forming inverter: no voltage meets the primary control's law "+
+	"at this angle and terminal voltage: %w", solvers.ErrReject)
+
 // Eval writes the current into the terminal and the right-hand sides.
 func (g *GridForming) Eval(flow, rate []float64, t float64, v, x []float64) error {
 	var pt formingPoint
 	u := g.orders(t)
 	z := g.at(&pt, u, v, x)
-	if !g.full() && g.gridImpedance()+complex(g.par.Rv, g.par.Xv) == 0 {
+	l := &g.layout
+	if l.iG < 0 && g.gridImpedance()+complex(g.par.Rv, g.par.Xv) == 0 {
 		return errors.New("devices: grid-forming inverter: nothing between v_c and the terminal: " +
 			"Rg + Rv = 0, and Xv + omega_f Lg = 0 at this speed of the frame")
 	}
+	if !pt.solved {
+		return errNoVoltage
+	}
 	flow[0], flow[1] = -real(pt.iNet), -imag(pt.iNet)
 	rate[0] = pt.omega - g.frame
-	g.primary.rates(rate[1:1+g.nz], z, u, pt.s)
-	if !g.full() {
-		return nil
+	if !l.phase {
+		g.primary.rates(rate[1:1+g.nz], z, u, pt.s)
 	}
 	p, f := &g.par, &g.par.Filter
-	r := rate[1+g.nz:]
-	r = r[:10]
-	cut := pt.lim.out - pt.iRef
-	setPair(r, 0, pt.err+times(p.Kaw, cut))
-	setPair(r, 2, pt.lim.out-pt.iF)
-	setPair(r, 4, pt.vI-pt.vC-complex(f.Rf, pt.omega*f.Lf)*pt.iF)
-	setPair(r, 6, pt.iF-pt.iG-jtimes(pt.omega*f.Cf, pt.vC))
-	setPair(r, 8, pt.e*pt.vC-pair(v, 0)-g.gridImpedance()*pt.iNet)
+	if l.phi >= 0 {
+		setPair(rate, l.phi, pt.err+times(p.Kaw, pt.lim.out-pt.iRef))
+		setPair(rate, l.vC, pt.iF-pt.iG-jtimes(pt.omega*f.Cf, pt.vC))
+	}
+	if l.gamma >= 0 {
+		setPair(rate, l.gamma, pt.lim.out-pt.iF)
+		setPair(rate, l.iF, pt.vI-pt.vC-complex(f.Rf, pt.omega*f.Lf)*pt.iF)
+	}
+	if l.iG >= 0 {
+		setPair(rate, l.iG, pt.e*pt.vC-pair(v, 0)-g.gridImpedance()*pt.iNet)
+	}
 	return nil
 }
 
@@ -348,8 +504,8 @@ func (g *GridForming) Eval(flow, rate []float64, t float64, v, x []float64) erro
 // of a limiting inverter as well.
 func (g *GridForming) Pattern() []solvers.Entry { return g.sparsity.entries }
 
-// Jacobian writes the exact Jacobian. At the kink of the current limit it is
-// that of the side that doesn't limit.
+// Jacobian writes the exact Jacobian. At the kink of a limit it is that of the
+// side that doesn't limit.
 func (g *GridForming) Jacobian(jac []float64, t float64, v, x []float64) {
 	g.fill(g.orders(t), v, x)
 	g.sparsity.store(jac)
@@ -359,12 +515,25 @@ func (g *GridForming) Jacobian(jac []float64, t float64, v, x []float64) {
 func (g *GridForming) fill(u orders, v, x []float64) {
 	var pt formingPoint
 	z := g.at(&pt, u, v, x)
-	g.primary.gradients(&g.gradient, z, u, pt.s)
+	if g.layout.phase {
+		g.primary.lawGradients(&g.slopes, u, pt.s, pt.v)
+	} else {
+		g.primary.gradients(&g.gradient, z, u, pt.s)
+	}
 	if g.full() {
 		g.fillFull(&pt)
 	} else {
-		g.fillPrimary(&pt, v)
+		g.fillReduced(&pt)
 	}
+}
+
+// impedanceSlope returns the change of (Z_v + Z_l) i_g for a change d of i_g.
+func (pt *formingPoint) impedanceSlope(d complex128) complex128 {
+	change := pt.z * d
+	if pt.zSlope != 0 {
+		change += times(dot(d, pt.iG)/abs(pt.iG), pt.zSlope) * pt.iG
+	}
+	return change
 }
 
 // fillFull computes the Jacobian of the full equations. A column is the
@@ -377,7 +546,6 @@ func (g *GridForming) fillFull(pt *formingPoint) {
 		w    = g.sparsity.work
 		n    = g.sparsity.order
 		nz   = g.nz
-		zv   = complex(p.Rv, p.Xv)
 		ei   = conj(pt.e)
 
 		// rows and columns, after the two of the terminal
@@ -397,7 +565,7 @@ func (g *GridForming) fillFull(pt *formingPoint) {
 	// delta: turns i_g
 	dG := jtimes(-1, pt.iG)
 	dw := g.respond(rDelta, pt.vC*conj(dG), dG)
-	dErr := -zv * dG
+	dErr := -pt.impedanceSlope(dG)
 	g.reference(pt, rDelta, dErr, times(p.Kpv, dErr)+times(p.F, dG)+times(dw, refW), times(dw, iFW))
 	column(w, n, rVC, rDelta, times(dw, vCW)-dG)
 	column(w, n, rIG, rDelta, jtimes(1, pt.e*pt.vC))
@@ -432,7 +600,7 @@ func (g *GridForming) fillFull(pt *formingPoint) {
 		c = rIG + q
 		dG := ei * u
 		dw = g.respond(c, pt.vC*conj(dG), dG)
-		dErr := -zv * dG
+		dErr := -pt.impedanceSlope(dG)
 		g.reference(pt, c, dErr, times(p.Kpv, dErr)+times(p.F, dG)+times(dw, refW), times(dw, iFW))
 		column(w, n, rVC, c, times(dw, vCW)-dG)
 	}
@@ -487,52 +655,129 @@ func unit(k int) complex128 {
 	return 1i
 }
 
-// fillPrimary computes the Jacobian of the equations of detail "primary only".
-func (g *GridForming) fillPrimary(pt *formingPoint, v []float64) {
+// formingDirection is a direction in the space of an inverter's arguments.
+type formingDirection struct {
+	bus     complex128 // v_bus, network frame
+	delta   float64
+	z       int // the unknown of the primary control that moves, -1 for none
+	phi, vC complex128
+	iNet    complex128
+	omega   float64 // of the orders alone: change of omega,
+	volts   float64 // of V, or of the law's voltage at detail "phase only"
+}
+
+// tangent writes the derivative of [flow | rate] in direction d into dst, at any
+// level but "full".
+func (g *GridForming) tangent(dst []float64, pt *formingPoint, d *formingDirection) {
 	var (
-		d  = &g.gradient
-		w  = g.sparsity.work
-		n  = g.sparsity.order
-		zv = complex(g.par.Rv, g.par.Xv)
-		y  = 1 / (zv + g.gridImpedance())
-		ei = conj(pt.e)
+		p, f, l = &g.par, &g.par.Filter, &g.layout
+		dG      complex128 // of i_g while V stands
+		gV      complex128 // di_g/dV
+		dC      = d.vC     // of v_c while V stands
+		cV      complex128 // dv_c/dV
+		dV      float64
 	)
-	const rDelta, rZ = 2, 3
-	for c := range n {
-		var (
-			dU     complex128 // of V - e^{-j delta} v_bus
-			turn   complex128 // of i_g in the network frame, by the angle
-			dw, dv float64
-		)
-		k := c - rZ
-		switch {
-		case c < rDelta:
-			dU = -ei * unit(c)
-		case c == rDelta:
-			dU = jtimes(1, ei*pair(v, 0))
-			turn = jtimes(1, pt.iNet)
-		default:
-			dw, dv = d.omegaZ[k], d.vZ[k]
-			dU = complex(dv, 0)
-		}
-		dG := y * dU
-		dC := complex(dv, 0) - zv*dG
+	if l.iG >= 0 {
+		dG = conj(pt.e)*d.iNet - jtimes(d.delta, pt.iG)
+	} else {
+		gV = 1 / (pt.z + g.gridImpedance())
+		dG = -gV * (conj(pt.e)*d.bus - jtimes(d.delta, pt.w))
+	}
+	if l.vC < 0 {
+		dC = -pt.impedanceSlope(dG)
+		cV = 1 - pt.z*gV
+	}
+	stimulated := func(dC, dG complex128) [4]float64 {
 		dS := dC*conj(pt.iG) + pt.vC*conj(dG)
-		in := [4]float64{1.5 * real(dS), 1.5 * imag(dS), real(dG), imag(dG)}
-		for i, a := range in {
-			dw += d.omegaS[i] * a
+		return [4]float64{1.5 * real(dS), 1.5 * imag(dS), real(dG), imag(dG)}
+	}
+	dw := d.omega
+	var in [4]float64
+	if l.phase {
+		// law(V) - V = 0
+		law := &g.slopes
+		still, moved := stimulated(dC, dG), stimulated(cV, gV)
+		up, down := d.volts, law.voltV-1
+		for i, a := range law.voltS {
+			up += a * still[i]
+			down += a * moved[i]
 		}
-		w[rDelta*n+c] = dw
+		dV = -up / down
+		dw += law.omegaV * dV
+		for i, a := range law.omegaS {
+			in[i] = still[i] + dV*moved[i]
+			dw += a * in[i]
+		}
+		dG += times(dV, gV)
+		dC += times(dV, cV)
+	} else {
+		a := &g.gradient
+		dV = d.volts
+		if d.z >= 0 {
+			dV += a.vZ[d.z]
+			dw += a.omegaZ[d.z]
+		}
+		dG += times(dV, gV)
+		dC += times(dV, cV)
+		in = stimulated(dC, dG)
+		for i, b := range a.omegaS {
+			dw += b * in[i]
+		}
 		for r := range g.nz {
 			sum := 0.0
-			for i, a := range in {
-				sum += d.rateS[r][i] * a
+			for i, b := range a.rateS[r] {
+				sum += b * in[i]
 			}
-			if k >= 0 {
-				sum += d.rateZ[r][k]
+			if d.z >= 0 {
+				sum += a.rateZ[r][d.z]
 			}
-			w[(rZ+r)*n+c] = sum
+			dst[3+r] = sum
 		}
-		column(w, n, 0, c, -pt.e*dG-turn)
+	}
+	dst[2] = dw
+	dNet := d.iNet
+	if l.iG < 0 {
+		dNet = pt.e * (dG + jtimes(d.delta, pt.iG))
+	} else {
+		setPair(dst, 2+l.iG, pt.e*(dC+jtimes(d.delta, pt.vC))-d.bus-g.gridImpedance()*d.iNet)
+	}
+	setPair(dst, 0, -dNet)
+	if l.phi < 0 {
+		return
+	}
+	dErr := complex(dV, 0) - pt.impedanceSlope(dG) - dC
+	dRef := times(p.Kpv, dErr) + times(p.Kiv, d.phi) + times(p.F, dG) + jtimes(pt.omegaN*f.Cf, dC)
+	if p.OwnSpeed {
+		dRef += jtimes(dw*f.Cf, pt.vC)
+	}
+	dLim := pt.lim.slope(dRef)
+	setPair(dst, 2+l.phi, dErr+times(p.Kaw, dLim-dRef))
+	setPair(dst, 2+l.vC, dLim-dG-jtimes(pt.omega*f.Cf, dC)-jtimes(dw*f.Cf, pt.vC))
+}
+
+// fillReduced computes the Jacobian of the levels below "full", column by column.
+func (g *GridForming) fillReduced(pt *formingPoint) {
+	l, n := &g.layout, g.sparsity.order
+	fill := func(c int, d formingDirection) {
+		g.tangent(g.column, pt, &d)
+		w := g.sparsity.work[c:]
+		for r, a := range g.column {
+			w[r*n] = a
+		}
+	}
+	fill(2, formingDirection{delta: 1, z: -1})
+	for k := range g.nz {
+		fill(3+k, formingDirection{z: k})
+	}
+	for q := range 2 {
+		u := unit(q)
+		fill(q, formingDirection{bus: u, z: -1})
+		if l.phi >= 0 {
+			fill(2+l.phi+q, formingDirection{phi: u, z: -1})
+			fill(2+l.vC+q, formingDirection{vC: u, z: -1})
+		}
+		if l.iG >= 0 {
+			fill(2+l.iG+q, formingDirection{iNet: u, z: -1})
+		}
 	}
 }

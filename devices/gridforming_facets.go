@@ -3,6 +3,7 @@ package devices
 import (
 	"fmt"
 	"math"
+	"slices"
 
 	"islet/solvers"
 	"islet/solvers/facet"
@@ -21,41 +22,46 @@ func (g *GridForming) TimeDerivative(flow, rate []float64, t float64, v, x []flo
 		p, f = &g.par, &g.par.Filter
 		dz   = g.drift[:g.nz]
 	)
-	dw, dv := g.primary.drift(dz, z, u, du, pt.s)
-	if !g.full() {
-		zv := complex(p.Rv, p.Xv)
-		dG := complex(dv, 0) / (zv + g.gridImpedance())
-		dC := complex(dv, 0) - zv*dG
-		dS := dC*conj(pt.iG) + pt.vC*conj(dG)
-		in := [4]float64{1.5 * real(dS), 1.5 * imag(dS), real(dG), imag(dG)}
-		g.primary.gradients(&g.gradient, z, u, pt.s)
-		for i, a := range in {
-			dw += g.gradient.omegaS[i] * a
-			for r := range dz {
-				dz[r] += g.gradient.rateS[r][i] * a
-			}
-		}
-		addPair(flow, 0, -pt.e*dG)
+	if g.layout.phase {
+		g.primary.lawGradients(&g.slopes, u, pt.s, pt.v)
+		d := formingDirection{z: -1}
+		d.omega, d.volts = g.primary.lawDrift(u, du, pt.s, pt.v)
+		g.addTangent(flow, rate, &pt, &d)
+		return true
 	}
-	rate[0] += dw
+	dw, dv := g.primary.drift(dz, z, u, du, pt.s)
 	for r, a := range dz {
 		rate[1+r] += a
 	}
 	if !g.full() {
+		g.primary.gradients(&g.gradient, z, u, pt.s)
+		g.addTangent(flow, rate, &pt, &formingDirection{z: -1, omega: dw, volts: dv})
 		return true
 	}
+	rate[0] += dw
 	own := 0.0
 	if p.OwnSpeed {
 		own = dw
 	}
 	dRef := complex(p.Kpv*dv, 0) + jtimes(own*f.Cf, pt.vC)
 	dLim := pt.lim.slope(dRef)
-	r := rate[1+g.nz:]
-	addPair(r, 0, complex(dv, 0)+times(p.Kaw, dLim-dRef))
-	addPair(r, 2, dLim)
-	addPair(r, 4, times(p.Kpc, dLim)+jtimes((own-dw)*f.Lf, pt.iF))
-	addPair(r, 6, jtimes(-dw*f.Cf, pt.vC))
+	l := &g.layout
+	addPair(rate, l.phi, complex(dv, 0)+times(p.Kaw, dLim-dRef))
+	addPair(rate, l.gamma, dLim)
+	addPair(rate, l.iF, times(p.Kpc, dLim)+jtimes((own-dw)*f.Lf, pt.iF))
+	addPair(rate, l.vC, jtimes(-dw*f.Cf, pt.vC))
 	return true
+}
+
+// addTangent adds the derivative in direction d to flow and rate.
+func (g *GridForming) addTangent(flow, rate []float64, pt *formingPoint, d *formingDirection) {
+	g.tangent(g.column, pt, d)
+	for k, a := range g.column[:2] {
+		flow[k] += a
+	}
+	for k, a := range g.column[2:] {
+		rate[k] += a
+	}
 }
 
 // addPair adds the complex value z at x[k].
@@ -67,9 +73,10 @@ func addPair(x []float64, k int, z complex128) {
 // Channels lists the channels: power p and q at the terminal, current i there,
 // frequency, voltage v_c of the filter capacitor, the powers the control acts
 // on, the bridge's current i_converter, and limiting, the part by which the
-// current limit cuts |i_ref| (0 when it doesn't act).
+// current limit cuts |i_ref| (0 when it doesn't act). With a [LimitImpedance]
+// there is also its magnitude, z_limit.
 func (g *GridForming) Channels() []facet.Channel {
-	return []facet.Channel{
+	list := []facet.Channel{
 		{Name: "p", Unit: "W generated", Doc: "active power at the terminal"},
 		{Name: "q", Unit: "var generated", Doc: "reactive power at the terminal"},
 		{Name: "i", Unit: "A rms", Doc: "current at the terminal"},
@@ -80,6 +87,10 @@ func (g *GridForming) Channels() []facet.Channel {
 		{Name: "i_converter", Unit: "A rms", Doc: "current of the bridge"},
 		{Name: "limiting", Unit: "1", Doc: "part by which the limit cuts the current reference"},
 	}
+	if g.par.LimitImpedance.Gain > 0 {
+		list = append(list, facet.Channel{Name: "z_limit", Unit: "ohm", Doc: "virtual impedance added to limit the current"})
+	}
+	return list
 }
 
 // Indices of channels.
@@ -99,50 +110,66 @@ func (g *GridForming) Measure(dst []float64, t float64, v, x []float64) {
 	dst[2] = RMSAmperes(abs(pt.iNet))
 	dst[3] = Hertz(pt.omega)
 	dst[4] = LineVolts(abs(pt.vC))
+	if g.layout.phase {
+		z = g.drift[:]
+		g.primary.settle(z, u, pt.s, pt.v, pt.omega)
+	}
 	dst[5], dst[6] = g.primary.seen(z, pt.s)
 	dst[7] = RMSAmperes(abs(iF))
 	dst[8] = 1 - lim.scale
+	if g.par.LimitImpedance.Gain > 0 {
+		dst[9] = abs(pt.z - complex(g.par.Rv, g.par.Xv))
+	}
 }
 
-// converter returns the bridge's current and the state of the limit. At detail
-// "primary only" the current is the quasi-steady one, and its reference equals
-// it.
+// converter returns the bridge's current and the state of the limit. Without the
+// loops the current is the quasi-steady one, and its reference equals it.
 func (g *GridForming) converter(pt *formingPoint) (complex128, saturation) {
-	if g.full() {
+	if g.looped() {
 		return pt.iF, pt.lim
 	}
 	iF := pt.iG + jtimes(pt.omega*g.par.Filter.Cf, pt.vC)
-	return iF, saturate(iF, g.par.IMax)
+	return iF, g.limiter.apply(iF)
 }
 
-// Energy returns the energy in the filter, the bridge's power and the filter's
-// losses. At detail "primary only" nothing is stored.
+// Energy returns the energy in the filter's elements that the level keeps
+// dynamic, the bridge's power and the filter's losses.
 func (g *GridForming) Energy(t float64, v, x []float64) facet.Energy {
 	var pt formingPoint
 	g.at(&pt, g.orders(t), v, x)
-	f := &g.par.Filter
+	f, l := &g.par.Filter, &g.layout
 	iF, _ := g.converter(&pt)
 	var e facet.Energy
 	lossF := 1.5 * f.Rf * dot(iF, iF)
 	e.Dissipated = lossF + 1.5*f.Rg*dot(pt.iNet, pt.iNet)
-	if !g.full() {
-		e.Supplied = 1.5*dot(pt.vC, pt.iG) + lossF
-		return e
+	e.Supplied = 1.5*dot(pt.vC, iF) + lossF
+	if l.iF >= 0 {
+		e.Supplied = 1.5 * dot(pt.vI, iF)
+		e.Stored += 0.75 * f.Lf * dot(iF, iF)
 	}
-	e.Supplied = 1.5 * dot(pt.vI, pt.iF)
-	e.Stored = 0.75 * (f.Lf*dot(iF, iF) + f.Cf*dot(pt.vC, pt.vC) + f.Lg*dot(pt.iNet, pt.iNet))
+	if l.vC >= 0 {
+		e.Stored += 0.75 * f.Cf * dot(pt.vC, pt.vC)
+	}
+	if l.iG >= 0 && !l.static {
+		e.Stored += 0.75 * f.Lg * dot(pt.iNet, pt.iNet)
+	}
 	return e
 }
 
 // Setpoints lists p (W) and q (var), what the primary control aims at, voltage
-// (V line-line rms) and frequency (Hz), where it starts from.
+// (V line-line rms) and frequency (Hz), where it starts from. An [Oscillator],
+// whose equations divide by it, takes no voltage under 5 % of the rated one.
 func (g *GridForming) Setpoints(t float64) []facet.Setpoint {
 	s := setpointReach * g.par.Rating
 	v, f := LineVolts(g.par.V0), Hertz(g.par.Omega0)
+	least := 0.0
+	if _, ok := g.par.Primary.(Oscillator); ok {
+		least = 0.05 * v
+	}
 	return []facet.Setpoint{
 		{Name: "p", Unit: "W", Doc: "active power P* of the primary control", Min: -s, Max: s, Value: g.pRef.value(t)},
 		{Name: "q", Unit: "var", Doc: "reactive power Q* of the primary control", Min: -s, Max: s, Value: g.qRef.value(t)},
-		{Name: "voltage", Unit: "V", Doc: "voltage V_0, line-line rms", Min: 0, Max: 1.5 * v, Value: LineVolts(g.vRef.value(t))},
+		{Name: "voltage", Unit: "V", Doc: "voltage V_0, line-line rms", Min: least, Max: 1.5 * v, Value: LineVolts(g.vRef.value(t))},
 		{Name: "frequency", Unit: "Hz", Doc: "frequency omega_0", Min: 0.8 * f, Max: 1.2 * f, Value: Hertz(g.wRef.value(t))},
 	}
 }
@@ -191,18 +218,85 @@ func (g *GridForming) CurrentLimit() (limit float64, channel int) {
 // Detail returns the level of detail.
 func (g *GridForming) Detail() string { return g.detail }
 
-// Details returns the levels: "full", "primary only".
-func (g *GridForming) Details() []string { return []string{Full, PrimaryOnly} }
+// Details returns the levels this inverter has, from fine to coarse: "full",
+// "current loop gone" (with K_ic > 0), "inner loops gone" and "primary only" (with
+// K_iv > 0), "phase only" (with K_iv > 0, and D > 0 of a virtual machine).
+func (g *GridForming) Details() []string {
+	list := []string{Full}
+	if g.par.Kic > 0 {
+		list = append(list, CurrentLoopGone)
+	}
+	if g.par.Kiv > 0 {
+		list = append(list, InnerLoopsGone, PrimaryOnly)
+		if g.primary.phases() {
+			list = append(list, PhaseOnly)
+		}
+	}
+	return list
+}
+
+// DroppedDynamics returns the groups of dynamics ([facet.Unknown]) that a level
+// leaves out.
+func (g *GridForming) DroppedDynamics(level string) []string {
+	groups := []string{dynCurrent, dynVoltage, dynFilter, dynNetwork}
+	switch level {
+	case CurrentLoopGone:
+		return groups[:1]
+	case InnerLoopsGone:
+		return groups[:3]
+	case PrimaryOnly:
+		return groups
+	case PhaseOnly:
+		for _, u := range g.primary.unknowns() {
+			if !slices.Contains(groups, u.Dynamics) {
+				groups = append(groups, u.Dynamics)
+			}
+		}
+		return groups
+	}
+	return nil
+}
 
 // WithDetail returns an inverter of the same parameters, setpoints and frame
-// speed at another level.
+// speed at another level, one of Details.
 func (g *GridForming) WithDetail(level string) (solvers.Block, error) {
-	if level != Full && level != PrimaryOnly {
+	if !slices.Contains(g.Details(), level) {
 		return nil, fmt.Errorf("devices: grid-forming inverter: no detail %q: want one of %q", level, g.Details())
 	}
 	h := *g
 	h.setDetail(level)
 	return &h, nil
+}
+
+// Kinks names where the equations have kinks: "current limit" at the levels at
+// which I_max acts, with a second one where a part of i_ref goes first, and
+// "limiting impedance".
+func (g *GridForming) Kinks() []string {
+	var list []string
+	if g.looped() {
+		list = g.limiter.kinks()
+	}
+	if g.par.LimitImpedance.Gain > 0 {
+		list = append(list, "limiting impedance")
+	}
+	return list
+}
+
+// NKinks returns the number of kinks.
+func (g *GridForming) NKinks() int { return len(g.Kinks()) }
+
+// EvalKinks writes |i_ref| - I_max, with a part of i_ref going first |that part| -
+// I_max too, and |i_g| - I_t into dst, A.
+func (g *GridForming) EvalKinks(dst []float64, t float64, v, x []float64) {
+	var pt formingPoint
+	g.at(&pt, g.orders(t), v, x)
+	k := 0
+	if g.looped() {
+		k = g.limiter.evalKinks(dst, pt.iRef)
+	}
+	if l := &g.par.LimitImpedance; l.Gain > 0 {
+		dst[k] = abs(pt.iG) - l.Threshold
+	}
 }
 
 // AppendBinary appends the setpoints to b.
@@ -226,8 +320,6 @@ func (g *GridForming) Guess(x []float64, t float64, v []float64) {
 		u    = g.orders(t)
 		vBus = pair(v, 0)
 		zg   = g.gridImpedance()
-		zv   = complex(p.Rv, p.Xv)
-		z    = x[1 : 1+g.nz]
 	)
 	if !(abs(vBus) > 0.05*g.vBase) { // no voltage to go by (5 %: arbitrary)
 		vBus = complex(max(u.v, 0.05*g.vBase), 0)
@@ -237,15 +329,21 @@ func (g *GridForming) Guess(x []float64, t float64, v []float64) {
 		iNet = times(g.iBase/m, iNet)
 	}
 	vC := vBus + zg*iNet
-	inner := vC + zv*iNet // V e^{j delta}
+	inner := vC + g.virtualImpedance(iNet)*iNet // V e^{j delta}
 	delta := math.Atan2(imag(inner), real(inner))
 	ei := rotor(-delta)
 	iG := ei * iNet
 	vC *= ei
 	s := 1.5 * vC * conj(iG)
 	x[0] = delta
-	g.primary.settle(z, u, stimulus{p: real(s), q: imag(s), i: iG}, g.frame)
-	if !g.full() {
+	l := &g.layout
+	if !l.phase {
+		g.primary.settle(x[1:1+g.nz], u, stimulus{p: real(s), q: imag(s), i: iG}, abs(inner), g.frame)
+	}
+	if l.iG >= 0 {
+		setPair(x, l.iG, iNet)
+	}
+	if l.phi < 0 {
 		return
 	}
 	omega := g.frame
@@ -254,18 +352,18 @@ func (g *GridForming) Guess(x []float64, t float64, v []float64) {
 		omegaN = omega
 	}
 	iF := iG + jtimes(omega*f.Cf, vC)
-	y := x[1+g.nz:]
-	setPair(y, 0, times(ratio(1, p.Kiv, 0), iF-times(p.F, iG)-jtimes(omegaN*f.Cf, vC)))
-	setPair(y, 2, times(ratio(1, p.Kic, 0), vC+complex(f.Rf, omega*f.Lf)*iF-jtimes(omegaN*f.Lf, iF)))
-	setPair(y, 4, iF)
-	setPair(y, 6, vC)
-	setPair(y, 8, iNet)
+	setPair(x, l.phi, times(ratio(1, p.Kiv, 0), iF-times(p.F, iG)-jtimes(omegaN*f.Cf, vC)))
+	setPair(x, l.vC, vC)
+	if l.gamma >= 0 {
+		setPair(x, l.gamma, times(ratio(1, p.Kic, 0), vC+complex(f.Rf, omega*f.Lf)*iF-jtimes(omegaN*f.Lf, iF)))
+		setPair(x, l.iF, iF)
+	}
 }
 
 // steadyCurrent solves the two conditions of a steady state, omega = omega_f and
 // V = |v_bus + (Z_g + Z_v) i_g|, for the current i_g in the network frame by
 // Newton's method from i_g at P*, Q*. Where the frequency doesn't depend on power
-// the first condition says nothing, and P = P* stands for it. It returns the
+// the first condition says nothing, and p~ = 0 stands for it. It returns the
 // starting value if the method doesn't settle.
 func (g *GridForming) steadyCurrent(u orders, vBus complex128) complex128 {
 	start := times(1/1.5, complex(u.p, -u.q)/conj(vBus))
@@ -274,9 +372,9 @@ func (g *GridForming) steadyCurrent(u orders, vBus complex128) complex128 {
 	wq, _, _ := g.mismatch(u, vBus, start+complex(0, g.iBase))
 	span := math.Abs(wd-w0) + math.Abs(wq-w0) // rad/s by rated current
 	residual := func(i complex128) (a, b float64) {
-		dw, dv, p := g.mismatch(u, vBus, i)
+		dw, dv, slip := g.mismatch(u, vBus, i)
 		if span == 0 {
-			return (p - u.p) / g.par.Rating, dv / g.vBase
+			return slip / g.par.Rating, dv / g.vBase
 		}
 		return dw / span, dv / g.vBase
 	}
@@ -304,18 +402,27 @@ func (g *GridForming) steadyCurrent(u orders, vBus complex128) complex128 {
 }
 
 // mismatch returns by how much frequency (rad/s) and voltage (V) of a steady
-// state with current i in the network frame are off, and the active power at the
-// capacitor.
-func (g *GridForming) mismatch(u orders, vBus, i complex128) (dw, dv, p float64) {
-	var z [maxPrimary]float64
+// state with current i in the network frame are off, and p~.
+func (g *GridForming) mismatch(u orders, vBus, i complex128) (dw, dv, slip float64) {
 	vC := vBus + g.gridImpedance()*i
-	inner := vC + complex(g.par.Rv, g.par.Xv)*i // V e^{j delta}
+	inner := vC + g.virtualImpedance(i)*i // V e^{j delta}
 	e := complex(1, 0)
-	if m := abs(inner); m > 0 {
-		e = times(1/m, inner)
+	v := abs(inner)
+	if v > 0 {
+		e = times(1/v, inner)
 	}
 	s := 1.5 * vC * conj(i)
 	in := stimulus{p: real(s), q: imag(s), i: conj(e) * i}
-	g.primary.settle(z[:g.nz], u, in, g.frame)
-	return g.primary.speed(z[:g.nz], u, in) - g.frame, g.primary.voltage(z[:g.nz], u) - abs(inner), in.p
+	speed, voltage := g.primary.law(u, in, v)
+	return speed - g.frame, voltage - v, g.primary.slip(u, in, v)
+}
+
+// virtualImpedance is Z_v + Z_l at current i.
+func (g *GridForming) virtualImpedance(i complex128) complex128 {
+	z := complex(g.par.Rv, g.par.Xv)
+	if l := &g.par.LimitImpedance; l.Gain > 0 {
+		zl, _ := l.at(abs(i))
+		z += zl
+	}
+	return z
 }

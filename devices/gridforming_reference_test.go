@@ -113,7 +113,7 @@ func TestDroopRotation(t *testing.T) {
 		{45, 2121.320344, 3535.533906},
 		{0, -1000, 4000},
 	} {
-		d := Droop{M: m, N: n, OmegaC: 30, Psi: c.degrees * math.Pi / 180}.build(power)
+		d := Droop{M: m, N: n, OmegaC: 30, Psi: c.degrees * math.Pi / 180}.build(rated{power, 314, 326})
 		z, u := []float64{4500, 1300}, orders{p: 500, q: 300, v: 326, omega: 314}
 		p := (u.omega - d.speed(z, u, stimulus{})) / m
 		q := (u.v - d.voltage(z, u)) / n

@@ -7,10 +7,41 @@ import (
 	"islet/solvers/facet"
 )
 
-// PrimaryOnly is the inverters' level of detail besides [Full], for WithDetail.
-// It keeps the power filter and the primary control (the PLL of a follower), and
-// has inner loops, filter and grid-side current at their quasi-steady state.
-const PrimaryOnly = "primary only"
+// Levels of detail of the inverters besides [Full], for WithDetail, from fine to
+// coarse. One name means the same in every inverter: what is named is gone, or is
+// all that is left, and stands at its quasi-steady state (singular perturbation of
+// order zero: its derivative is dropped in the frame in which its equation is
+// written). What stays keeps its parameters, names and meaning.
+const (
+	// CurrentLoopGone has the bridge's current i_f and the current controller's
+	// gamma at their quasi-steady state: i_f = i_ref', the limited reference.
+	CurrentLoopGone = "current loop gone"
+	// InnerLoopsGone (grid-forming) has the voltage loop and the filter's
+	// capacitor at their quasi-steady state too: v_c = v_ref.
+	InnerLoopsGone = "inner loops gone"
+	// PrimaryOnly keeps the power filter and the primary control, which in a
+	// follower is the PLL with the filter of v_md. The grid-side current is at its
+	// quasi-steady state too.
+	PrimaryOnly = "primary only"
+	// PhaseOnly (grid-forming) keeps the angle alone: a phase oscillator. Powers
+	// are instantaneous and the voltage's magnitude is at its quasi-steady value.
+	PhaseOnly = "phase only"
+	// InjectionOnly (grid-following) has the PLL at its quasi-steady state too: a
+	// current in line with the measured voltage, from the filtered v_md.
+	InjectionOnly = "injection only"
+)
+
+// Groups of dynamics of the inverters' unknowns.
+const (
+	dynAngle   = "angle"
+	dynPrimary = "primary control"
+	dynPower   = "power filter"
+	dynVoltage = "voltage loop"
+	dynCurrent = "current loop"
+	dynFilter  = "filter"
+	dynNetwork = "network"
+	dynPLL     = "PLL"
+)
 
 // LCL holds the elements of an inverter's output filter, one phase of a star.
 // A filter without capacitor and grid side (Cf = Lg = Rg = 0) is an L filter.
@@ -44,35 +75,120 @@ func checkLimit(f *faults, name string, value float64, unit string) {
 	}
 }
 
-// saturation is the magnitude limit of a current reference at one point, and
-// its derivative there: i' = s i, s = min(1, I_max/|i|), angle kept.
-type saturation struct {
-	out   complex128 // the limited current
-	scale float64    // s, 1 when not limiting
-	dir   complex128 // i/|i| when limiting, else 0
+// LimitPriority tells which part of a current reference gives way to the
+// current limit.
+type LimitPriority string
+
+// Priorities of the current limit. The three are found in many papers on current
+// limiting, e.g. B. Fan, T. Liu, F. Zhao, H. Wu, X. Wang, "A review of
+// current-limiting control of grid-forming inverters under symmetrical
+// disturbances", IEEE Open J. Power Electronics 3, 2022 (citation from memory).
+const (
+	// AngleKept scales the reference to magnitude I_max: i' = i min(1, I_max/|i|).
+	// The zero value of LimitPriority stands for it.
+	AngleKept LimitPriority = "angle kept"
+	// DFirst keeps the d part as far as the limit allows:
+	// i'_d = i_d within +-I_max, then i'_q = i_q within +-sqrt(I_max^2 - i'_d^2).
+	DFirst LimitPriority = "d first"
+	// QFirst is DFirst with d and q exchanged.
+	QFirst LimitPriority = "q first"
+)
+
+// check notes an unknown priority.
+func (l LimitPriority) check(to *faults) {
+	switch l {
+	case "", AngleKept, DFirst, QFirst:
+	default:
+		to.add("Priority = %q: want %q, %q or %q", string(l), AngleKept, DFirst, QFirst)
+	}
 }
 
-// saturate limits i to magnitude max.
-func saturate(i complex128, max float64) saturation {
+// limiter is a magnitude limit of a current reference.
+type limiter struct {
+	max      float64 // A peak, +Inf for none
+	priority LimitPriority
+}
+
+// saturation is a limiter's output at one point, and its derivative there.
+type saturation struct {
+	out            complex128 // the limited current
+	scale          float64    // |out|/|in|, 1 when not limiting
+	dd, dq, qd, qq float64    // d out/d in
+}
+
+// apply limits i.
+func (l *limiter) apply(i complex128) saturation {
 	re, im := real(i), imag(i)
 	m := math.Sqrt(re*re + im*im)
-	if m <= max {
-		return saturation{out: i, scale: 1}
+	if m <= l.max {
+		return saturation{out: i, scale: 1, dd: 1, qq: 1}
 	}
-	s := max / m
+	s := l.max / m
+	switch l.priority {
+	case DFirst:
+		d, q, own, other := favour(re, im, l.max)
+		return saturation{out: complex(d, q), scale: s, dd: own, qd: other}
+	case QFirst:
+		q, d, own, other := favour(im, re, l.max)
+		return saturation{out: complex(d, q), scale: s, qq: own, dq: other}
+	}
+	nr, ni := re/m, im/m // s (1 - n n^T)
 	return saturation{
 		out:   complex(s*re, s*im),
 		scale: s,
-		dir:   complex(re/m, im/m),
+		dd:    s * ni * ni, dq: -s * nr * ni,
+		qd: -s * nr * ni, qq: s * nr * nr,
 	}
 }
 
+// favour limits the pair (a, b), whose magnitude is beyond max, with a going
+// first, and returns the slopes d a'/d a and d b'/d a. The second is unbounded as
+// |a| nears max, where nothing is left for b.
+func favour(a, b, max float64) (a1, b1, own, other float64) {
+	if math.Abs(a) >= max {
+		return math.Copysign(max, a), 0, 0, 0
+	}
+	b1 = math.Copysign(math.Sqrt((max-a)*(max+a)), b)
+	return a, b1, 1, -a / b1
+}
+
 // slope returns the change of the limited current for a change d of the
-// unlimited one: s (d - n Re(n* d)), n = i/|i|. It is no complex factor.
-func (l *saturation) slope(d complex128) complex128 {
-	nr, ni := real(l.dir), imag(l.dir)
-	r := nr*real(d) + ni*imag(d)
-	return complex(l.scale*(real(d)-nr*r), l.scale*(imag(d)-ni*r))
+// unlimited one.
+func (s *saturation) slope(d complex128) complex128 {
+	re, im := real(d), imag(d)
+	return complex(s.dd*re+s.dq*im, s.qd*re+s.qq*im)
+}
+
+// kinks names the kinks of the limiter, see evalKinks; none if there is no limit.
+func (l *limiter) kinks() []string {
+	switch {
+	case math.IsInf(l.max, 1):
+		return nil
+	case l.priority == DFirst:
+		return []string{"current limit", "current limit taken up by d"}
+	case l.priority == QFirst:
+		return []string{"current limit", "current limit taken up by q"}
+	}
+	return []string{"current limit"}
+}
+
+// evalKinks writes what is positive where the limiter acts on the reference i: its
+// magnitude less the limit, and the magnitude of the part that goes first less
+// the limit. It returns the number written.
+func (l *limiter) evalKinks(dst []float64, i complex128) int {
+	if math.IsInf(l.max, 1) {
+		return 0
+	}
+	dst[0] = abs(i) - l.max
+	switch l.priority {
+	case DFirst:
+		dst[1] = math.Abs(real(i)) - l.max
+		return 2
+	case QFirst:
+		dst[1] = math.Abs(imag(i)) - l.max
+		return 2
+	}
+	return 1
 }
 
 // conj is cmplx.Conj, which the compiler inlines in this form.

@@ -11,9 +11,10 @@ import (
 // derivative, on both sides.
 func TestSaturate(t *testing.T) {
 	rnd := rand.New(rand.NewPCG(1, 2))
+	lim := limiter{max: 15}
 	for range 200 {
 		i := complex(20*rnd.NormFloat64(), 20*rnd.NormFloat64())
-		l := saturate(i, 15)
+		l := lim.apply(i)
 		if want := math.Min(15, cmplx.Abs(i)); math.Abs(cmplx.Abs(l.out)-want) > 1e-12*want {
 			t.Fatalf("|%v| limited to %g, want %g", i, cmplx.Abs(l.out), want)
 		}
@@ -25,12 +26,12 @@ func TestSaturate(t *testing.T) {
 		}
 		d := complex(rnd.NormFloat64(), rnd.NormFloat64())
 		const h = 1e-4
-		want := (saturate(i+h*d, 15).out - saturate(i-h*d, 15).out) / (2 * h)
+		want := (lim.apply(i+h*d).out - lim.apply(i-h*d).out) / (2 * h)
 		if e := cmplx.Abs(l.slope(d) - want); e > 1e-7 {
 			t.Fatalf("slope at %v off by %g", i, e)
 		}
 	}
-	if l := saturate(0, 15); l.out != 0 || l.scale != 1 {
+	if l := lim.apply(0); l.out != 0 || l.scale != 1 {
 		t.Errorf("0 is limited to %v", l.out)
 	}
 }
