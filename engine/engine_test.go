@@ -244,8 +244,8 @@ func TestDeadIsland(t *testing.T) {
 }
 
 func TestSnapshotContinuesWithTheSameBits(t *testing.T) {
-	build := func() *engine.Simulation {
-		m := start(t, twoSources(t, &shunt{r: 12, l: 10e-3}), nil)
+	build := func(o *engine.Options) *engine.Simulation {
+		m := start(t, twoSources(t, &shunt{r: 12, l: 10e-3}), o)
 		for _, e := range []struct {
 			t float64
 			e engine.Event
@@ -260,9 +260,12 @@ func TestSnapshotContinuesWithTheSameBits(t *testing.T) {
 		return m
 	}
 	ctx := context.Background()
-	for _, method := range []solvers.Method{solvers.Rodas5P, solvers.Trapezoidal} {
-		_ = method
-		a := build()
+	for _, o := range []*engine.Options{
+		{},
+		{Method: solvers.Rodas4P, FixedFrame: true, GeneralLU: true},
+		{Method: solvers.Trapezoidal, Solver: solvers.Options{MaxStep: 1e-4}},
+	} {
+		a := build(o)
 		if _, err := a.Run(ctx, 0.2); err != nil {
 			t.Fatal(err)
 		}
@@ -277,7 +280,7 @@ func TestSnapshotContinuesWithTheSameBits(t *testing.T) {
 		if _, err := a.Run(ctx, 0.6); err != nil {
 			t.Fatal(err)
 		}
-		b := build()
+		b := build(o)
 		var copied engine.Snapshot
 		if err := copied.UnmarshalBinary(data); err != nil {
 			t.Fatal(err)
