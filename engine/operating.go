@@ -203,7 +203,14 @@ func (s *pointSearch) correction() error {
 		m.net.Pin(r, 1)
 	}
 	if err := m.net.Factor(0); err != nil {
-		return err
+		// An unknown that nothing pulls back (a free integrator, the angle
+		// of a second source): a small alpha holds it where it is and costs
+		// the others next to nothing. Whether the point is an equilibrium
+		// is checked at the end in any case.
+		const hold = 1e-4 // 1/s
+		if m.net.Factor(hold) != nil {
+			return err
+		}
 	}
 	for k := range s.reference {
 		w := m.topo.islands[k].frame.speed
