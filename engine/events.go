@@ -215,12 +215,8 @@ func (m *Simulation) handle(hits []solvers.Hit) error {
 	}
 	if changed {
 		st := m.step.Stats()
-		from := 0.0
-		if len(m.costs) > 0 {
-			from = m.costs[len(m.costs)-1].To
-		}
-		m.costs = append(m.costs, Cost{from, m.t, st.Sub(m.costAt)})
-		m.costAt = st
+		m.costs = append(m.costs, Cost{m.costTo, m.t, st.Sub(m.costAt)})
+		m.costAt, m.costTo = st, m.t
 		if err := m.restart(); err != nil {
 			m.stopped = err
 			return err

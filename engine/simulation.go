@@ -29,7 +29,8 @@ type Options struct {
 	FromRest bool
 	// NoLedger leaves out the energy ledger, which costs some time a step.
 	NoLedger bool
-	// FixedFrame keeps every frame at the nominal frequency.
+	// FixedFrame keeps every frame at the speed it has at the start, or at
+	// its making, instead of following the island.
 	FixedFrame bool
 	// GeneralLU solves with one general sparse LU of the whole matrix
 	// instead of static condensation; slower, a second opinion.
@@ -81,7 +82,8 @@ type Simulation struct {
 	ledger *ledger
 	notes  []Note
 	costs  []Cost
-	costAt solvers.Stats
+	costAt solvers.Stats // at the end of the last of costs, at costTo
+	costTo float64
 	point  OperatingPoint
 	lean   leanFrame
 }
@@ -171,15 +173,11 @@ func (m *Simulation) Unknowns() int { return m.net.Dim() }
 // Stats counts the work since Start.
 func (m *Simulation) Stats() solvers.Stats { return m.step.Stats() }
 
-// Costs returns the work between events so far.
+// Costs returns the work between events so far, since Start or Restore.
 func (m *Simulation) Costs() []Cost {
 	c := append([]Cost(nil), m.costs...)
-	from := 0.0
-	if len(c) > 0 {
-		from = c[len(c)-1].To
-	}
-	if m.t > from {
-		c = append(c, Cost{from, m.t, m.step.Stats().Sub(m.costAt)})
+	if m.t > m.costTo {
+		c = append(c, Cost{m.costTo, m.t, m.step.Stats().Sub(m.costAt)})
 	}
 	return c
 }

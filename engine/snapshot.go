@@ -219,7 +219,14 @@ func (m *Simulation) Restore(s *Snapshot) error {
 	if err := m.chatter.UnmarshalBinary(c.Chatter); err != nil {
 		return fail(err)
 	}
-	m.costAt = m.step.Stats()
+	m.costs, m.costAt, m.costTo = nil, m.step.Stats(), m.t
+	kept := m.notes[:0]
+	for _, n := range m.notes {
+		if n.Time <= m.t {
+			kept = append(kept, n)
+		}
+	}
+	m.notes = kept
 	m.rec.restart(m.t)
 	m.rearm()
 	return nil
