@@ -1,0 +1,350 @@
+package cases
+
+import (
+	"errors"
+	"fmt"
+	"os"
+	"path"
+	"path/filepath"
+	"strings"
+
+	"islet/engine"
+	"islet/solvers"
+	"islet/solvers/facet"
+)
+
+// Case is a case file that has been read and found in order. It is not
+// changed by use: any number of systems can be built from it, also at once.
+type Case struct {
+	Name       string // of the file, without directory and .toml
+	Title      string
+	Text       string  // what the study is about, for people
+	Frequency  float64 // nominal, Hz
+	Until      float64 // end of the study, s
+	Sample     float64 // spacing of the trace, s; 0 for the solver's own steps
+	Tolerance  float64 // relative, of the solver
+	Record     []string
+	Rules      []DetailRule // the file's own
+	Events     []Event
+	Conditions []Condition
+
+	file    string
+	buses   []busSpec
+	devices []deviceSpec
+}
+
+// Event is an event of the study at a time.
+type Event struct {
+	Name  string
+	Time  float64 // s
+	Event engine.Event
+
+	key []string
+}
+
+// Condition is an event that happens once a condition has held.
+type Condition struct {
+	Name  string
+	When  engine.Condition
+	Event engine.Event
+
+	key []string
+}
+
+// DetailRule puts the devices that a pattern matches at a level of detail, as
+// far as they offer it. The pattern is matched against the device's name (see
+// path.Match), or, after "kind:", against its kind: "kind:line". Of several
+// rules for a device the last counts; those of the file come first.
+type DetailRule struct {
+	Pattern, Level string
+}
+
+type busSpec struct {
+	name  string
+	volts float64
+	dead  bool
+}
+
+type deviceSpec struct {
+	name string
+	kind *kind
+	at   []int // buses
+	part part
+	site *site
+}
+
+// build makes the device at its fullest level.
+func (d *deviceSpec) build() (engine.Device, error) { return d.part.build(d.site) }
+
+// Load reads a case from a file, with overrides applied in order. The error
+// joins every fault found, each a *[Fault].
+func Load(file string, ov ...Override) (*Case, error) {
+	f, err := os.Open(file)
+	if err != nil {
+		return nil, fmt.Errorf("cases: %w", err)
+	}
+	defer f.Close()
+	data, err := readLimited(f)
+	if err != nil {
+		return nil, fmt.Errorf("cases: %s: %w", file, err)
+	}
+	return Parse(file, data, ov...)
+}
+
+// Open reads a shipped case by name, or a file. A name with a separator or the
+// ending .toml is always a file.
+func Open(nameOrPath string, ov ...Override) (*Case, error) {
+	if data, err := Source(nameOrPath); err == nil {
+		return Parse(nameOrPath+".toml", data, ov...)
+	}
+	c, err := Load(nameOrPath, ov...)
+	if errors.Is(err, os.ErrNotExist) {
+		names := shippedNames()
+		hint := "shipped cases are " + list(names)
+		if n, ok := nearest(nameOrPath, names); ok {
+			hint = fmt.Sprintf("did you mean %s? %s", n, hint)
+		}
+		return nil, fmt.Errorf("cases: no shipped case and no file %q; %s: %w", nameOrPath, hint, os.ErrNotExist)
+	}
+	return c, err
+}
+
+// Parse reads a case from data; name is what errors call it.
+func Parse(name string, data []byte, ov ...Override) (*Case, error) {
+	d, err := decode(name, data)
+	if err != nil {
+		return nil, err
+	}
+	for _, o := range ov {
+		d.override(o)
+	}
+	base := strings.TrimSuffix(filepath.Base(name), ".toml")
+	l := &loader{doc: d, c: &Case{Name: base, file: name}}
+	l.load()
+	if len(d.faults) > 0 {
+		return nil, joinFaults(name, d.faults)
+	}
+	return l.c, nil
+}
+
+// BusNames lists the buses in the order of the file.
+func (c *Case) BusNames() []string {
+	names := make([]string, len(c.buses))
+	for i, b := range c.buses {
+		names[i] = b.name
+	}
+	return names
+}
+
+// DeviceNames lists the devices in the order of the file.
+func (c *Case) DeviceNames() []string {
+	names := make([]string, len(c.devices))
+	for i, d := range c.devices {
+		names[i] = d.name
+	}
+	return names
+}
+
+// Kind returns the kind of a device, "" if there is none of that name.
+func (c *Case) Kind(device string) string {
+	for _, d := range c.devices {
+		if d.name == device {
+			return d.kind.name
+		}
+	}
+	return ""
+}
+
+// Details lists the levels of detail that each device offers, from full to
+// coarsest. Devices with one level alone are left out.
+func (c *Case) Details() map[string][]string {
+	out := make(map[string][]string)
+	for i := range c.devices {
+		dev, err := c.devices[i].build()
+		if err != nil {
+			continue // not possible: it was built once
+		}
+		if d, ok := dev.(facet.Detailed); ok {
+			out[c.devices[i].name] = d.Details()
+		}
+	}
+	return out
+}
+
+// matches tells whether a rule means the device. The error is that of a
+// malformed pattern.
+func (r DetailRule) matches(d *deviceSpec) (bool, error) {
+	if p, ok := strings.CutPrefix(r.Pattern, "kind:"); ok {
+		return path.Match(strings.TrimSpace(p), d.kind.name)
+	}
+	return path.Match(r.Pattern, d.name)
+}
+
+// levels finds the level of each device under the rules, "" for as built. The
+// errors, one for each rule at most, belong to the rules of the same number.
+func levels(specs []deviceSpec, built []engine.Device, rules []DetailRule) (at []string, errs []error) {
+	at = make([]string, len(specs))
+	errs = make([]error, len(rules))
+	for k, r := range rules {
+		matched, used := false, false
+		var offered []string
+		for i := range specs {
+			ok, err := r.matches(&specs[i])
+			if err != nil {
+				errs[k] = fmt.Errorf("%q is no pattern; want a name in which * stands for any characters, ? for one and [a-z] for a range", r.Pattern)
+				break
+			}
+			if !ok {
+				continue
+			}
+			matched = true
+			d, ok := built[i].(facet.Detailed)
+			if !ok {
+				continue
+			}
+			for _, l := range d.Details() {
+				if l == r.Level {
+					at[i], used = l, true
+				}
+				if !contains(offered, l) {
+					offered = append(offered, l)
+				}
+			}
+		}
+		switch {
+		case errs[k] != nil || used:
+		case !matched && strings.HasPrefix(r.Pattern, "kind:"):
+			errs[k] = fmt.Errorf("no device is of kind %q; %s", strings.TrimPrefix(r.Pattern, "kind:"), suggest(strings.TrimPrefix(r.Pattern, "kind:"), kindNames()))
+		case !matched:
+			errs[k] = fmt.Errorf("no device matches %q; %s", r.Pattern, suggest(r.Pattern, names(specs)))
+		case len(offered) == 0:
+			errs[k] = fmt.Errorf("what %q matches has one level of detail only", r.Pattern)
+		default:
+			errs[k] = fmt.Errorf("no device that %q matches offers the level %q; accepted are %s", r.Pattern, r.Level, list(offered))
+		}
+	}
+	return at, errs
+}
+
+func names(specs []deviceSpec) []string {
+	out := make([]string, len(specs))
+	for i := range specs {
+		out[i] = specs[i].name
+	}
+	return out
+}
+
+func contains(list []string, s string) bool {
+	for _, l := range list {
+		if l == s {
+			return true
+		}
+	}
+	return false
+}
+
+// withLevel returns the device at a level.
+func withLevel(dev engine.Device, level string) (engine.Device, error) {
+	d, ok := dev.(facet.Detailed)
+	if level == "" || !ok || d.Detail() == level {
+		return dev, nil
+	}
+	b, err := d.WithDetail(level)
+	if err != nil {
+		return nil, err
+	}
+	out, ok := b.(engine.Device)
+	if !ok {
+		return nil, fmt.Errorf("at level %q it isn't a device any more", level)
+	}
+	return out, nil
+}
+
+// Build makes a system of the case, with the file's rules of detail and then
+// the given ones. The error joins all faults of the rules.
+func (c *Case) Build(rules ...DetailRule) (*engine.System, error) {
+	sys := engine.NewSystem(c.Frequency)
+	buses := make([]engine.Bus, len(c.buses))
+	for i, b := range c.buses {
+		buses[i] = sys.Bus(b.name, b.volts)
+	}
+	var errs []error
+	built := make([]engine.Device, len(c.devices))
+	for i := range c.devices {
+		var err error
+		if built[i], err = c.devices[i].build(); err != nil {
+			errs = append(errs, fmt.Errorf("cases: device %s: %s", c.devices[i].name, plain(err)))
+		}
+	}
+	if err := errors.Join(errs...); err != nil {
+		return nil, err
+	}
+	all := append(append([]DetailRule(nil), c.Rules...), rules...)
+	at, ruleErrs := levels(c.devices, built, all)
+	for k, err := range ruleErrs {
+		if err != nil && k >= len(c.Rules) {
+			errs = append(errs, fmt.Errorf("cases: detail %s=%s: %w", all[k].Pattern, all[k].Level, err))
+		}
+	}
+	for i := range c.devices {
+		d := &c.devices[i]
+		dev, err := withLevel(built[i], at[i])
+		if err != nil {
+			errs = append(errs, fmt.Errorf("cases: device %s: %s", d.name, plain(err)))
+			continue
+		}
+		ends := make([]engine.Bus, len(d.at))
+		for k, b := range d.at {
+			ends[k] = buses[b]
+		}
+		if err := sys.Add(d.name, dev, ends...); err != nil {
+			errs = append(errs, err)
+		}
+	}
+	if err := errors.Join(errs...); err != nil {
+		return nil, err
+	}
+	return sys, nil
+}
+
+// Start builds the case, starts it (engine.Start finds the operating point)
+// and schedules its events and conditions. Options left at zero (Record nil,
+// Sample and Solver.RelTol 0) are the case's; o may be nil and isn't changed.
+func (c *Case) Start(o *engine.Options, rules ...DetailRule) (*engine.Simulation, error) {
+	sys, err := c.Build(rules...)
+	if err != nil {
+		return nil, err
+	}
+	var opt engine.Options
+	if o != nil {
+		opt = *o
+	}
+	if opt.Record == nil {
+		opt.Record = c.Record
+	}
+	if opt.Sample == 0 {
+		opt.Sample = c.Sample
+	}
+	if opt.Solver == (solvers.Options{}) || opt.Solver.RelTol == 0 {
+		opt.Solver.RelTol = c.Tolerance
+	}
+	sim, err := engine.Start(sys, &opt)
+	if err != nil {
+		return nil, err
+	}
+	var errs []error
+	for _, e := range c.Events {
+		if err := sim.At(e.Time, e.Event); err != nil {
+			errs = append(errs, fmt.Errorf("cases: %s: %s: %w", c.file, dotted(e.key), err))
+		}
+	}
+	for _, w := range c.Conditions {
+		if err := sim.When(w.When, w.Event); err != nil {
+			errs = append(errs, fmt.Errorf("cases: %s: %s: %w", c.file, dotted(w.key), err))
+		}
+	}
+	if err := errors.Join(errs...); err != nil {
+		return nil, err
+	}
+	return sim, nil
+}

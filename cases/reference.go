@@ -1,0 +1,123 @@
+package cases
+
+import (
+	"fmt"
+	"strings"
+)
+
+// Reference returns the table of the keys of a case file, made from the same
+// table that the loader checks by. kind is "" for all of it, a kind of device,
+// or one of study, bus, device, event, condition and detail.
+func Reference(kind string) (string, error) {
+	var b strings.Builder
+	all := kinds()
+	switch kind {
+	case "":
+		b.WriteString(referenceHead)
+		for _, s := range []string{"study", "bus", "device"} {
+			b.WriteByte('\n')
+			referenceSection(&b, s)
+		}
+		for _, k := range all {
+			b.WriteByte('\n')
+			referenceKind(&b, k)
+		}
+		for _, s := range []string{"event", "condition", "detail"} {
+			b.WriteByte('\n')
+			referenceSection(&b, s)
+		}
+		return b.String(), nil
+	case "study", "bus", "device", "event", "condition", "detail":
+		referenceSection(&b, kind)
+		return b.String(), nil
+	}
+	if k := findKind(all, kind); k != nil {
+		referenceKind(&b, k)
+		return b.String(), nil
+	}
+	known := append(append([]string(nil), kindNames()...), sections...)
+	if n, ok := nearest(kind, known); ok {
+		return "", fmt.Errorf("cases: no kind of device or table %q; did you mean %q?", kind, n)
+	}
+	return "", fmt.Errorf("cases: no kind of device or table %q; there are %s", kind, strings.Join(known, ", "))
+}
+
+const referenceHead = `A case file is TOML with named tables: [study], [bus.NAME], [device.NAME],
+[event.NAME], [condition.NAME] and [detail]. Names have letters, digits, - and _.
+Keys in trade units end in the unit. Keys named after a symbol of the equations
+are in SI and replace what the nameplate would give; powers are three-phase
+totals, impedances those of one phase of a star, voltages line to line rms unless
+the unit says "peak phase".
+`
+
+func referenceSection(b *strings.Builder, section string) {
+	switch section {
+	case "study":
+		b.WriteString("[study]\n")
+		referenceTable(b, infosOf(studyFields()))
+	case "bus":
+		b.WriteString("[bus.NAME]\n")
+		referenceTable(b, infosOf(busFields()))
+	case "device":
+		fmt.Fprintf(b, "[device.NAME]\n  kind          one of %s\n", strings.Join(kindNames(), ", "))
+		b.WriteString("  bus           the bus it is connected to, or\n  from, to      its two buses; for a transformer the high-voltage one is from\n")
+	case "event":
+		b.WriteString("[event.NAME]\nEvents at one time happen in the order in which they stand.\n")
+		referenceTable(b, infosOf(eventFields()))
+	case "condition":
+		b.WriteString("[condition.NAME]\nIts event happens once, when the condition has held. Exactly one limit is given.\n")
+		referenceTable(b, infosOf(conditionFields()))
+	case "detail":
+		b.WriteString("[detail]\n  \"PATTERN\" = \"LEVEL\"\n")
+		b.WriteString("PATTERN is a device's name in which * stands for any characters, or kind:LINE for\nall of a kind. Of several lines for a device the last counts. Levels are full and\nquasi-steady (networks), full and primary only (inverters).\n")
+	}
+}
+
+func infosOf[T any](fields []field[T]) []keyInfo {
+	var out []keyInfo
+	for i := range fields {
+		out = append(out, fields[i].keyInfo)
+	}
+	return out
+}
+
+func referenceKind(b *strings.Builder, k *kind) {
+	fmt.Fprintf(b, "kind = %q\n%s\n", k.name, k.doc)
+	var infos []keyInfo
+	for _, t := range k.terminals {
+		infos = append(infos, keyInfo{name: t, def: "required", doc: "bus", form: text})
+	}
+	referenceTable(b, append(infos, k.infos...))
+}
+
+// referenceTable prints keys, units, defaults, ranges and meanings.
+func referenceTable(b *strings.Builder, infos []keyInfo) {
+	rows := [][5]string{{"key", "unit", "default", "accepted", "meaning"}}
+	for _, k := range infos {
+		def := k.def
+		if def == "" {
+			def = "-"
+		}
+		unit := k.unit
+		if unit == "" {
+			unit = "-"
+		}
+		rows = append(rows, [5]string{k.name, unit, def, k.accepted(), k.doc})
+	}
+	var width [4]int
+	for _, r := range rows {
+		for i := range width {
+			// A long default or range runs over instead of widening all.
+			if n := len(r[i]); n <= 28 {
+				width[i] = max(width[i], n)
+			}
+		}
+	}
+	for _, r := range rows {
+		line := " "
+		for i, w := range width {
+			line += fmt.Sprintf(" %-*s", w, r[i])
+		}
+		b.WriteString(line + " " + r[4] + "\n")
+	}
+}
