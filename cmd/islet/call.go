@@ -83,7 +83,7 @@ func studyFlags(c *call) {
 	c.fs.StringVar(&c.method, "method", "", "integrator: `NAME` is Rodas5P (default), Rodas4P or Trapezoidal")
 	c.fs.Float64Var(&c.step, "step", 0, "largest step, `s`; the fixed step of Trapezoidal")
 	c.fs.Float64Var(&c.sample, "sample", 0, "spacing of recorded waveforms, `s` (default: the case's)")
-	c.fs.BoolVar(&c.fixed, "fixed-frame", false, "keep the network frame at nominal frequency")
+	c.fs.BoolVar(&c.fixed, "fixed-frame", false, "keep every network frame at the speed it starts with")
 	c.fs.BoolVar(&c.general, "general-lu", false, "solve with one general sparse LU instead of static condensation")
 }
 

@@ -15,7 +15,7 @@ import (
 
 func compareFlags(c *call) {
 	studyFlags(c)
-	c.fs.Var(&c.settings, "setting", "`NAME: PATTERN=LEVEL, ...`: a setting to compare, applied after --detail; may be repeated (default: every level that the devices offer, each on all devices that offer it)")
+	c.fs.Var(&c.settings, "setting", "`NAME: PATTERN=LEVEL, ...`: a setting to compare, applied after --detail; may be repeated (default: every level that the devices offer, each on all devices that offer it, with the network as given and quasi-steady)")
 	c.fs.Var(&c.record, "record", "`PATTERN`: channels to compare; may be repeated")
 	c.fs.IntVar(&c.repeat, "repeat", 5, "timed runs of each setting, taken in turns; the median counts")
 	c.fs.StringVar(&c.out, "out", "", "write table (text), deviations (CSV) and results (JSON) into `DIR`")
@@ -94,8 +94,12 @@ type levelSetting struct {
 	rules []cases.DetailRule
 }
 
-// everyLevel lists, for each level that some devices offer beyond their
-// present one, the setting that puts all of those at it.
+// networkLevel is the level that lines, loads and transformers offer.
+const networkLevel = "quasi-steady"
+
+// everyLevel lists the settings to compare by default: the network at
+// quasi-steady state, and every reduced level of the inverters on all devices
+// that offer it, with the network as given and with it quasi-steady.
 func everyLevel(k *cases.Case) []levelSetting {
 	at := make(map[string][]cases.DetailRule)
 	rank := make(map[string]int)
@@ -108,17 +112,30 @@ func everyLevel(k *cases.Case) []levelSetting {
 			rank[l] = max(rank[l], i)
 		}
 	}
-	var out []levelSetting
+	var names []string
 	for l, r := range at {
 		sort.Slice(r, func(i, j int) bool { return r[i].Pattern < r[j].Pattern })
-		out = append(out, levelSetting{l, r})
-	}
-	sort.Slice(out, func(i, j int) bool {
-		if rank[out[i].name] != rank[out[j].name] {
-			return rank[out[i].name] < rank[out[j].name]
+		if l != networkLevel {
+			names = append(names, l)
 		}
-		return out[i].name < out[j].name
+	}
+	sort.Slice(names, func(i, j int) bool {
+		if rank[names[i]] != rank[names[j]] {
+			return rank[names[i]] < rank[names[j]]
+		}
+		return names[i] < names[j]
 	})
+	var out []levelSetting
+	network := at[networkLevel]
+	if network != nil {
+		out = append(out, levelSetting{"network " + networkLevel, network})
+	}
+	for _, l := range names {
+		out = append(out, levelSetting{l, at[l]})
+		if network != nil {
+			out = append(out, levelSetting{l + ", network " + networkLevel, append(append([]cases.DetailRule(nil), at[l]...), network...)})
+		}
+	}
 	return out
 }
 

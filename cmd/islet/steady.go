@@ -25,6 +25,15 @@ type pointValue struct {
 	Unit    string  `json:"unit"`
 }
 
+// decimal formats a value without the minus sign of one that rounds to zero.
+func decimal(format string, v float64) string {
+	s := fmt.Sprintf(format, v)
+	if strings.Trim(s, "-0.") == "" {
+		return strings.TrimPrefix(s, "-")
+	}
+	return s
+}
+
 func cmdSteady(ctx context.Context, c *call) error {
 	k, err := c.openCase()
 	if err != nil {
@@ -92,7 +101,7 @@ func cmdSteady(ctx context.Context, c *call) error {
 		cell := func(scale float64, format string, channels ...string) string {
 			for _, ch := range channels {
 				if v, ok := values[name+"."+ch]; ok {
-					return fmt.Sprintf(format, v*scale)
+					return decimal(format, v*scale)
 				}
 			}
 			return ""

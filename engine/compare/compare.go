@@ -466,7 +466,7 @@ func sentence(ref, r *Result, isRef bool) string {
 		return fmt.Sprintf("%s is the reference: %d unknowns, %d steps, %s.", r.Setting, r.Unknowns, r.Steps, duration(r.Time))
 	}
 	if r.Trace == nil {
-		return fmt.Sprintf("%s can't be run: %s.", r.Setting, r.Failure)
+		return fmt.Sprintf("%s can't be run: %s.", r.Setting, brief(r.Failure))
 	}
 	var b strings.Builder
 	fmt.Fprintf(&b, "%s keeps %d of %d unknowns and takes %s", r.Setting, r.Unknowns, ref.Unknowns, duration(r.Time))
@@ -476,7 +476,7 @@ func sentence(ref, r *Result, isRef bool) string {
 	if r.Diverged {
 		fmt.Fprintf(&b, "; it leaves the reference for good")
 		if r.Failure != "" {
-			fmt.Fprintf(&b, " and ends at %.4g s: %s", r.Reached, r.Failure)
+			fmt.Fprintf(&b, " and ends at %.4g s: %s", r.Reached, brief(r.Failure))
 		}
 		b.WriteString(".")
 		return b.String()
@@ -514,6 +514,15 @@ func sentence(ref, r *Result, isRef bool) string {
 	}
 	b.WriteString(".")
 	return b.String()
+}
+
+// brief is the first of several joined errors.
+func brief(failure string) string {
+	first, rest, more := strings.Cut(failure, "\n")
+	if !more {
+		return first
+	}
+	return fmt.Sprintf("%s (and %d more of the kind)", first, strings.Count(rest, "\n")+1)
 }
 
 func duration(d time.Duration) string {

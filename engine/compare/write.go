@@ -13,36 +13,35 @@ import (
 // WriteText prints the comparison as tables and a sentence for each setting.
 func (c *Comparison) WriteText(w io.Writer) error {
 	p := &printer{w: w}
-	p.printf("%-34s %9s %8s %8s %8s %10s %8s\n", "setting", "unknowns", "steps", "rejected", "factor.", "time", "speed-up")
+	p.printf("%-42s %9s %8s %8s %8s %10s %8s\n", "setting", "unknowns", "steps", "rejected", "factor.", "time", "speed-up")
 	for _, r := range c.Results {
 		t, s := "-", "-"
 		if r.Time > 0 {
 			t, s = duration(r.Time), fmt.Sprintf("%.2f", r.Speedup)
 		}
-		p.printf("%-34s %9d %8d %8d %8d %10s %8s\n", r.Setting, r.Unknowns, r.Steps, r.Rejected, r.Factorizations, t, s)
+		p.printf("%-42s %9d %8d %8d %8d %10s %8s\n", r.Setting, r.Unknowns, r.Steps, r.Rejected, r.Factorizations, t, s)
 	}
 	for _, r := range c.Results[1:] {
 		if len(r.Groups) == 0 {
 			continue
 		}
 		p.printf("\n%s against %s: largest deviation, %% of the channel's range\n", r.Setting, c.Results[0].Setting)
-		p.printf("  %-10s", "")
+		table := [][]string{{""}}
 		for k := range numWindows {
-			p.printf(" %-28s", k)
+			table[0] = append(table[0], k.String())
 		}
-		p.printf("\n")
 		for _, g := range r.Groups {
-			p.printf("  %-10s", g.Name)
+			row := []string{g.Name}
 			for k, ch := range g.Worst {
 				cell := "-"
 				if ch != nil {
-					d := ch.Windows[k]
-					cell = fmt.Sprintf("%.3g %% %s", 100*d.Relative(), ch.Name)
+					cell = fmt.Sprintf("%.3g %% %s", 100*ch.Windows[k].Relative(), ch.Name)
 				}
-				p.printf(" %-28s", cell)
+				row = append(row, cell)
 			}
-			p.printf("\n")
+			table = append(table, row)
 		}
+		p.table(table)
 	}
 	p.printf("\n")
 	for _, r := range c.Results {
@@ -59,6 +58,23 @@ type printer struct {
 func (p *printer) printf(format string, a ...any) {
 	if p.err == nil {
 		_, p.err = fmt.Fprintf(p.w, format, a...)
+	}
+}
+
+// table prints rows of cells, each column as wide as its widest cell.
+func (p *printer) table(rows [][]string) {
+	width := make([]int, len(rows[0]))
+	for _, r := range rows {
+		for i, c := range r {
+			width[i] = max(width[i], len(c))
+		}
+	}
+	for _, r := range rows {
+		line := " "
+		for i, c := range r {
+			line += fmt.Sprintf(" %-*s ", width[i], c)
+		}
+		p.printf("%s\n", strings.TrimRight(line, " "))
 	}
 }
 
