@@ -12,6 +12,11 @@ import (
 // steps of the classical Runge-Kutta method, at a terminal voltage given as a
 // function of time.
 func rk4(b solvers.Block, x []float64, t, span float64, n int, v func(t float64) complex128) error {
+	return march(b, x, t, span, n, func(t float64, _ []float64) complex128 { return v(t) })
+}
+
+// march is rk4 with a terminal voltage that depends on the own unknowns too.
+func march(b solvers.Block, x []float64, t, span float64, n int, v func(t float64, x []float64) complex128) error {
 	own := len(x)
 	h := span / float64(n)
 	mass, flow, volts := make([]float64, own), make([]float64, 2), make([]float64, 2)
@@ -22,7 +27,7 @@ func rk4(b solvers.Block, x []float64, t, span float64, n int, v func(t float64)
 	}
 	y := make([]float64, own)
 	slope := func(dst []float64, t float64, x []float64) error {
-		setPair(volts, 0, v(t))
+		setPair(volts, 0, v(t, x))
 		if err := b.Eval(flow, dst, t, volts, x); err != nil {
 			return err
 		}

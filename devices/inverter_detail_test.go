@@ -4,6 +4,7 @@ import (
 	"fmt"
 	"math"
 	"math/rand/v2"
+	"slices"
 	"testing"
 
 	"gonum.org/v1/gonum/mat"
@@ -11,20 +12,22 @@ import (
 	"islet/solvers/facet"
 )
 
-// settleFast solves the right-hand sides of the unknowns not in slow to zero by
-// Newton's method, from the values in x, at given terminal voltage.
-func settleFast(b inverter, v, x []float64, slow map[string]bool) error {
+// settleAlgebraic solves the equations of the unknowns without mass by Newton's
+// method, from the values in x, at given terminal voltage.
+func settleAlgebraic(b inverter, v, x []float64) error {
 	units := b.Describe().Unknowns
+	own := len(units)
+	mass := make([]float64, own)
+	b.Mass(make([]float64, 2), mass)
 	var fast []int
-	for i, u := range units {
-		if !slow[u.Name] {
+	for i, m := range mass {
+		if m == 0 {
 			fast = append(fast, i)
 		}
 	}
 	if len(fast) == 0 {
 		return nil
 	}
-	own := len(units)
 	n := 2 + own
 	flow, rate := make([]float64, 2), make([]float64, own)
 	for range 50 {
@@ -59,35 +62,62 @@ func settleFast(b inverter, v, x []float64, slow map[string]bool) error {
 	return fmt.Errorf("no convergence")
 }
 
-// The two roads to detail "primary only": the reduced equations, and the full
-// equations with the right-hand sides of all fast unknowns solved to zero at
-// the same terminal voltage and slow unknowns. Flow and slow rates agree. (The
-// flow of the full equations is then their quasi-steady i_g.)
-func TestPrimaryOnlyTwoRoads(t *testing.T) {
+// reducible is an inverter with a detail ladder.
+type reducible interface {
+	inverter
+	facet.Detailed
+	DroppedDynamics(level string) []string
+}
+
+// The two roads to each level of detail: the reduced equations, and the full ones
+// with the mass of the dropped groups set to zero. At the same terminal voltage and
+// slow unknowns, away from steady state, flow and slow rates agree.
+func TestTwoRoads(t *testing.T) {
 	type variant struct {
-		name string
-		full inverter
-		slow []string
-		base float64 // A
+		name  string
+		full  reducible
+		limit bool // I_max acts at some points, so the levels without it differ
 	}
 	var list []variant
+	machine := machineOf(0.9)
+	unfiltered, prompt := machine, machine
+	unfiltered.OmegaC = math.Inf(1)
+	prompt.Tv = 0
 	for _, c := range []struct {
-		name string
-		edit func(*GridFormingParams)
+		name    string
+		control PrimaryControl
 	}{
-		{"droop", func(*GridFormingParams) {}},
-		{"rotated, virtual impedance, own speed", func(p *GridFormingParams) {
-			p.Primary = Droop{M: 3e-4, N: 1.5e-3, OmegaC: 40, Psi: 0.7}
-			p.Rv, p.Xv, p.OwnSpeed = 0.4, 0.6, true
-		}},
-		{"resistive, virtual resistance", func(p *GridFormingParams) {
-			p.Primary = Droop{M: 3e-4, N: 1.5e-3, OmegaC: 40}
-			p.Rv = 0.8
-		}},
+		{"droop", Droop{M: 3e-4, N: 1.5e-3, OmegaC: 40, Psi: math.Pi / 2}},
+		{"droop rotated", Droop{M: 3e-4, N: 1.5e-3, OmegaC: 40, Psi: 0.7}},
+		{"droop resistive", Droop{M: 3e-4, N: 1.5e-3, OmegaC: 40}},
+		{"machine", machineOf(math.Pi / 2)},
+		{"machine rotated", machine},
+		{"machine without power filter", unfiltered},
+		{"machine without delay", prompt},
+		{"oscillator", oscillatorOf(math.Pi / 2)},
+		{"oscillator rotated", oscillatorOf(0.7)},
+		{"oscillator resistive", oscillatorOf(0)},
 	} {
-		p := testForming()
-		c.edit(&p)
-		list = append(list, variant{"forming, " + c.name, mustForming(t, p), []string{"delta", "P", "Q"}, 20})
+		for _, o := range []struct {
+			name  string
+			edit  func(*GridFormingParams)
+			limit bool
+		}{
+			{"plain", func(*GridFormingParams) {}, false},
+			{"virtual impedance, own speed", func(p *GridFormingParams) { p.Rv, p.Xv, p.OwnSpeed = 0.4, 0.6, true }, false},
+			{"limiting impedance", func(p *GridFormingParams) {
+				p.Rv, p.Xv = 0.1, 0.2
+				p.LimitImpedance = LimitImpedance{5, 0.3, 2}
+			}, false},
+			{"limit", func(p *GridFormingParams) { p.IMax = 12 }, true},
+			{"limit d first", func(p *GridFormingParams) { p.IMax, p.Priority = 12, DFirst }, true},
+			{"limit q first", func(p *GridFormingParams) { p.IMax, p.Priority = 12, QFirst }, true},
+		} {
+			p := testForming()
+			p.Primary = c.control
+			o.edit(&p)
+			list = append(list, variant{"forming, " + c.name + ", " + o.name, mustForming(t, p), o.limit})
+		}
 	}
 	for _, c := range []struct {
 		name string
@@ -95,6 +125,8 @@ func TestPrimaryOnlyTwoRoads(t *testing.T) {
 	}{
 		{"plain", func(*GridFollowingParams) {}},
 		{"limits", func(p *GridFollowingParams) { p.IMax, p.SpeedLimit = 10, 20 }},
+		{"limit d first", func(p *GridFollowingParams) { p.IMax, p.Priority = 10, DFirst }},
+		{"limit q first", func(p *GridFollowingParams) { p.IMax, p.Priority = 10, QFirst }},
 		{"no capacitor current, fixed amplitude", func(p *GridFollowingParams) { p.OmitCapacitor, p.FixedAmplitude = true, true }},
 		{"feed-forward", func(p *GridFollowingParams) { p.Kff = 0.8 }},
 	} {
@@ -102,63 +134,98 @@ func TestPrimaryOnlyTwoRoads(t *testing.T) {
 			p := testFollowing()
 			c.edit(&p)
 			p.Filter = filter
-			list = append(list, variant{fmt.Sprintf("following, %s, L filter %v", c.name, filter.isL()),
-				mustFollowing(t, p), []string{"delta", "eps", "v_md"}, 20})
+			list = append(list, variant{fmt.Sprintf("following, %s, L filter %v", c.name, filter.isL()), mustFollowing(t, p), false})
 		}
 	}
 	for _, c := range list {
-		block, err := c.full.(facet.Detailed).WithDetail(PrimaryOnly)
-		if err != nil {
-			t.Fatal(err)
-		}
-		short := block.(inverter)
-		slow := map[string]bool{}
-		for _, s := range c.slow {
-			slow[s] = true
-		}
-		rnd := rand.New(rand.NewPCG(7, 1))
-		for range 20 {
-			w := 2 * math.Pi * (49 + 2*rnd.Float64())
-			c.full.SetFrame(w)
-			short.SetFrame(w)
-			v := []float64{300 * (0.9 + 0.2*rnd.Float64()), 60 * (rnd.Float64() - 0.5)}
-			_, nf := c.full.Dims()
-			_, ns := short.Dims()
-			xf, xs := make([]float64, nf), make([]float64, ns)
-			c.full.Guess(xf, 0, v)
-			short.Guess(xs, 0, v)
-			// slow unknowns away from the steady state, by up to about a tenth
-			for i := range 3 {
-				d := 0.1 * (rnd.Float64() - 0.5) * short.Describe().Unknowns[i].Base
-				xf[i] += d
-				xs[i] = xf[i]
+		_, nf := c.full.Dims()
+		base := c.full.Describe().Unknowns
+		limited := 0
+		for _, level := range c.full.Details()[1:] {
+			if c.limit && level != CurrentLoopGone {
+				continue
 			}
-			if err := settleFast(c.full, v, xf, slow); err != nil {
-				t.Fatalf("%s: full: %v", c.name, err)
-			}
-			if err := settleFast(short, v, xs, slow); err != nil {
-				t.Fatalf("%s: primary only: %v", c.name, err)
-			}
-			ff, rf := make([]float64, 2), make([]float64, nf)
-			fs, rs := make([]float64, 2), make([]float64, ns)
-			if err := c.full.Eval(ff, rf, 0, v, xf); err != nil {
+			block, err := c.full.WithDetail(level)
+			if err != nil {
 				t.Fatal(err)
 			}
-			if err := short.Eval(fs, rs, 0, v, xs); err != nil {
+			short := block.(inverter)
+			if block, err = ZeroMass(c.full, c.full.DroppedDynamics(level)...); err != nil {
 				t.Fatal(err)
 			}
-			for i := range 2 {
-				if !(math.Abs(ff[i]-fs[i]) < 1e-9*c.base) {
-					t.Errorf("%s: flow %v by the full equations, %v reduced", c.name, ff, fs)
+			long := block.(inverter)
+			if got, want := long.Describe().Terminals[0].Flow, short.Describe().Terminals[0].Flow; got != want {
+				t.Errorf("%s, %s: flow of kind %d by zero mass, %d reduced", c.name, level, got, want)
+			}
+			kept := short.Describe().Unknowns
+			where := make([]int, len(kept)) // in the full x
+			for k, u := range kept {
+				where[k] = slices.IndexFunc(base, func(w facet.Unknown) bool { return w == u })
+				if where[k] < 0 {
+					t.Fatalf("%s, %s: %v is no unknown of the full equations", c.name, level, u)
 				}
 			}
-			for i := range 3 {
-				u := short.Describe().Unknowns[i]
-				scale := math.Max(u.Base, math.Abs(rf[i]))
-				if !(math.Abs(rf[i]-rs[i]) < 1e-9*scale) {
-					t.Errorf("%s: rate of %s %.12g by the full equations, %.12g reduced", c.name, u.Name, rf[i], rs[i])
+			shortMass := make([]float64, len(kept))
+			short.Mass(make([]float64, 2), shortMass)
+			rnd := rand.New(rand.NewPCG(7, 1))
+			for range 12 {
+				w := 2 * math.Pi * (49 + 2*rnd.Float64())
+				long.SetFrame(w)
+				short.SetFrame(w)
+				v := []float64{300 * (0.9 + 0.2*rnd.Float64()), 60 * (rnd.Float64() - 0.5)}
+				xf, xs := make([]float64, nf), make([]float64, len(kept))
+				long.Guess(xf, 0, v)
+				short.Guess(xs, 0, v)
+				// slow unknowns away from the steady state, by up to about a tenth
+				for k, i := range where {
+					if shortMass[k] != 0 {
+						xf[i] += 0.1 * (rnd.Float64() - 0.5) * base[i].Base
+						xs[k] = xf[i]
+					}
+				}
+				if err := settleAlgebraic(long, v, xf); err != nil {
+					t.Fatalf("%s, %s: zero mass: %v", c.name, level, err)
+				}
+				if err := settleAlgebraic(short, v, xs); err != nil {
+					t.Fatalf("%s, %s: reduced: %v", c.name, level, err)
+				}
+				ff, rf := make([]float64, 2), make([]float64, nf)
+				fs, rs := make([]float64, 2), make([]float64, len(kept))
+				if err := long.Eval(ff, rf, 0, v, xf); err != nil {
+					t.Fatal(err)
+				}
+				if err := short.Eval(fs, rs, 0, v, xs); err != nil {
+					t.Fatal(err)
+				}
+				for i := range 2 {
+					if !(math.Abs(ff[i]-fs[i]) < 1e-9*20) { // 20 A: the rated current
+						t.Errorf("%s, %s: flow %v by zero mass, %v reduced", c.name, level, ff, fs)
+					}
+				}
+				for k, i := range where {
+					if shortMass[k] == 0 {
+						if !(math.Abs(xf[i]-xs[k]) < 1e-9*base[i].Base) {
+							t.Errorf("%s, %s: %s %.12g by zero mass, %.12g reduced", c.name, level, base[i].Name, xf[i], xs[k])
+						}
+						continue
+					}
+					// A rate's terms are the base by the group's rate, 1/s.
+					scale := math.Max(base[i].Base, math.Abs(rf[i]))
+					if !(math.Abs(rf[i]-rs[k]) < 1e-9*scale) {
+						t.Errorf("%s, %s: rate of %s %.12g by zero mass, %.12g reduced", c.name, level, base[i].Name, rf[i], rs[k])
+					}
+				}
+				if m, ok := short.(facet.Measurer); ok && c.limit {
+					ch := make([]float64, len(m.Channels()))
+					m.Measure(ch, 0, v, xs)
+					if ch[8] > 0 {
+						limited++
+					}
 				}
 			}
+		}
+		if c.limit && limited == 0 {
+			t.Errorf("%s: the limit acts at no point", c.name)
 		}
 	}
 }
@@ -168,16 +235,26 @@ func TestPrimaryOnlyTwoRoads(t *testing.T) {
 // that state.
 func TestGuessAtSteadyState(t *testing.T) {
 	var invs []inverter
-	for _, detail := range []string{Full, PrimaryOnly} {
+	for _, detail := range []string{Full, CurrentLoopGone, InnerLoopsGone, PrimaryOnly, PhaseOnly} {
 		for _, psi := range []float64{0, 45, 90} {
-			plate := formingPlate()
-			plate.Psi, plate.P, plate.Q = &psi, 4e3, 1e3
-			b, err := plateForming(t, plate).WithDetail(detail)
-			if err != nil {
-				t.Fatal(err)
+			for _, control := range []ControlKind{DroopControl, VirtualMachineControl, OscillatorControl} {
+				plate := formingPlate()
+				plate.Control = control
+				plate.Psi, plate.P, plate.Q = &psi, 4e3, 1e3
+				b, err := plateForming(t, plate).WithDetail(detail)
+				if err != nil {
+					t.Fatal(err)
+				}
+				invs = append(invs, b.(inverter))
+				plate.LimitThreshold = new(0.2)
+				if b, err = plateForming(t, plate).WithDetail(detail); err != nil {
+					t.Fatal(err)
+				}
+				invs = append(invs, b.(inverter))
 			}
-			invs = append(invs, b.(inverter))
 		}
+	}
+	for _, detail := range []string{Full, CurrentLoopGone, PrimaryOnly, InjectionOnly} {
 		for _, l := range []bool{false, true} {
 			plate := followingPlate()
 			plate.LFilter, plate.P, plate.Q = l, 7e3, 2e3

@@ -36,6 +36,149 @@ func TestSaturate(t *testing.T) {
 	}
 }
 
+// With a part first: that part within +-I_max, the magnitude no more than I_max and
+// equal to it where the limit acts, the slope the derivative, kinks as declared.
+func TestPriorities(t *testing.T) {
+	rnd := rand.New(rand.NewPCG(1, 3))
+	for _, priority := range []LimitPriority{DFirst, QFirst} {
+		lim := limiter{max: 15, priority: priority}
+		kinks := make([]float64, 2)
+		for range 300 {
+			i := complex(20*rnd.NormFloat64(), 20*rnd.NormFloat64())
+			turned := i // the part that goes first as the real one
+			if priority == QFirst {
+				turned = complex(imag(i), real(i))
+			}
+			first, second := math.Max(-15, math.Min(15, real(turned))), 0.0
+			rest := math.Sqrt(225 - first*first)
+			second = math.Max(-rest, math.Min(rest, imag(turned)))
+			want := complex(first, second)
+			if priority == QFirst {
+				want = complex(second, first)
+			}
+			l := lim.apply(i)
+			if cmplx.Abs(l.out-want) > 1e-12 {
+				t.Fatalf("%s: %v limited to %v, want %v", priority, i, l.out, want)
+			}
+			if n := lim.evalKinks(kinks, i); n != 2 || (kinks[0] > 0) != (l.out != i) || (kinks[1] > 0) != (math.Abs(real(turned)) > 15) {
+				t.Fatalf("%s: kinks %v at %v", priority, kinks, i)
+			}
+			if math.Abs(kinks[0]) < 0.05 || math.Abs(kinks[1]) < 0.5 {
+				continue // a kink between the differences, or an unbounded slope
+			}
+			d := complex(rnd.NormFloat64(), rnd.NormFloat64())
+			const h = 1e-4
+			diff := (lim.apply(i+h*d).out - lim.apply(i-h*d).out) / (2 * h)
+			if e := cmplx.Abs(l.slope(d) - diff); e > 1e-6 {
+				t.Fatalf("%s: slope at %v off by %g", priority, i, e)
+			}
+		}
+	}
+}
+
+// What the comment of GridFormingNameplate says of the recovery from a dip.
+func TestRecovery(t *testing.T) {
+	const h = 1e-5
+	type result struct {
+		back          bool    // at the old point from 0.45 s after the dip on
+		slipped       bool    // by a turn, and at the old point otherwise
+		volts, bridge float64 // largest after the dip, per unit
+		stillLimiting bool
+	}
+	run := func(plate GridFormingNameplate, scr, until float64) result {
+		p, err := plate.Params()
+		if err != nil {
+			t.Fatal(err)
+		}
+		r, x := SplitXR(BaseOhms(plateVolts, plateVA)/scr, 3) // a line to the stiff voltage
+		p.Filter.Rg += r
+		p.Filter.Lg += x / RadPerSecond(50)
+		g := mustForming(t, p)
+		g.SetFrame(p.Omega0)
+		_, own := g.Dims()
+		y := make([]float64, own)
+		g.Guess(y, 0, []float64{p.V0, 0})
+		angle := y[0]
+		ch := make([]float64, len(g.Channels()))
+		g.Measure(ch, 0, []float64{p.V0, 0}, y)
+		volts := ch[4]
+		if err := rk4(g, y, 0, 0.15, int(0.15/h), func(float64) complex128 { return complex(0.2*p.V0, 0) }); err != nil {
+			t.Fatal(err)
+		}
+		out := result{back: true}
+		const step = 0.001
+		for at := 0.0; at < until; at += step {
+			if err := rk4(g, y, at, step, int(step/h), func(float64) complex128 { return complex(p.V0, 0) }); err != nil {
+				t.Fatal(err)
+			}
+			g.Measure(ch, at, []float64{p.V0, 0}, y)
+			out.volts = math.Max(out.volts, ch[4]/plateVolts)
+			out.bridge = math.Max(out.bridge, ch[7]/RatedAmperes(plateVA, plateVolts))
+			there := math.Abs(ch[4]-volts) < 0.03*plateVolts
+			if at > 0.45 && !(there && math.Abs(y[0]-angle) < 0.01) {
+				out.back = false
+			}
+			out.slipped = there && math.Abs(math.Abs(y[0]-angle)-2*math.Pi) < 0.05
+			out.stillLimiting = out.stillLimiting || at > until-0.1 && ch[8] > 1e-3
+		}
+		return out
+	}
+	impedance := func(n *GridFormingNameplate) { n.LimitThreshold = new(1.1) }
+	ways := []struct {
+		name string
+		edit func(*GridFormingNameplate)
+	}{
+		{"angle kept", func(n *GridFormingNameplate) { n.Priority = AngleKept }},
+		{"d first", func(n *GridFormingNameplate) { n.Priority = DFirst }},
+		{"q first", func(n *GridFormingNameplate) { n.Priority = QFirst }},
+		{"impedance", impedance},
+	}
+	kinds := []ControlKind{DroopControl, VirtualMachineControl, OscillatorControl}
+	for _, scr := range []float64{5, 20} {
+		for _, kind := range kinds {
+			for k, way := range ways {
+				for _, p := range []float64{0.5, 1} {
+					oscillates := kind == OscillatorControl
+					if p == 1 && !(oscillates && k == 0 || !oscillates && k == 1) {
+						continue
+					}
+					plate := formingPlate()
+					plate.Control, plate.P = kind, p*plateVA
+					way.edit(&plate)
+					got := run(plate, scr, 0.7)
+					highest := 1.2
+					if p == 1 && !oscillates {
+						highest = 1.4
+					}
+					if !got.back || got.volts > highest || got.bridge > 1.65 {
+						t.Errorf("%s, %s, SCR %g, P* %g: back %v, |v_c| up to %.3f, i_f up to %.3f",
+							kind, way.name, scr, p, got.back, got.volts, got.bridge)
+					}
+				}
+			}
+		}
+	}
+	// What the comment warns of.
+	plate := formingPlate()
+	plate.P = plateVA
+	if got := run(plate, 20, 1.8); !got.slipped {
+		t.Error("angle kept at the rating, SCR 20: slips no pole: the warning is out of date")
+	}
+	plate.Priority = QFirst
+	for _, scr := range []float64{5, 20} {
+		if got := run(plate, scr, 1.8); !got.slipped {
+			t.Errorf("q first at the rating, SCR %g: slips no pole: the warning is out of date", scr)
+		}
+	}
+	plate = formingPlate()
+	plate.P = plateVA
+	impedance(&plate)
+	plate.LimitXR = new(5.0)
+	if got := run(plate, 5, 0.7); got.back || !got.stillLimiting {
+		t.Error("limiting impedance of X/R = 5: no swing: the warning is out of date")
+	}
+}
+
 // While the limit acts, K_aw moves K_iv phi against the excess with the time
 // constant 1/(K_iv K_aw), and a steady state has |i_f| = I_max and the voltage
 // v_ref - K_aw (1/s - 1) i_ref'.

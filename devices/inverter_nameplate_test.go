@@ -71,6 +71,19 @@ func TestGridFormingDefaultsStable(t *testing.T) {
 		{"default", func(*GridFormingNameplate) {}},
 		{"2 % frequency droop", func(n *GridFormingNameplate) { n.FrequencyDroop = new(2.0) }},
 		{"5 % voltage droop", func(n *GridFormingNameplate) { n.VoltageDroop = new(5.0) }},
+		{"virtual machine", func(n *GridFormingNameplate) { n.Control = VirtualMachineControl }},
+		{"virtual machine, 2 % frequency droop", func(n *GridFormingNameplate) {
+			n.Control, n.FrequencyDroop = VirtualMachineControl, new(2.0)
+		}},
+		{"virtual machine, 5 % voltage droop", func(n *GridFormingNameplate) {
+			n.Control, n.VoltageDroop = VirtualMachineControl, new(5.0)
+		}},
+		{"light virtual machine", func(n *GridFormingNameplate) { n.Control, n.Inertia = VirtualMachineControl, new(0.2) }},
+		{"heavy virtual machine", func(n *GridFormingNameplate) { n.Control, n.Inertia = VirtualMachineControl, new(5.0) }},
+		{"virtual machine with power filter", func(n *GridFormingNameplate) { n.Control, n.PowerFilter = VirtualMachineControl, 5 }},
+		{"oscillator", func(n *GridFormingNameplate) { n.Control = OscillatorControl }},
+		{"oscillator, 2 % frequency droop", func(n *GridFormingNameplate) { n.Control, n.FrequencyDroop = OscillatorControl, new(2.0) }},
+		{"oscillator, 5 % voltage range", func(n *GridFormingNameplate) { n.Control, n.VoltageRange = OscillatorControl, new(5.0) }},
 	}
 	for _, variant := range variants {
 		plate := formingPlate()
@@ -110,14 +123,16 @@ func TestParallelFormingStable(t *testing.T) {
 		r.load = load / BaseOhms(plateVolts, plateVA)
 		return r
 	}
-	for _, ohm := range []float64{0.2, 0.32, 0.64} {
-		for _, load := range []float64{0.02, 1, 1.8} {
-			for _, m := range []float64{1, 2} {
-				for _, v := range []float64{2, 5} {
-					plate := formingPlate()
-					plate.FrequencyDroop, plate.VoltageDroop = &m, &v
-					stable(t, pair(plate, ohm, load), 5,
-						fmt.Sprintf("%g ohm/km, load %g, droop %g %% and %g %%", ohm, load, m, v))
+	for _, control := range []ControlKind{DroopControl, VirtualMachineControl, OscillatorControl} {
+		for _, ohm := range []float64{0.2, 0.32, 0.64} {
+			for _, load := range []float64{0.02, 1, 1.8} {
+				for _, m := range []float64{1, 2} {
+					for _, v := range []float64{2, 5} {
+						plate := formingPlate()
+						plate.Control, plate.FrequencyDroop, plate.VoltageDroop = control, &m, &v
+						stable(t, pair(plate, ohm, load), 5,
+							fmt.Sprintf("%s, %g ohm/km, load %g, droop %g %% and %g %%", control, ohm, load, m, v))
+					}
 				}
 			}
 		}
@@ -125,7 +140,10 @@ func TestParallelFormingStable(t *testing.T) {
 	// Resistive droop with a virtual resistance in place of the reactance.
 	plate := formingPlate()
 	plate.Psi = new(0.0)
-	stable(t, pair(plate, 0.32, 1), 5, "resistive")
+	for _, control := range []ControlKind{DroopControl, VirtualMachineControl, OscillatorControl} {
+		plate.Control = control
+		stable(t, pair(plate, 0.32, 1), 3, fmt.Sprintf("resistive %s", control))
+	}
 
 	// What the comment of GridFormingNameplate warns of.
 	plate = formingPlate()
@@ -193,6 +211,81 @@ func TestMixedIslandsStable(t *testing.T) {
 	}
 }
 
+// The three controls side by side, and each with a follower.
+func TestMixedControlsStable(t *testing.T) {
+	kinds := []ControlKind{DroopControl, VirtualMachineControl, OscillatorControl}
+	for _, load := range []float64{0.05, 1, 2.5} {
+		var all []inverter
+		for k, kind := range kinds {
+			plate := formingPlate()
+			plate.Control = kind
+			p := plateForming(t, plate).Params()
+			p.Filter.Rg += 0.32 * 0.02 * float64(k) // cables of 0, 20 and 40 m
+			p.Filter.Lg += 0.08 / RadPerSecond(50) * 0.02 * float64(k)
+			all = append(all, mustForming(t, p))
+		}
+		r := newRig(all...)
+		r.load = load / BaseOhms(plateVolts, plateVA)
+		stable(t, r, 3, fmt.Sprintf("all three, load %g", load))
+	}
+	for _, kind := range kinds[1:] {
+		plate, follower := formingPlate(), followingPlate()
+		plate.Control, follower.P = kind, 0.5*plateVA
+		r := newRig(plateForming(t, plate), plateFollowing(t, follower))
+		r.load = 0.7 / BaseOhms(plateVolts, plateVA)
+		stable(t, r, 3, fmt.Sprintf("%s with a follower", kind))
+	}
+}
+
+// The fields of the nameplate reach the controls in the units of their formulas.
+func TestNameplateControls(t *testing.T) {
+	n := GridFormingNameplate{Power: 10e3, Voltage: 400, Frequency: 50, Control: VirtualMachineControl,
+		FrequencyDroop: new(2.0), VoltageDroop: new(5.0), Inertia: new(3.0), VoltageDelay: new(0.1), PowerFilter: 20, Psi: new(45.0)}
+	p, err := n.Params()
+	if err != nil {
+		t.Fatal(err)
+	}
+	// 2 %: 6.283 rad/s at 10 kW; 5 % of 326.6 V at 10 kvar
+	want := VirtualMachine{H: 3, D: 1591.5494309, N: 1.6329931619e-3, Tv: 0.1, OmegaC: 125.66370614, Psi: math.Pi / 4}
+	got := p.Primary.(VirtualMachine)
+	for _, c := range [][2]float64{{got.H, want.H}, {got.D, want.D}, {got.N, want.N}, {got.Tv, want.Tv},
+		{got.OmegaC, want.OmegaC}, {got.Psi, want.Psi}} {
+		if math.Abs(c[0]/c[1]-1) > 1e-10 {
+			t.Errorf("virtual machine %+v, want %+v", got, want)
+		}
+	}
+	n.Damping = new(20.0) // rated power by nominal frequency
+	if p, err = n.Params(); err != nil {
+		t.Fatal(err)
+	}
+	if d := p.Primary.(VirtualMachine).D; math.Abs(d-20*10e3/(100*math.Pi)) > 1e-9 {
+		t.Errorf("D = %g W s/rad", d)
+	}
+
+	// The limiting impedance and Z_v take up the rated voltage at the limit.
+	n = formingPlate()
+	n.LimitThreshold, n.LimitXR = new(1.1), new(3.0)
+	if p, err = n.Params(); err != nil {
+		t.Fatal(err)
+	}
+	z, _ := p.LimitImpedance.at(p.IMax)
+	if drop := abs(z+complex(p.Rv, p.Xv)) * p.IMax; math.Abs(drop/p.V0-1) > 1e-12 {
+		t.Errorf("limiting impedance drops %.12g per unit at the limit", drop/p.V0)
+	}
+
+	_, err = GridFormingNameplate{Power: 10e3, Voltage: 400, Frequency: 50, Control: "machine", Priority: "r first"}.Params()
+	wantFaults(t, err, "Control = \"machine\"", "Priority = \"r first\"")
+	_, err = GridFormingNameplate{Power: 10e3, Voltage: 400, Frequency: 50, Inertia: new(2.0), VoltageRange: new(5.0),
+		LimitThreshold: new(2.0), PowerFilter: math.Inf(1)}.Params()
+	wantFaults(t, err, "Inertia = 2: want nil", "VoltageRange = 5: want nil", "LimitThreshold = 2 per unit", "PowerFilter = +Inf")
+	_, err = GridFormingNameplate{Power: 10e3, Voltage: 400, Frequency: 50, Control: OscillatorControl,
+		PowerFilter: 5, FrequencyDroop: new(0.0)}.Params()
+	wantFaults(t, err, "PowerFilter = 5 Hz: want 0", "FrequencyDroop = 0 %: want a value > 0")
+	_, err = GridFormingNameplate{Power: 10e3, Voltage: 400, Frequency: 50, Control: VirtualMachineControl,
+		FrequencyDroop: new(0.0), VoltageDelay: new(0.0)}.Params()
+	wantFaults(t, err, "FrequencyDroop = 0 %", "VoltageDelay = 0 s without a PowerFilter")
+}
+
 func TestNameplateFaults(t *testing.T) {
 	_, err := GridFormingNameplate{Power: -1, Voltage: 400, Frequency: math.NaN(), Psi: new(100.0)}.Params()
 	wantFaults(t, err, "Power = -1 VA", "Frequency = NaN Hz", "Psi = 100 degrees: want 0 to 90")
@@ -216,8 +309,31 @@ func TestParamFaults(t *testing.T) {
 		_, err = NewGridFollowing(q)
 		wantFaults(t, err, "OmegaV", "two solutions or none", "Kp = 0")
 	}
+	p = testForming()
+	p.Primary, p.Priority = VirtualMachine{H: 0, D: -1, OmegaC: math.Inf(1)}, "both"
+	p.LimitImpedance = LimitImpedance{-1, math.NaN(), 0}
+	_, err = NewGridForming(p)
+	wantFaults(t, err, "VirtualMachine.H = 0 s", "VirtualMachine.D = -1 W s/rad", "at once", "Priority = \"both\"",
+		"LimitImpedance.Threshold = -1 A", "LimitImpedance.Gain = NaN")
+	p = testForming()
+	p.Primary = Oscillator{Eta: 0, Alpha: math.Inf(1), Psi: 2}
+	_, err = NewGridForming(p)
+	wantFaults(t, err, "Oscillator.Eta = 0", "Oscillator.Alpha = +Inf", "Oscillator.Psi = 2 rad")
+	p.Primary = OscillatorOfRange(10e3, 3, 0.4, 326, math.Pi/2) // sags below the knee
+	_, err = NewGridForming(p)
+	wantFaults(t, err, "Oscillator.Alpha = NaN")
+
 	g := mustForming(t, testForming())
 	if _, err := g.WithDetail("phase"); err == nil {
 		t.Error("unknown detail accepted")
+	}
+	p = testForming()
+	p.Kic = 0
+	if _, err := mustForming(t, p).WithDetail(CurrentLoopGone); err == nil {
+		t.Error("detail without the integrator that it takes accepted")
+	}
+	p.Primary = oscillatorOf(1)
+	if err := mustForming(t, p).Set("voltage", 0, 10, 0); err == nil {
+		t.Error("oscillator takes a voltage of 10 V")
 	}
 }
