@@ -499,11 +499,11 @@ func sentence(ref, r *Result, isRef bool) string {
 				later = math.Max(later, x)
 			}
 		}
-		s := fmt.Sprintf("%s by up to %.2g %% of its range in the first 20 ms after an event", g.Name, 100*first)
+		s := fmt.Sprintf("%s by up to %s of a channel's range in the first 20 ms after an event", g.Name, percent(first))
 		if at != nil {
-			s += fmt.Sprintf(" (%s)", at.Name)
+			s += fmt.Sprintf(" (%s, rms %s)", at.Name, percent(at.Windows[First20ms].RelativeRMS()))
 		}
-		s += fmt.Sprintf(" and %.2g %% later", 100*later)
+		s += fmt.Sprintf(" and %s later", percent(later))
 		parts = append(parts, s)
 	}
 	fmt.Fprintf(&b, "; it misses %s", strings.Join(parts, ", "))
@@ -514,6 +514,14 @@ func sentence(ref, r *Result, isRef bool) string {
 	}
 	b.WriteString(".")
 	return b.String()
+}
+
+// percent prints a ratio with two figures that count, without an exponent.
+func percent(x float64) string {
+	if x >= 1 {
+		return fmt.Sprintf("%.0f %%", 100*x)
+	}
+	return fmt.Sprintf("%.2g %%", 100*x)
 }
 
 // brief is the first of several joined errors.

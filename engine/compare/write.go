@@ -25,7 +25,7 @@ func (c *Comparison) WriteText(w io.Writer) error {
 		if len(r.Groups) == 0 {
 			continue
 		}
-		p.printf("\n%s against %s: largest deviation, %% of the channel's range\n", r.Setting, c.Results[0].Setting)
+		p.printf("\n%s against %s: largest deviation and its channel's rms, %% of the channel's range\n", r.Setting, c.Results[0].Setting)
 		table := [][]string{{""}}
 		for k := range numWindows {
 			table[0] = append(table[0], k.String())
@@ -35,7 +35,8 @@ func (c *Comparison) WriteText(w io.Writer) error {
 			for k, ch := range g.Worst {
 				cell := "-"
 				if ch != nil {
-					cell = fmt.Sprintf("%.3g %% %s", 100*ch.Windows[k].Relative(), ch.Name)
+					d := ch.Windows[k]
+					cell = fmt.Sprintf("%.3g %% (rms %.2g %%) %s at %.4g s", 100*d.Relative(), 100*d.RelativeRMS(), ch.Name, d.At)
 				}
 				row = append(row, cell)
 			}
