@@ -214,7 +214,7 @@ func (m *Simulation) syncSides(w *watch, t float64, y []float64) (dv, df, da flo
 		if is < 0 {
 			continue
 		}
-		freq[k] = m.islandSpeed(&m.topo.islands[is], y) / (2 * math.Pi)
+		freq[k] = m.islandSpeed(&m.topo.islands[is], t, y) / (2 * math.Pi)
 		ang[k] = math.Atan2(y[i+1], y[i]) + m.topo.islands[is].frame.at(t)
 	}
 	return mag[0] - mag[1], freq[0] - freq[1], wrap(ang[0] - ang[1])

@@ -432,14 +432,14 @@ type leanFrame struct {
 
 // islandSpeed is the mean speed of the sources that hold an island, weighted
 // by rating, rad/s.
-func (m *Simulation) islandSpeed(is *island, y []float64) float64 {
+func (m *Simulation) islandSpeed(is *island, t float64, y []float64) float64 {
 	sum, weight := 0.0, 0.0
 	for _, i := range is.formers {
 		d := m.sys.devices[i]
 		v := m.ports[:d.ports]
 		m.net.Ports(d.block, v, y)
 		w := d.former.Weight()
-		sum += w * d.former.Speed(m.t, v, y[d.lo:d.lo+d.own])
+		sum += w * d.former.Speed(t, v, y[d.lo:d.lo+d.own])
 		weight += w
 	}
 	return sum / weight
@@ -467,7 +467,7 @@ func (m *Simulation) followFrames() error {
 	reset := false
 	for k := range m.topo.islands {
 		is := &m.topo.islands[k]
-		w := m.islandSpeed(is, y)
+		w := m.islandSpeed(is, m.t, y)
 		gain := math.Abs(w - is.frame.speed)
 		drift := math.Abs(w - m.lean.mean[k])
 		m.lean.mean[k] = w

@@ -241,7 +241,7 @@ func (m *Simulation) busQuantity(b, quantity int, t float64, y []float64) float6
 	case busV:
 		return lineLine(math.Hypot(d, q))
 	case busFrequency:
-		return m.islandSpeed(&m.topo.islands[k], y) / (2 * math.Pi)
+		return m.islandSpeed(&m.topo.islands[k], t, y) / (2 * math.Pi)
 	case busAngle:
 		return math.Atan2(q, d) * 180 / math.Pi
 	case busVd:
@@ -384,7 +384,7 @@ func (r *recorder) row(t float64, y []float64, before bool) {
 	for _, c := range r.fixed {
 		p := &r.rows[c]
 		if p.kind == fromBus && p.index == busFrequency {
-			tr.data[c][n] = r.frequency(p.bus, y)
+			tr.data[c][n] = r.frequency(p.bus, t, y)
 			continue
 		}
 		tr.data[c][n] = p.value(t, y)
@@ -407,7 +407,7 @@ func (r *recorder) row(t float64, y []float64, before bool) {
 }
 
 // frequency is the frequency of a bus's island, computed once a row.
-func (r *recorder) frequency(b int, y []float64) float64 {
+func (r *recorder) frequency(b int, t float64, y []float64) float64 {
 	k := r.m.topo.busOf[b]
 	if k < 0 {
 		return 0
@@ -416,7 +416,7 @@ func (r *recorder) frequency(b int, y []float64) float64 {
 		r.speed = append(r.speed, math.NaN())
 	}
 	if r.speed[k] != r.speed[k] {
-		r.speed[k] = r.m.islandSpeed(&r.m.topo.islands[k], y) / (2 * math.Pi)
+		r.speed[k] = r.m.islandSpeed(&r.m.topo.islands[k], t, y) / (2 * math.Pi)
 	}
 	return r.speed[k]
 }
