@@ -25,7 +25,7 @@ type eventDraft struct {
 	limitKey                         string
 	below                            bool
 	hold                             float64
-	both                             bool // more than one value or limit
+	values, limits                   int // how many were given
 }
 
 // tradeUnit is a unit of key names with its SI unit and scale.
@@ -70,7 +70,7 @@ func actionFields() []field[eventDraft] {
 	for _, u := range setUnits {
 		key := "value_" + u.suffix
 		list = append(list, num(key, u.suffix, "", -anyNumber, anyNumber, func(d *T, x float64) {
-			d.both = d.both || d.valueKey != ""
+			d.values++
 			d.value, d.valueKey = x, key
 		}, "set: the new value, in the setpoint's unit").in(u.scale))
 	}
@@ -102,7 +102,7 @@ func conditionFields() []field[eventDraft] {
 		limit := func(suffix, unit string, scale float64, doc string) {
 			key := side + suffix
 			list = append(list, num(key, unit, "", -anyNumber, anyNumber, func(d *T, x float64) {
-				d.both = d.both || d.limitKey != ""
+				d.limits++
 				d.limit, d.limitKey, d.below = x, key, below
 			}, doc).in(scale))
 		}
@@ -244,7 +244,7 @@ func (l *loader) setpoint(v *values, d *eventDraft, dev engine.Device, what stri
 			}
 		}
 		switch {
-		case d.both:
+		case d.values > 1:
 			l.doc.fault(v.path, "more than one value; want %s alone", want)
 		case d.valueKey == "":
 			if !v.tried[want] {
@@ -277,7 +277,7 @@ func between(lo, hi float64) string {
 func (l *loader) condition(v *values, d *eventDraft) (engine.Condition, bool) {
 	before := len(l.doc.faults)
 	c := engine.Condition{Channel: d.channel, Below: d.below, Limit: d.limit, For: d.hold}
-	if d.both {
+	if d.limits > 1 {
 		l.doc.fault(v.path, "more than one limit; want one")
 	}
 	if !v.given["channel"] {
@@ -302,7 +302,7 @@ func (l *loader) condition(v *values, d *eventDraft) (engine.Condition, bool) {
 		side = "below"
 	}
 	switch {
-	case d.both:
+	case d.limits > 1:
 	case d.limitKey == "":
 		for k := range v.tried {
 			if strings.HasPrefix(k, "above") || strings.HasPrefix(k, "below") {

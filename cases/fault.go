@@ -76,3 +76,11 @@ func causes(err error) []error {
 
 // plain is an error's text without the prefix of package devices.
 func plain(err error) string { return strings.TrimPrefix(err.Error(), "devices: ") }
+
+// keyError is what is wrong with one key of a device's table.
+type keyError struct{ key, text string }
+
+func (e *keyError) Error() string { return e.key + ": " + e.text }
+
+// at makes a keyError.
+func at(key, format string, a ...any) error { return &keyError{key, fmt.Sprintf(format, a...)} }

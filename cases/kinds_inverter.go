@@ -1,6 +1,11 @@
 package cases
 
 import (
+	"errors"
+	"fmt"
+	"math"
+	"strings"
+
 	"islet/devices"
 	"islet/engine"
 )
@@ -41,10 +46,87 @@ type formingDraft struct {
 	ownSpeed bool
 }
 
-// formingSymbols are the parameters with the droop within reach.
+// formingSymbols are the parameters with those of the primary control within
+// reach.
 type formingSymbols struct {
 	devices.GridFormingParams
-	devices.Droop
+	m, n, omegaC, psi, h, d, tv, eta, alpha float64
+}
+
+// unpack takes the primary control apart.
+func (s *formingSymbols) unpack() {
+	switch c := s.Primary.(type) {
+	case devices.Droop:
+		s.m, s.n, s.omegaC, s.psi = c.M, c.N, c.OmegaC, c.Psi
+	case devices.VirtualMachine:
+		s.h, s.d, s.n, s.tv, s.omegaC, s.psi = c.H, c.D, c.N, c.Tv, c.OmegaC, c.Psi
+	case devices.Oscillator:
+		s.eta, s.alpha, s.psi = c.Eta, c.Alpha, c.Psi
+	}
+}
+
+// pack puts it together again.
+func (s *formingSymbols) pack() devices.GridFormingParams {
+	p := s.GridFormingParams
+	switch p.Primary.(type) {
+	case devices.Droop:
+		p.Primary = devices.Droop{M: s.m, N: s.n, OmegaC: s.omegaC, Psi: s.psi}
+	case devices.VirtualMachine:
+		p.Primary = devices.VirtualMachine{H: s.h, D: s.d, N: s.n, Tv: s.tv, OmegaC: s.omegaC, Psi: s.psi}
+	case devices.Oscillator:
+		p.Primary = devices.Oscillator{Eta: s.eta, Alpha: s.alpha, Psi: s.psi}
+	}
+	return p
+}
+
+// controlKeys are the keys that belong to some primary controls alone.
+var controlKeys = []struct {
+	key      string
+	controls []devices.ControlKind
+}{
+	{"power_filter_Hz", []devices.ControlKind{devices.DroopControl, devices.VirtualMachineControl}},
+	{"inertia_s", []devices.ControlKind{devices.VirtualMachineControl}},
+	{"damping", []devices.ControlKind{devices.VirtualMachineControl}},
+	{"voltage_delay_ms", []devices.ControlKind{devices.VirtualMachineControl}},
+	{"voltage_range_percent", []devices.ControlKind{devices.OscillatorControl}},
+	{"m", []devices.ControlKind{devices.DroopControl}},
+	{"n", []devices.ControlKind{devices.DroopControl, devices.VirtualMachineControl}},
+	{"w_c", []devices.ControlKind{devices.DroopControl, devices.VirtualMachineControl}},
+	{"H", []devices.ControlKind{devices.VirtualMachineControl}},
+	{"D", []devices.ControlKind{devices.VirtualMachineControl}},
+	{"T_v", []devices.ControlKind{devices.VirtualMachineControl}},
+	{"eta", []devices.ControlKind{devices.OscillatorControl}},
+	{"alpha", []devices.ControlKind{devices.OscillatorControl}},
+}
+
+// checkControl finds keys of another primary control.
+func checkControl(s *site, control devices.ControlKind) error {
+	if control == "" {
+		control = devices.DroopControl
+	}
+	var errs []error
+	for _, k := range controlKeys {
+		if !s.given[k.key] {
+			continue
+		}
+		fits := false
+		var names []string
+		for _, c := range k.controls {
+			fits = fits || c == control
+			names = append(names, fmt.Sprintf("%q", c))
+		}
+		if !fits {
+			errs = append(errs, at(k.key, "goes with control = %s only", strings.Join(names, " or ")))
+		}
+	}
+	return errors.Join(errs...)
+}
+
+// priority is the key of the current limit's priority.
+func priority[T any](set func(*T, devices.LimitPriority)) field[T] {
+	f := word("limit_priority", string(devices.AngleKept), func(d *T, s string) { set(d, devices.LimitPriority(s)) }, "which part of the current gives way to the limit")
+	f.choices = []string{string(devices.AngleKept), string(devices.DFirst), string(devices.QFirst)}
+	return f
 }
 
 func formingKind() *kind {
@@ -53,9 +135,12 @@ func formingKind() *kind {
 	si := func(name, unit string, min, max float64, open bool, at func(*P) *float64, doc string) field[T] {
 		return symbol(func(d *T) *explicit[P] { return &d.explicit }, name, unit, fromPlate, min, max, open, at, doc)
 	}
+	control := word("control", string(devices.DroopControl), func(d *T, s string) { d.plate.Control = devices.ControlKind(s) }, "primary control")
+	control.choices = []string{string(devices.DroopControl), string(devices.VirtualMachineControl), string(devices.OscillatorControl)}
 	fields := []field[T]{
 		above("power_kVA", "kVA", "required", 0, 1e7, func(d *T, x float64) { d.plate.Power = x }, "rating").in(1e3),
 		above("voltage_kV", "kV line-line rms", "that of the bus", 0, 2000, func(d *T, x float64) { d.plate.Voltage = x }, "rated voltage").in(1e3),
+		control,
 		num("p_kW", "kW generated", "0", -2e7, 2e7, func(d *T, x float64) { d.plate.P = x }, "P*, first value of setpoint p").in(1e3),
 		num("q_kvar", "kvar generated", "0", -2e7, 2e7, func(d *T, x float64) { d.plate.Q = x }, "Q*, first value of setpoint q").in(1e3),
 		num("voltage_setpoint_percent", "%", "100", 10, 140, func(d *T, x float64) { d.volts = x }, "V_0 of rated voltage, first value of setpoint voltage").in(1e-2),
@@ -63,9 +148,16 @@ func formingKind() *kind {
 		num("frequency_droop_percent", "%", "1", 0, 20, func(d *T, x float64) { d.plate.FrequencyDroop = &x }, "change of frequency from no load to rated power"),
 		num("voltage_droop_percent", "%", "2", 0, 50, func(d *T, x float64) { d.plate.VoltageDroop = &x }, "change of voltage from no load to rated reactive power"),
 		num("psi_deg", "degrees", "90", 0, 90, func(d *T, x float64) { d.plate.Psi = &x }, "angle by which the power pair is turned: 90 inductive, 0 resistive networks"),
-		above("power_filter_Hz", "Hz", "5", 0, 1e4, func(d *T, x float64) { d.plate.PowerFilter = x }, "corner of the power filter"),
+		above("power_filter_Hz", "Hz", "5; none with a virtual machine", 0, 1e4, func(d *T, x float64) { d.plate.PowerFilter = x }, "droop, virtual machine: corner of the power filter").orInf(),
+		num("inertia_s", "s", "2", 1e-3, 100, func(d *T, x float64) { d.plate.Inertia = &x }, "virtual machine: inertia constant H"),
+		num("damping", "rated power by nominal frequency", "that of the frequency droop", 0, 1e6, func(d *T, x float64) { d.plate.Damping = &x }, "virtual machine: damping D"),
+		num("voltage_delay_ms", "ms", "50", 0, 1e5, func(d *T, x float64) { d.plate.VoltageDelay = &x }, "virtual machine: time constant T_v of the voltage").in(1e-3),
+		num("voltage_range_percent", "%", "", 0.01, 29, func(d *T, x float64) { d.plate.VoltageRange = &x }, "oscillator: exact fall of voltage at rated vars, instead of voltage_droop_percent, the slope at rated voltage"),
 		num("virtual_impedance_percent", "%", "10", 0, 100, func(d *T, x float64) { x /= 100; d.plate.VirtualImpedance = &x }, "|Z_v| of the rated impedance, at the angle psi"),
 		above("current_limit_percent", "%", "150", 0, 1e4, func(d *T, x float64) { d.plate.CurrentLimit = x }, "largest current of the bridge, of rated").in(1e-2).orInf(),
+		priority(func(d *T, p devices.LimitPriority) { d.plate.Priority = p }),
+		num("limit_threshold_percent", "%", "none", 0, 1e4, func(d *T, x float64) { x /= 100; d.plate.LimitThreshold = &x }, "current, of rated, from which a limiting virtual impedance acts"),
+		num("limit_x_over_r", "1", "2", 0, 100, func(d *T, x float64) { d.plate.LimitXR = &x }, "X/R of the limiting impedance"),
 		above("switching_frequency_Hz", "Hz", "10000", 0, 1e7, func(d *T, x float64) { d.plate.SwitchingFrequency = x }, "used for the current bandwidth alone"),
 		above("current_bandwidth_Hz", "Hz", "a tenth of the switching frequency", 0, 1e6, func(d *T, x float64) { d.plate.CurrentBandwidth = x }, "of the current loop"),
 		above("voltage_bandwidth_Hz", "Hz", "250, but no more than half the current bandwidth", 0, 1e6, func(d *T, x float64) { d.plate.VoltageBandwidth = x }, "of the voltage loop"),
@@ -75,10 +167,15 @@ func formingKind() *kind {
 		num("F", "1", "0.9", 0, 1, func(d *T, x float64) { d.plate.FeedForward = &x }, "F, feed-forward of i_g to the current reference"),
 		si("V_0", "V peak phase", 0, 2e6, true, func(p *P) *float64 { return &p.V0 }, "V_0"),
 		si("w_0", "rad/s", 0, 1e4, true, func(p *P) *float64 { return &p.Omega0 }, "omega_0, of the droop and of the decoupling terms"),
-		si("m", "rad/s/W", 0, 1e3, false, func(p *P) *float64 { return &p.M }, "m of the droop"),
-		si("n", "V peak phase/var", 0, 1e3, false, func(p *P) *float64 { return &p.N }, "n of the droop"),
-		si("w_c", "rad/s", 0, 1e5, true, func(p *P) *float64 { return &p.OmegaC }, "omega_c, corner of the power filter"),
-		si("psi", "rad", 0, 1.5707963267948966, false, func(p *P) *float64 { return &p.Psi }, "psi of the droop"),
+		si("m", "rad/s/W", 0, 1e3, false, func(p *P) *float64 { return &p.m }, "m of the droop"),
+		si("n", "V peak phase/var", 0, 1e3, false, func(p *P) *float64 { return &p.n }, "n of droop or virtual machine"),
+		si("w_c", "rad/s", 0, 1e5, true, func(p *P) *float64 { return &p.omegaC }, "omega_c, corner of the power filter").orInf(),
+		si("psi", "rad", 0, math.Pi/2, false, func(p *P) *float64 { return &p.psi }, "psi of the primary control"),
+		si("H", "s", 0, 1e3, true, func(p *P) *float64 { return &p.h }, "H of the virtual machine"),
+		si("D", "W s/rad", 0, 1e12, false, func(p *P) *float64 { return &p.d }, "D of the virtual machine"),
+		si("T_v", "s", 0, 1e3, false, func(p *P) *float64 { return &p.tv }, "T_v of the virtual machine"),
+		si("eta", "ohm rad/s", 0, 1e12, true, func(p *P) *float64 { return &p.eta }, "eta of the oscillator"),
+		si("alpha", "S", 0, 1e12, true, func(p *P) *float64 { return &p.alpha }, "alpha of the oscillator"),
 		si("Rv_ohm", "ohm", 0, maxOhm, false, func(p *P) *float64 { return &p.Rv }, "R_v of the virtual impedance"),
 		si("Xv_ohm", "ohm", -maxOhm, maxOhm, false, func(p *P) *float64 { return &p.Xv }, "X_v of the virtual impedance"),
 		si("Kpv", "A/V", 0, 1e9, false, func(p *P) *float64 { return &p.Kpv }, "K_pv of the voltage loop"),
@@ -87,6 +184,9 @@ func formingKind() *kind {
 		si("Kic", "V/(A s)", 0, 1e12, false, func(p *P) *float64 { return &p.Kic }, "K_ic of the current loop"),
 		si("Kaw", "V/A", 0, 1e9, false, func(p *P) *float64 { return &p.Kaw }, "K_aw, anti-windup of the voltage loop; 1/K_pv if not given"),
 		si("I_max_A", "A peak", 0, 1e7, true, func(p *P) *float64 { return &p.IMax }, "I_max, largest current reference").orInf(),
+		si("limit_I_t_A", "A peak", 0, 1e7, false, func(p *P) *float64 { return &p.LimitImpedance.Threshold }, "I_t of the limiting impedance"),
+		si("limit_k", "ohm/A", 0, 1e6, false, func(p *P) *float64 { return &p.LimitImpedance.Gain }, "k of the limiting impedance; 0 for none"),
+		si("limit_XR", "1", 0, 1e4, false, func(p *P) *float64 { return &p.LimitImpedance.XR }, "X/R of the limiting impedance"),
 		si("Lf_H", "H", 0, maxHenry, true, func(p *P) *float64 { return &p.Filter.Lf }, "L_f; gains not given follow it"),
 		si("Rf_ohm", "ohm", 0, maxOhm, false, func(p *P) *float64 { return &p.Filter.Rf }, "R_f"),
 		si("Cf_F", "F", 0, maxFarad, true, func(p *P) *float64 { return &p.Filter.Cf }, "C_f; gains not given follow it"),
@@ -95,7 +195,7 @@ func formingKind() *kind {
 		yes("own_speed", func(d *T, b bool) { d.ownSpeed = b }, "the own speed instead of omega_0 in the decoupling terms"),
 	)
 	return makeKind("grid-forming inverter",
-		"A droop-controlled inverter with LCL filter; it holds voltage and frequency. A nameplate is enough; symbols in SI replace what follows from it. Setpoints: p, q, voltage, frequency.",
+		"An inverter with LCL filter that holds voltage and frequency, by droop, as a virtual machine or as an oscillator. A nameplate is enough; symbols in SI replace what follows from it. Setpoints: p, q, voltage, frequency.",
 		shunt, false, fields)
 }
 
@@ -105,6 +205,9 @@ func (d *formingDraft) build(s *site) (engine.Device, error) {
 	plate := d.plate
 	v, err := s.rated(plate.Voltage)
 	if err != nil {
+		return nil, err
+	}
+	if err := checkControl(s, plate.Control); err != nil {
 		return nil, err
 	}
 	plate.Voltage, plate.Frequency = v, s.hertz
@@ -118,8 +221,8 @@ func (d *formingDraft) build(s *site) (engine.Device, error) {
 	if d.hertz > 0 {
 		p.Omega0 = devices.RadPerSecond(d.hertz)
 	}
-	droop, _ := p.Primary.(devices.Droop)
-	sym := formingSymbols{p, droop}
+	sym := formingSymbols{GridFormingParams: p}
+	sym.unpack()
 	plain := p.Filter
 	for _, set := range d.explicit.set {
 		set(&sym)
@@ -133,9 +236,8 @@ func (d *formingDraft) build(s *site) (engine.Device, error) {
 	if !s.given["Kaw"] && sym.Kpv > 0 {
 		sym.Kaw = 1 / sym.Kpv
 	}
-	p = sym.GridFormingParams
+	p = sym.pack()
 	p.OwnSpeed = d.ownSpeed
-	p.Primary = sym.Droop
 	return device(devices.NewGridForming(p))
 }
 
@@ -151,6 +253,7 @@ func follow(s *site, name string, gain *float64, by float64) {
 type followingDraft struct {
 	plate    devices.GridFollowingNameplate
 	explicit explicit[devices.GridFollowingParams]
+	priority devices.LimitPriority
 }
 
 func followingKind() *kind {
@@ -171,6 +274,7 @@ func followingKind() *kind {
 		above("voltage_filter_Hz", "Hz", "50", 0, 1e5, func(d *T, x float64) { d.plate.VoltageFilter = x }, "corner of the filter of v_md"),
 		num("voltage_floor_percent", "%", "20", 0.1, 99, func(d *T, x float64) { d.plate.VoltageFloor = x }, "least voltage in a denominator, of rated").in(1e-2),
 		above("current_limit_percent", "%", "120", 0, 1e4, func(d *T, x float64) { d.plate.CurrentLimit = x }, "largest current of the bridge, of rated").in(1e-2).orInf(),
+		priority(func(d *T, p devices.LimitPriority) { d.priority = p }),
 		above("switching_frequency_Hz", "Hz", "10000", 0, 1e7, func(d *T, x float64) { d.plate.SwitchingFrequency = x }, "used for the current bandwidth alone"),
 		above("current_bandwidth_Hz", "Hz", "a tenth of the switching frequency", 0, 1e6, func(d *T, x float64) { d.plate.CurrentBandwidth = x }, "of the current loop"),
 		yes("omit_capacitor", func(d *T, b bool) { d.plate.OmitCapacitor = b }, "leave the capacitor's current out of the reference; its vars then add to q"),
@@ -213,6 +317,7 @@ func (d *followingDraft) build(s *site) (engine.Device, error) {
 	if err != nil {
 		return nil, err
 	}
+	p.Priority = d.priority
 	lf := p.Filter.Lf
 	for _, set := range d.explicit.set {
 		set(&p)

@@ -26,7 +26,7 @@ type impedance struct {
 func (z *impedance) henries(hertz float64) (l float64, given bool, err error) {
 	switch {
 	case z.l != nil && z.x != nil:
-		return 0, true, errors.New("L_H and X_ohm say the same; want one of them")
+		return 0, true, at("X_ohm", "says the same as L_H; want one of them")
 	case z.l != nil:
 		return *z.l, true, nil
 	case z.x != nil:
@@ -78,12 +78,12 @@ func (d *lineDraft) build(s *site) (engine.Device, error) {
 		if s.given[k] {
 			perKM = true
 			if !s.given["length_m"] {
-				errs = append(errs, fmt.Errorf("%s without length_m; want both", k))
+				errs = append(errs, at(k, "needs length_m too"))
 			}
 		}
 	}
 	if s.given["inductance_mH_per_km"] && s.given["reactance_ohm_per_km"] {
-		errs = append(errs, errors.New("inductance_mH_per_km and reactance_ohm_per_km say the same; want one of them"))
+		errs = append(errs, at("reactance_ohm_per_km", "says the same as inductance_mH_per_km; want one of them"))
 	}
 	if !perKM && d.ohms.r == nil && !isL {
 		errs = append(errs, errors.New("a line needs an impedance; want resistance_ohm_per_km and reactance_ohm_per_km with length_m, or R_ohm and X_ohm or L_H"))
@@ -196,11 +196,11 @@ func (d *transformerDraft) build(s *site) (engine.Device, error) {
 	}
 	plate.Group, err = devices.ParseVectorGroup(group)
 	if err != nil {
-		errs = append(errs, fmt.Errorf("vector_group: %s", plain(err)))
+		errs = append(errs, at("vector_group", "%s", plain(err)))
 	}
 	for k, v := range []float64{plate.HV, plate.LV} {
 		if r := v / s.volts[k]; r < minVoltageRatio || r > maxVoltageRatio {
-			bad("%s is %g kV at a bus of %g kV; accepted are %g to %g times the bus's", []string{"hv_kV", "lv_kV"}[k], v/1e3, s.volts[k]/1e3, minVoltageRatio, maxVoltageRatio)
+			errs = append(errs, at([]string{"hv_kV", "lv_kV"}[k], "the bus has %g kV; accepted are %g to %g times that", s.volts[k]/1e3, minVoltageRatio, maxVoltageRatio))
 		}
 	}
 	if s.volts[0] < s.volts[1] {
@@ -243,7 +243,7 @@ func (s *site) rated(own float64) (float64, error) {
 		return s.volts[0], nil
 	}
 	if r := own / s.volts[0]; r < minVoltageRatio || r > maxVoltageRatio {
-		return 0, fmt.Errorf("voltage_kV is %g at a bus of %g kV; accepted are %g to %g times the bus's", own/1e3, s.volts[0]/1e3, minVoltageRatio, maxVoltageRatio)
+		return 0, at("voltage_kV", "the bus has %g kV; accepted are %g to %g times that", s.volts[0]/1e3, minVoltageRatio, maxVoltageRatio)
 	}
 	return own, nil
 }
@@ -268,7 +268,7 @@ func breakerKind() *kind {
 
 func (d *breakerDraft) build(s *site) (engine.Device, error) {
 	if s.given["contact_resistance_mohm"] && s.given["R_ohm"] {
-		return nil, errors.New("contact_resistance_mohm and R_ohm say the same; want one of them")
+		return nil, at("R_ohm", "says the same as contact_resistance_mohm; want one of them")
 	}
 	p := d.p
 	if p.Resistance == 0 {

@@ -132,13 +132,11 @@ func (l *loader) buses() {
 	l.busAt, l.badBus = make(map[string]int), make(map[string]bool)
 	l.section("bus", MaxBuses, "quay", func(p []string, t map[string]any) {
 		b := busSpec{name: p[1]}
-		before := len(l.doc.faults)
 		v := read(l.doc, p, t, busFields(), &b, "a bus")
 		if !v.given["voltage_kV"] {
 			l.badBus[b.name] = true
 			b.volts = math.NaN()
 		}
-		_ = before
 		l.busAt[b.name] = len(l.c.buses)
 		l.c.buses = append(l.c.buses, b)
 	})
@@ -216,6 +214,10 @@ func (l *loader) devices() {
 		dev, err := s.build()
 		if err != nil {
 			for _, e := range causes(err) {
+				if k, ok := e.(*keyError); ok {
+					d.fault([]string{"device", s.name, k.key}, "%s", k.text)
+					continue
+				}
 				d.fault([]string{"device", s.name}, "%s", plain(e))
 			}
 			l.badDev[s.name] = true

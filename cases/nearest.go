@@ -36,14 +36,15 @@ func distance(a, b string) int {
 }
 
 // nearest finds the known name closest to one, if any is close: within a third
-// of its length, or two. A name that begins another counts as close.
+// of its length, or two, and not all of it. A name that begins another counts as
+// close.
 func nearest(name string, known []string) (string, bool) {
 	best, at := "", max(2, len(name)/3)+1
 	if len(name) > MaxName {
 		return "", false
 	}
 	for _, k := range known {
-		if d := distance(name, k); d < at {
+		if d := distance(name, k); d < at && d < max(len(name), len(k)) {
 			best, at = k, d
 		}
 	}
