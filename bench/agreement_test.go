@@ -26,6 +26,9 @@ func TestAgreement(t *testing.T) {
 		// The instant of closing is itself a result, and the current limit
 		// acts after it: kinks that both codes step across.
 		{FeederStudy(), 5e-6, 5e-4},
+		// The capacitor bank's losses, 2 kW beside 115 kvar, follow every
+		// ripple of its voltage: there IDA at 1e-9 is 7e-5 off itself at 1e-10.
+		{HarbourStudy(), 3e-5, 2e-4},
 	} {
 		s := tc.study
 		ref, refStats, err := s.Waveforms(ctx, reference(1e-10), nil, sampling)

@@ -131,7 +131,9 @@ func TestStepAllocatesNothing(t *testing.T) {
 	}
 }
 
-func own() []Study { return []Study{FeederStudy(), MicrogridStudy(10), MicrogridStudy(100)} }
+func own() []Study {
+	return []Study{HarbourStudy(), FeederStudy(), MicrogridStudy(10), MicrogridStudy(100)}
+}
 
 func TestMicrogridRefusesTooFew(t *testing.T) {
 	if _, err := Microgrid(3); err == nil {

@@ -24,7 +24,7 @@ func reference(rel float64) Setup {
 }
 
 func studies() []Study {
-	s := []Study{FeederStudy(), MicrogridStudy(10)}
+	s := []Study{HarbourStudy(), FeederStudy(), MicrogridStudy(10)}
 	if *full {
 		s = append(s, MicrogridStudy(100))
 	}

@@ -8,6 +8,7 @@ import (
 	"math"
 	"slices"
 	"strconv"
+	"strings"
 	"time"
 
 	"islet/engine"
@@ -108,17 +109,32 @@ type Difference struct {
 func Compare(got, ref *engine.Trace, sample, flat float64) Difference {
 	d := Difference{}
 	a, b := samples(got, sample), samples(ref, sample)
+	// The magnitude of a device's active and reactive power is that of the
+	// larger: the vars of a resistor are no signal.
+	size := make(map[string]float64)
+	kind := func(ch engine.TraceChannel) string {
+		if strings.HasPrefix(ch.Unit, "var") {
+			return ch.Owner + " W" + strings.TrimPrefix(ch.Unit, "var")
+		}
+		return ch.Owner + " " + ch.Unit
+	}
+	for i, ch := range ref.Channels {
+		y, k := ref.Values(i), kind(ch)
+		for _, r := range b {
+			size[k] = math.Max(size[k], math.Abs(y[r]))
+		}
+	}
 	for i, ch := range ref.Channels {
 		j := got.Index(ch.Name)
 		if j < 0 {
 			continue
 		}
 		x, y := got.Values(j), ref.Values(i)
-		lo, hi, size := math.Inf(1), math.Inf(-1), 0.0
+		lo, hi := math.Inf(1), math.Inf(-1)
 		for _, r := range b {
-			lo, hi, size = math.Min(lo, y[r]), math.Max(hi, y[r]), math.Max(size, math.Abs(y[r]))
+			lo, hi = math.Min(lo, y[r]), math.Max(hi, y[r])
 		}
-		span := math.Max(hi-lo, flat*size)
+		span := math.Max(hi-lo, flat*size[kind(ch)])
 		if span == 0 {
 			continue
 		}
