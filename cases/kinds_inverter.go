@@ -124,7 +124,11 @@ func checkControl(s *site, control devices.ControlKind) error {
 
 // priority is the key of the current limit's priority.
 func priority[T any](set func(*T, devices.LimitPriority)) field[T] {
-	f := word("limit_priority", string(devices.AngleKept), func(d *T, s string) { set(d, devices.LimitPriority(s)) }, "which part of the current gives way to the limit")
+	f := word("limit_priority", string(devices.AngleKept), func(d *T, s string) {
+		if p := devices.LimitPriority(s); p != devices.AngleKept { // "" stands for it
+			set(d, p)
+		}
+	}, "which part of the current gives way to the limit")
 	f.choices = []string{string(devices.AngleKept), string(devices.DFirst), string(devices.QFirst)}
 	return f
 }

@@ -5,6 +5,7 @@ import (
 	"fmt"
 	"io"
 	"path"
+	"sort"
 	"strings"
 
 	"github.com/BurntSushi/toml"
@@ -28,6 +29,7 @@ func shippedNames() []string {
 	for _, f := range files {
 		names = append(names, strings.TrimSuffix(f.Name(), ".toml"))
 	}
+	sort.Strings(names)
 	return names
 }
 
