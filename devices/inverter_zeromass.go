@@ -380,18 +380,24 @@ func eigenvaluesOf(a *mat.Dense) ([]complex128, error) {
 
 // withFacets returns m with those facets of its block that can't be empty.
 func withFacets(m *massless) solvers.Block {
-	diff, isDiff := m.block.(solvers.Differentiable)
-	timed, isTimed := m.block.(solvers.TimeDependent)
-	former, isFormer := m.block.(facet.Former)
-	ratioed, isRatioed := m.block.(facet.Ratioed)
-	switchable, isSwitchable := m.block.(facet.Switchable)
+	diff, _ := m.block.(solvers.Differentiable)
+	timed, _ := m.block.(solvers.TimeDependent)
+	former, _ := m.block.(facet.Former)
+	ratioed, _ := m.block.(facet.Ratioed)
+	switchable, _ := m.block.(facet.Switchable)
+	return combine(m, diff, timed, former, ratioed, switchable)
+}
+
+// combine returns m with the facets that are not nil, and no others: a type for
+// each combination, since facets are found by type assertions.
+func combine(m *massless, diff solvers.Differentiable, timed solvers.TimeDependent,
+	former facet.Former, ratioed facet.Ratioed, switchable facet.Switchable) solvers.Block {
 	which := 0
-	for k, is := range []bool{isDiff, isTimed, isFormer, isRatioed, isSwitchable} {
+	for k, is := range []bool{diff != nil, timed != nil, former != nil, ratioed != nil, switchable != nil} {
 		if is {
 			which |= 1 << k
 		}
 	}
-	// One type for each combination: a facet is found by a type assertion.
 	switch which {
 	case 0:
 		return m
