@@ -398,6 +398,7 @@ func TestNearest(t *testing.T) {
 
 func FuzzParse(f *testing.F) {
 	f.Add(small)
+	f.Add(everything)
 	for _, name := range shippedNames() {
 		if data, err := Source(name); err == nil {
 			f.Add(string(data))
