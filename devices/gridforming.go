@@ -657,13 +657,13 @@ func unit(k int) complex128 {
 
 // formingDirection is a direction in the space of an inverter's arguments.
 type formingDirection struct {
-	bus     complex128 // v_bus, network frame
-	delta   float64
-	z       int // the unknown of the primary control that moves, -1 for none
-	phi, vC complex128
-	iNet    complex128
-	omega   float64 // of the orders alone: change of omega,
-	volts   float64 // of V, or of the law's voltage at detail "phase only"
+	bus   complex128 // v_bus, network frame; where i_g is no unknown
+	delta float64
+	z     int // the unknown of the primary control that moves, -1 for none
+	vC    complex128
+	iNet  complex128
+	omega float64 // of the orders alone: change of omega,
+	volts float64 // of V, or of the law's voltage at detail "phase only"
 }
 
 // tangent writes the derivative of [flow | rate] in direction d into dst, at any
@@ -739,14 +739,14 @@ func (g *GridForming) tangent(dst []float64, pt *formingPoint, d *formingDirecti
 	if l.iG < 0 {
 		dNet = pt.e * (dG + jtimes(d.delta, pt.iG))
 	} else {
-		setPair(dst, 2+l.iG, pt.e*(dC+jtimes(d.delta, pt.vC))-d.bus-g.gridImpedance()*d.iNet)
+		setPair(dst, 2+l.iG, pt.e*(dC+jtimes(d.delta, pt.vC))-g.gridImpedance()*d.iNet)
 	}
 	setPair(dst, 0, -dNet)
 	if l.phi < 0 {
 		return
 	}
 	dErr := complex(dV, 0) - pt.impedanceSlope(dG) - dC
-	dRef := times(p.Kpv, dErr) + times(p.Kiv, d.phi) + times(p.F, dG) + jtimes(pt.omegaN*f.Cf, dC)
+	dRef := times(p.Kpv, dErr) + times(p.F, dG) + jtimes(pt.omegaN*f.Cf, dC)
 	if p.OwnSpeed {
 		dRef += jtimes(dw*f.Cf, pt.vC)
 	}
@@ -769,15 +769,24 @@ func (g *GridForming) fillReduced(pt *formingPoint) {
 	for k := range g.nz {
 		fill(3+k, formingDirection{z: k})
 	}
+	w := g.sparsity.work
+	if l.iG >= 0 {
+		block(w, n, 2+l.iG, 0, -1) // v_bus reaches nothing else
+	}
 	for q := range 2 {
 		u := unit(q)
-		fill(q, formingDirection{bus: u, z: -1})
-		if l.phi >= 0 {
-			fill(2+l.phi+q, formingDirection{phi: u, z: -1})
-			fill(2+l.vC+q, formingDirection{vC: u, z: -1})
-		}
 		if l.iG >= 0 {
 			fill(2+l.iG+q, formingDirection{iNet: u, z: -1})
+		} else {
+			fill(q, formingDirection{bus: u, z: -1})
+		}
+		if l.phi >= 0 {
+			fill(2+l.vC+q, formingDirection{vC: u, z: -1})
+			// phi moves the current reference alone
+			dRef := times(g.par.Kiv, u)
+			dLim := pt.lim.slope(dRef)
+			column(w, n, 2+l.phi, 2+l.phi+q, times(g.par.Kaw, dLim-dRef))
+			column(w, n, 2+l.vC, 2+l.phi+q, dLim)
 		}
 	}
 }

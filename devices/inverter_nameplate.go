@@ -365,7 +365,9 @@ type GridFollowingNameplate struct {
 	VoltageFilter float64 // corner of the filter of v_md, Hz; 0: 50
 	VoltageFloor  float64 // least voltage in a denominator, per unit; 0: 0.2
 
-	CurrentLimit       float64 // per unit of rated current; 0: 1.2; +Inf: none
+	CurrentLimit float64       // per unit of rated current; 0: 1.2; +Inf: none
+	Priority     LimitPriority // of the current limit, d being active; "": angle kept
+
 	SwitchingFrequency float64 // Hz; 0: 10,000; used for the current bandwidth alone
 	CurrentBandwidth   float64 // Hz; 0: a tenth of SwitchingFrequency
 	FeedForward        float64 // K_ff; 0: none
@@ -397,6 +399,7 @@ func (n GridFollowingNameplate) Params() (GridFollowingParams, error) {
 	f.check(floor > 0 && floor < 1, "VoltageFloor", floor, "per unit", "a value > 0 and < 1")
 	limit := orDefault(n.CurrentLimit, 1.2)
 	checkLimit(f, "CurrentLimit", limit, "per unit")
+	n.Priority.check(f)
 	fs := orDefault(n.SwitchingFrequency, 10e3)
 	f.positive("SwitchingFrequency", fs, "Hz")
 	fi := orDefault(n.CurrentBandwidth, fs/10)
@@ -440,6 +443,7 @@ func (n GridFollowingNameplate) Params() (GridFollowingParams, error) {
 		Kic:            kpc * wi / 10,
 		Kff:            n.FeedForward,
 		IMax:           limit * PeakAmperes(RatedAmperes(n.Power, n.Voltage)),
+		Priority:       n.Priority,
 		Filter:         filter,
 	}, nil
 }

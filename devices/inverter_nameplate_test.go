@@ -289,9 +289,9 @@ func TestNameplateControls(t *testing.T) {
 func TestNameplateFaults(t *testing.T) {
 	_, err := GridFormingNameplate{Power: -1, Voltage: 400, Frequency: math.NaN(), Psi: new(100.0)}.Params()
 	wantFaults(t, err, "Power = -1 VA", "Frequency = NaN Hz", "Psi = 100 degrees: want 0 to 90")
-	_, err = GridFollowingNameplate{Power: 1e3, Voltage: 0, Frequency: 50, PLLDamping: -2, LFilter: true,
+	_, err = GridFollowingNameplate{Power: 1e3, Voltage: 0, Frequency: 50, PLLDamping: -2, LFilter: true, Priority: "none",
 		Filter: FilterNameplate{CfPU: 0.1}}.Params()
-	wantFaults(t, err, "Voltage = 0 V", "PLLDamping = -2", "an L filter has neither")
+	wantFaults(t, err, "Voltage = 0 V", "PLLDamping = -2", "Priority = \"none\"", "an L filter has neither")
 }
 
 func TestParamFaults(t *testing.T) {
