@@ -154,7 +154,7 @@ func formingKind() *kind {
 		num("psi_deg", "degrees", "90", 0, 90, func(d *T, x float64) { d.plate.Psi = &x }, "angle by which the power pair is turned: 90 inductive, 0 resistive networks"),
 		above("power_filter_Hz", "Hz", "5; none with a virtual machine", 0, 1e4, func(d *T, x float64) { d.plate.PowerFilter = x }, "droop, virtual machine: corner of the power filter").orInf(),
 		num("inertia_s", "s", "2", 1e-3, 100, func(d *T, x float64) { d.plate.Inertia = &x }, "virtual machine: inertia constant H"),
-		num("damping", "rated power by nominal frequency", "that of the frequency droop", 0, 1e6, func(d *T, x float64) { d.plate.Damping = &x }, "virtual machine: damping D"),
+		num("damping", "per unit", "that of the frequency droop", 0, 1e6, func(d *T, x float64) { d.plate.Damping = &x }, "virtual machine: damping D, rated power by nominal frequency"),
 		num("voltage_delay_ms", "ms", "50", 0, 1e5, func(d *T, x float64) { d.plate.VoltageDelay = &x }, "virtual machine: time constant T_v of the voltage").in(1e-3),
 		num("voltage_range_percent", "%", "", 0.01, 29, func(d *T, x float64) { d.plate.VoltageRange = &x }, "oscillator: exact fall of voltage at rated vars, instead of voltage_droop_percent, the slope at rated voltage"),
 		num("virtual_impedance_percent", "%", "10", 0, 100, func(d *T, x float64) { x /= 100; d.plate.VirtualImpedance = &x }, "|Z_v| of the rated impedance, at the angle psi"),

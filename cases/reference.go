@@ -47,7 +47,8 @@ const referenceHead = `A case file is TOML with named tables: [study], [bus.NAME
 Keys in trade units end in the unit. Keys named after a symbol of the equations
 are in SI and replace what the nameplate would give; powers are three-phase
 totals, impedances those of one phase of a star, voltages line to line rms unless
-the unit says "peak phase".
+the unit says "peak phase". Ranges: "> 0 to 10" leaves 0 itself out; inf stands
+for none.
 `
 
 func referenceSection(b *strings.Builder, section string) {
@@ -85,32 +86,33 @@ func referenceKind(b *strings.Builder, k *kind) {
 	fmt.Fprintf(b, "kind = %q\n%s\n", k.name, k.doc)
 	var infos []keyInfo
 	for _, t := range k.terminals {
-		infos = append(infos, keyInfo{name: t, def: "required", doc: "bus", form: text})
+		infos = append(infos, keyInfo{name: t, def: "required", doc: "the bus at this terminal", form: text})
 	}
 	referenceTable(b, append(infos, k.infos...))
 }
 
-// referenceTable prints keys, units, defaults, ranges and meanings.
+// referenceTable prints keys, units, defaults, ranges and meanings. A default or
+// range too long for its column follows the meaning.
 func referenceTable(b *strings.Builder, infos []keyInfo) {
+	const widest = 26
 	rows := [][5]string{{"key", "unit", "default", "accepted", "meaning"}}
 	for _, k := range infos {
-		def := k.def
-		if def == "" {
-			def = "-"
+		r := [5]string{k.name, k.unit, k.def, k.span(), k.doc}
+		for i, what := range [5]string{2: "default", 3: "accepted"} {
+			switch {
+			case r[i] == "":
+				r[i] = "-"
+			case what != "" && len(r[i]) > widest:
+				r[4] += "; " + what + ": " + r[i]
+				r[i] = "..."
+			}
 		}
-		unit := k.unit
-		if unit == "" {
-			unit = "-"
-		}
-		rows = append(rows, [5]string{k.name, unit, def, k.accepted(), k.doc})
+		rows = append(rows, r)
 	}
 	var width [4]int
 	for _, r := range rows {
 		for i := range width {
-			// A long default or range runs over instead of widening all.
-			if n := len(r[i]); n <= 28 {
-				width[i] = max(width[i], n)
-			}
+			width[i] = max(width[i], len(r[i]))
 		}
 	}
 	for _, r := range rows {

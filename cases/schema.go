@@ -4,6 +4,7 @@ import (
 	"fmt"
 	"math"
 	"sort"
+	"strconv"
 	"strings"
 )
 
@@ -59,12 +60,33 @@ func (k *keyInfo) accepted() string {
 	return s
 }
 
+// span is accepted in the short form of the reference.
+func (k *keyInfo) span() string {
+	if k.form != number || math.IsInf(k.max, 1) {
+		return k.accepted()
+	}
+	s := figure(k.min) + " to " + figure(k.max)
+	if k.open {
+		s = "> " + s
+	}
+	if k.inf {
+		s += ", inf"
+	}
+	return s
+}
+
 // figure writes a bound of a range.
 func figure(x float64) string {
-	if a := math.Abs(x); a >= 1e6 || a > 0 && a < 1e-3 {
-		return strings.Replace(strings.Replace(fmt.Sprintf("%g", x), "e+0", "e", 1), "e-0", "e-", 1)
+	if a := math.Abs(x); a >= 1e5 || a > 0 && a < 1e-3 {
+		s := fmt.Sprintf("%.6e", x)
+		mantissa, exponent, _ := strings.Cut(s, "e")
+		if strings.Contains(mantissa, ".") {
+			mantissa = strings.TrimRight(strings.TrimRight(mantissa, "0"), ".")
+		}
+		n, _ := strconv.Atoi(exponent)
+		return fmt.Sprintf("%se%d", mantissa, n)
 	}
-	return fmt.Sprintf("%g", x)
+	return fmt.Sprintf("%.6g", x)
 }
 
 // field is a key with the way its value goes into a T. Exactly one setter is
