@@ -296,6 +296,44 @@ func TestOscillatorSteadyState(t *testing.T) {
 	}
 }
 
+// P* and Q* are met exactly at u = V*, behind the virtual impedance, at any psi.
+func TestOscillatorDispatch(t *testing.T) {
+	for _, psi := range []float64{math.Pi / 2, 0.7, 0} {
+		p := testForming()
+		p.Primary = oscillatorOf(psi)
+		p.Rv, p.Xv = 0.5, 0.8
+		g := formingAt(t, p, Full)
+		i := complex(p.P, -p.Q) / complex(1.5*p.V0, 0)
+		term := complex(p.V0, 0) - (complex(p.Rv, p.Xv)+g.gridImpedance())*i
+		v, x := []float64{real(term), imag(term)}, make([]float64, g.own)
+		g.Guess(x, 0, v)
+		rate := make([]float64, g.own)
+		if err := g.Eval(make([]float64, 2), rate, 0, v, x); err != nil {
+			t.Fatal(err)
+		}
+		for k, u := range g.Describe().Unknowns {
+			if math.Abs(rate[k]) > 1e-6*math.Max(1, u.Base) {
+				t.Errorf("psi = %.3g: rate of %s = %.3g", psi, u.Name, rate[k])
+			}
+		}
+		ch := make([]float64, len(g.Channels()))
+		g.Measure(ch, 0, v, x)
+		drop := complex(p.Rv, p.Xv) * i // from u to the filter capacitor
+		for _, c := range []struct {
+			name      string
+			got, want float64
+		}{
+			{"u", x[1], p.V0}, {"P at u", ch[5], p.P}, {"Q at u", ch[6], p.Q},
+			{"v_c", ch[4], LineVolts(cmplx.Abs(complex(p.V0, 0) - drop))},
+			{"p", ch[0], p.P - 1.5*(p.Rv+p.Filter.Rg)*real(i*cmplx.Conj(i))},
+		} {
+			if math.Abs(c.got-c.want) > 1e-6*math.Abs(c.want) {
+				t.Errorf("psi = %.3g: %s = %.9g, want %.9g", psi, c.name, c.got, c.want)
+			}
+		}
+	}
+}
+
 // Unloaded, |v|^2 = v*^2/(1 + (v*^2/v0^2 - 1) e^{-2 eta alpha t}); from v0 = 0.1 and
 // the 10 to 90 % rise time 3.022565/(eta alpha) as computed from it.
 func TestOscillatorStart(t *testing.T) {

@@ -82,8 +82,8 @@ func (g *GridForming) Channels() []facet.Channel {
 		{Name: "i", Unit: "A rms", Doc: "current at the terminal"},
 		{Name: "frequency", Unit: "Hz", Doc: "frequency ordered by the primary control"},
 		{Name: "v_c", Unit: "V line-line rms", Doc: "voltage of the filter capacitor"},
-		{Name: "p_control", Unit: "W generated", Doc: "active power the primary control acts on, at the filter capacitor"},
-		{Name: "q_control", Unit: "var generated", Doc: "reactive power the primary control acts on, at the filter capacitor"},
+		{Name: "p_control", Unit: "W generated", Doc: "active power the primary control acts on, at the filter capacitor (an oscillator: behind the virtual impedance)"},
+		{Name: "q_control", Unit: "var generated", Doc: "reactive power the primary control acts on, at the filter capacitor (an oscillator: behind the virtual impedance)"},
 		{Name: "i_converter", Unit: "A rms", Doc: "current of the bridge"},
 		{Name: "limiting", Unit: "1", Doc: "part by which the limit cuts the current reference"},
 	}
