@@ -257,7 +257,6 @@ func follow(s *site, name string, gain *float64, by float64) {
 type followingDraft struct {
 	plate    devices.GridFollowingNameplate
 	explicit explicit[devices.GridFollowingParams]
-	priority devices.LimitPriority
 }
 
 func followingKind() *kind {
@@ -278,7 +277,7 @@ func followingKind() *kind {
 		above("voltage_filter_Hz", "Hz", "50", 0, 1e5, func(d *T, x float64) { d.plate.VoltageFilter = x }, "corner of the filter of v_md"),
 		num("voltage_floor_percent", "%", "20", 0.1, 99, func(d *T, x float64) { d.plate.VoltageFloor = x }, "least voltage in a denominator, of rated").in(1e-2),
 		above("current_limit_percent", "%", "120", 0, 1e4, func(d *T, x float64) { d.plate.CurrentLimit = x }, "largest current of the bridge, of rated").in(1e-2).orInf(),
-		priority(func(d *T, p devices.LimitPriority) { d.priority = p }),
+		priority(func(d *T, p devices.LimitPriority) { d.plate.Priority = p }),
 		above("switching_frequency_Hz", "Hz", "10000", 0, 1e7, func(d *T, x float64) { d.plate.SwitchingFrequency = x }, "used for the current bandwidth alone"),
 		above("current_bandwidth_Hz", "Hz", "a tenth of the switching frequency", 0, 1e6, func(d *T, x float64) { d.plate.CurrentBandwidth = x }, "of the current loop"),
 		yes("omit_capacitor", func(d *T, b bool) { d.plate.OmitCapacitor = b }, "leave the capacitor's current out of the reference; its vars then add to q"),
@@ -321,7 +320,6 @@ func (d *followingDraft) build(s *site) (engine.Device, error) {
 	if err != nil {
 		return nil, err
 	}
-	p.Priority = d.priority
 	lf := p.Filter.Lf
 	for _, set := range d.explicit.set {
 		set(&p)
