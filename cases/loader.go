@@ -261,6 +261,9 @@ func (l *loader) terminals(s *deviceSpec, p []string, t map[string]any) bool {
 		b, ok := l.busAt[name]
 		if !ok {
 			d.fault(key, "no bus of that name; %s", suggest(name, l.c.BusNames()))
+			if meant, ok := nearest(name, l.c.BusNames()); ok {
+				l.used[l.busAt[meant]] = true
+			}
 			s.at = append(s.at, -1)
 			good = false
 			continue
