@@ -180,7 +180,7 @@ func (m *Simulation) due() bool { return len(m.queue) > 0 && m.queue[0].at <= m.
 // restarts if anything changed. Both sides are recorded.
 func (m *Simulation) handle(hits []solvers.Hit) error {
 	fired := append([]solvers.Hit(nil), hits...)
-	if len(fired) > 0 && m.chatter.Add(m.t) {
+	if len(fired) > 0 && m.chatter.Add(m.t, m.step.Stats().Largest) {
 		w := m.conditions[fired[0].Root]
 		m.stopped = &RunError{Time: m.t, At: w.String(), Err: &solvers.ChatterError{Time: m.t, Root: fired[0].Root, Events: m.chatter.Events()}}
 		return m.stopped

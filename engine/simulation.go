@@ -5,6 +5,7 @@ import (
 	"errors"
 	"fmt"
 	"math"
+	"strings"
 
 	"islet/solvers"
 )
@@ -232,7 +233,7 @@ func (m *Simulation) connect() error {
 		for k := range d.own {
 			m.y[d.lo+k] = 0
 		}
-		if !d.tripped && d.sized != nil && old != nil {
+		if !d.tripped && old != nil && d.isInverter() {
 			d.tripped = true
 			m.note(d.name, false, "%s %s lost its network and tripped", d.desc.Kind, d.name)
 		}
@@ -254,6 +255,21 @@ func (m *Simulation) connect() error {
 	m.reportTopology(old, next)
 	m.topo = next
 	return nil
+}
+
+// isInverter reports whether the device is a rated source, which doesn't come
+// back by itself after its network has gone: one terminal, a current limit, and
+// power generated.
+func (d *member) isInverter() bool {
+	if d.sized == nil || len(d.buses) != 1 {
+		return false
+	}
+	for _, c := range d.channels {
+		if c.Name == "p" {
+			return strings.HasPrefix(c.Unit, "W generated")
+		}
+	}
+	return false
 }
 
 // hasQuasiSteady reports whether a change of the frame's speed changes an

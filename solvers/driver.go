@@ -47,19 +47,31 @@ type Hit struct {
 // there, so that the state at a root has the order of the method.
 //
 // A function that is zero at the start counts as crossing only after it has
-// left zero. A root that has been reported is not reported again before its
-// function has left zero.
+// left zero. A root that has been reported counts as crossed: the function is
+// taken to be on the far side, whatever rounding says, until it has clearly
+// left zero; if it then is on the near side, it has crossed back, which is
+// reported as such.
 type Driver struct {
 	st      Stepper
 	roots   Roots
-	sign    []int8 // reference sign; 0: not armed, the function has not left zero
+	sign    []int8    // reference sign; 0: not armed, the function has not left zero
+	side    []int8    // of a root not armed: the side it is taken to be on, 0 if none
+	size    []float64 // largest magnitude seen in the last step searched
 	y       []float64
 	samples []sample
+	start   []armed
 	found   []crossing
 	hits    []Hit
 	scratch []float64
 	vals    []float64
-	full    bool
+	fresh   bool // no step has been searched since the roots were armed
+}
+
+// armed is a root's reference at the start of the step being searched: the
+// sign holds from sample k on; sign 0 if the root isn't armed in this step.
+type armed struct {
+	sign int8
+	k    int
 }
 
 type sample struct {
@@ -68,9 +80,10 @@ type sample struct {
 }
 
 type crossing struct {
-	t    float64
-	root int
-	dir  Direction
+	t      float64
+	root   int
+	dir    Direction
+	counts bool // in a direction that is asked for
 }
 
 const rootSamples = 4 // interior points of a step at which roots are looked for
@@ -82,7 +95,8 @@ func NewDriver(s Stepper, r *Roots) *Driver {
 	if r != nil && r.N > 0 {
 		d.roots = *r
 		n := r.N
-		d.sign = make([]int8, n)
+		d.sign, d.side, d.size = make([]int8, n), make([]int8, n), make([]float64, n)
+		d.start = make([]armed, n)
 		d.scratch = make([]float64, n)
 		d.y = make([]float64, len(s.State()))
 		d.samples = make([]sample, rootSamples+3)
@@ -114,8 +128,9 @@ func (d *Driver) arm() {
 	}
 	d.roots.Func(d.scratch, d.st.Time(), d.st.State())
 	for i, g := range d.scratch {
-		d.sign[i] = signOf(g)
+		d.sign[i], d.side[i] = signOf(g), 0
 	}
+	d.fresh = true
 }
 
 func signOf(x float64) int8 {
@@ -130,8 +145,12 @@ func signOf(x float64) int8 {
 
 // at evaluates the root functions at t within the last step.
 func (d *Driver) at(dst []float64, t float64) {
-	if t == d.st.Time() {
+	switch t {
+	case d.st.Time():
 		d.roots.Func(dst, t, d.st.State())
+		return
+	case d.st.Previous():
+		d.roots.Func(dst, t, d.st.PreviousState())
 		return
 	}
 	if d.roots.Needs == nil {
@@ -157,36 +176,48 @@ func (d *Driver) Advance(tmax float64) ([]Hit, error) {
 		return nil, nil
 	}
 	t0, t1 := d.st.Previous(), d.st.Time()
-	h := t1 - t0
-	d.search(t0, t1)
-	if len(d.found) == 0 {
-		return nil, nil
-	}
-	// The earliest crossing, and those that can't be told from it.
+	d.search(t0, t1, t1 == tmax)
+	// The earliest crossing that counts, and those that can't be told from it.
 	sort.SliceStable(d.found, func(i, j int) bool { return d.found[i].t < d.found[j].t })
-	first := d.found[0]
-	together := math.Max(16*ulp(first.t), 1e-11*h)
+	together := math.Max(16*ulp(t1), 1e-11*(t1-t0))
 	d.hits = d.hits[:0]
+	var first crossing
 	for _, c := range d.found {
-		if c.t-first.t <= together {
+		if c.counts && (len(d.hits) == 0 || c.t-first.t <= together) {
+			if len(d.hits) == 0 {
+				first = c
+			}
 			d.hits = append(d.hits, Hit{c.root, c.dir})
 		}
 	}
-	if first.t != t1 {
-		if err := d.end(first, t0, t1); err != nil {
+	cut := t1
+	if len(d.hits) > 0 {
+		cut = first.t
+		if t1-cut <= together {
+			cut = t1
+		} else if err := d.end(first, t0, t1); err != nil {
 			return nil, err
 		}
 	}
-	// What hasn't fired keeps its sign at the new end; what has is armed
-	// again when it has left zero.
-	d.roots.Func(d.scratch, d.st.Time(), d.st.State())
-	for i, g := range d.scratch {
-		if s := signOf(g); s != 0 && d.sign[i] == 0 {
-			d.sign[i] = s
+	// Reference signs at the new end: what crossed before it has turned, what
+	// crossed at it is taken to be on the far side.
+	for i, a := range d.start {
+		d.sign[i] = 0
+		if a.sign != 0 && d.samples[a.k].t <= cut {
+			d.sign[i] = a.sign
 		}
 	}
-	for _, hit := range d.hits {
-		d.sign[hit.Root] = 0
+	for _, c := range d.found {
+		switch {
+		case c.t > cut+together:
+		case c.t < cut-together:
+			d.sign[c.root] = int8(c.dir)
+		default:
+			d.sign[c.root], d.side[c.root] = 0, int8(c.dir)
+		}
+	}
+	if len(d.hits) == 0 {
+		return nil, nil
 	}
 	return d.hits, nil
 }
@@ -230,9 +261,10 @@ func (d *Driver) value(root int, t float64) float64 {
 	return d.scratch[root]
 }
 
-// search lists the crossings within the last step in d.found. The reference
-// signs stay as they were unless there is no crossing.
-func (d *Driver) search(t0, t1 float64) {
+// search lists the crossings within the last step in d.found, and the signs
+// from which they count in d.start. stop tells that the step ended where it was
+// told to.
+func (d *Driver) search(t0, t1 float64, stop bool) {
 	h := t1 - t0
 	d.found = d.found[:0]
 	s := d.samples[:0]
@@ -246,7 +278,7 @@ func (d *Driver) search(t0, t1 float64) {
 	for _, sg := range d.sign {
 		unarmed = unarmed || sg == 0
 	}
-	if unarmed {
+	if unarmed || d.fresh {
 		take(t0 + math.Max(1e-4*h, math.Min(0.5*h, 64*ulp(t0))))
 	}
 	for k := 1; k <= rootSamples && !d.roots.EndsOnly; k++ {
@@ -254,40 +286,60 @@ func (d *Driver) search(t0, t1 float64) {
 	}
 	take(t1)
 	for i := range d.sign {
-		d.searchOne(i, s)
+		d.searchOne(i, s, stop)
 	}
+	d.fresh = false
 }
 
-func (d *Driver) searchOne(i int, s []sample) {
+// rootNoise is the magnitude, relative to what a root function reaches in a
+// step, below which a root that was just reported counts as still zero.
+const rootNoise = 1e-12
+
+// missed is the magnitude, relative to what a root function was shortly before,
+// or reaches in a step, by which rounding may make it miss zero at the end or
+// at the start of a run.
+const missed = 1e-11
+
+func (d *Driver) searchOne(i int, s []sample, stop bool) {
 	want := Both
 	if d.roots.Direction != nil {
 		want = d.roots.Direction[i]
 	}
-	sign := d.sign[i]
-	start := 0
-	if sign == 0 {
-		start = 1
-		for start < len(s) && s[start].g[i] == 0 {
-			start++
-		}
-		if start == len(s) {
-			return // still zero everywhere: not armed
-		}
-		sign = signOf(s[start].g[i])
+	size := 0.0
+	for _, x := range s {
+		size = math.Max(size, math.Abs(x.g[i]))
 	}
-	add := func(a, b float64, from int8) {
+	add := func(t float64, from int8) {
 		dir := Rising
 		if from > 0 {
 			dir = Falling
 		}
-		if want == Both || want == dir {
-			d.found = append(d.found, crossing{d.locate(i, a, b, from), i, dir})
+		d.found = append(d.found, crossing{t, i, dir, want == Both || want == dir})
+	}
+	start, reference := 0, d.sign[i]
+	if d.fresh && math.Abs(s[0].g[i]) <= missed*size {
+		reference = 0 // zero at the start but for rounding
+	}
+	d.start[i] = armed{reference, 0}
+	if reference == 0 {
+		noise := rootNoise * math.Max(size, d.size[i])
+		for start = 1; start < len(s) && math.Abs(s[start].g[i]) <= noise; start++ {
+		}
+		if start == len(s) {
+			return // still zero everywhere
+		}
+		reference = signOf(s[start].g[i])
+		d.start[i] = armed{reference, start}
+		if side := d.side[i]; side == -reference {
+			// It was taken to be on the far side, and has come back.
+			d.start[i] = armed{side, 0}
+			add(d.leaves(i, s[0].t, s[start].t, noise), side)
 		}
 	}
-	reference := sign
+	d.size[i] = size
 	for k := start + 1; k < len(s); k++ {
-		g := s[k].g[i]
-		if float64(reference)*g > 0 {
+		g := float64(reference) * s[k].g[i]
+		if g > 0 {
 			// No change of sign. Look for a dip to zero around s[k-1],
 			// s[k]: the parabola through three neighbours tells where.
 			for m := k - 1; m <= k; m++ {
@@ -298,35 +350,55 @@ func (d *Driver) searchOne(i int, s []sample) {
 				if v > 0 || t <= s[k-1].t || t > s[k].t {
 					continue
 				}
-				add(s[m-1].t, t, reference)
+				add(d.locate(i, s[m-1].t, t, reference), reference)
 				if v < 0 {
-					add(t, s[m+1].t, -reference)
+					add(d.locate(i, t, s[m+1].t, -reference), -reference)
 				}
 				break
 			}
 			continue
 		}
-		if g == 0 && k+1 < len(s) && float64(reference)*s[k+1].g[i] > 0 {
-			// Touches zero at a sample and turns back.
-			add(s[k-1].t, s[k].t, reference)
-			add(s[k].t, s[k].t, -reference)
-			continue
-		}
 		if g == 0 && k+1 < len(s) {
-			continue // decided at the next sample
+			if float64(reference)*s[k+1].g[i] > 0 {
+				// Touches zero at a sample and turns back.
+				add(s[k].t, reference)
+				add(s[k].t, -reference)
+			}
+			continue // else decided at the next sample
 		}
 		a := s[k-1].t
 		if s[k-1].g[i] == 0 && k-1 > start {
 			a = s[k-2].t
 		}
-		add(a, s[k].t, reference)
+		add(d.locate(i, a, s[k].t, reference), reference)
 		reference = -reference
 	}
-	if len(d.found) == 0 {
-		d.sign[i] = reference
-	} else if d.sign[i] == 0 {
-		d.sign[i] = sign
+	// A function that is headed straight for zero and misses it at a stop by
+	// rounding has reached it.
+	if n := len(s); stop && n-start >= 3 {
+		g0, g1, g2 := float64(reference)*s[n-3].g[i], float64(reference)*s[n-2].g[i], float64(reference)*s[n-1].g[i]
+		fall, before := (g1-g2)/(s[n-1].t-s[n-2].t), (g0-g1)/(s[n-2].t-s[n-3].t)
+		if g2 > 0 && g2 <= missed*g1 && fall > 0.5*before {
+			add(s[n-1].t, reference)
+		}
 	}
+}
+
+// leaves returns the time between a, where root i is within noise of zero, and
+// b, where it is not, at which it leaves.
+func (d *Driver) leaves(i int, a, b, noise float64) float64 {
+	for range 60 {
+		mid := 0.5 * (a + b)
+		if mid <= a || mid >= b {
+			break
+		}
+		if math.Abs(d.value(i, mid)) > noise {
+			b = mid
+		} else {
+			a = mid
+		}
+	}
+	return b
 }
 
 // dip returns the place and signed value (reference times g) of the minimum
@@ -472,18 +544,22 @@ func (e *ChatterError) Error() string {
 	return fmt.Sprintf("solvers: t = %.9g: root %d chatters: %d events without progress in time", e.Time, e.Root, e.Events)
 }
 
-// Chatter finds accumulating events: feed it the time of each.
+// Chatter finds accumulating events: feed it the time of each. Its zero value
+// is ready.
 type Chatter struct {
-	times [32]float64
+	times [64]float64
 	n     int
 }
 
-// Add notes an event and reports whether the last 32 took a negligible time.
-func (c *Chatter) Add(t float64) bool {
+// Add notes an event at time t in a run whose largest step so far is largest,
+// and reports whether the last 64 events took a negligible time: on average
+// less than a hundred-thousandth of that step each.
+func (c *Chatter) Add(t, largest float64) bool {
 	oldest := c.times[c.n%len(c.times)]
 	c.times[c.n%len(c.times)] = t
 	c.n++
-	return c.n > len(c.times) && t-oldest <= 1e-9*math.Max(math.Abs(t), 1e-3)
+	few := float64(len(c.times)) * 1e-5 * largest
+	return c.n > len(c.times) && t-oldest <= math.Max(few, 64*ulp(t))
 }
 
 // Events is the number of events that count as chatter.
@@ -501,7 +577,7 @@ func (c *Chatter) AppendBinary(b []byte) ([]byte, error) {
 func (c *Chatter) UnmarshalBinary(data []byte) error {
 	r := stateReader{b: data}
 	var n float64
-	var times [32]float64
+	var times [64]float64
 	r.floats(&n)
 	r.vector(times[:])
 	if err := r.finish(); err != nil {
@@ -552,7 +628,7 @@ func Integrate(ctx context.Context, s Stepper, until float64, h *Handlers) error
 		copy(y, s.State())
 		t := s.Time()
 		if len(hits) > 0 {
-			if chatter.Add(t) {
+			if chatter.Add(t, s.Stats().Largest) {
 				return &ChatterError{Time: t, Root: hits[0].Root, Events: chatter.Events()}
 			}
 			if h.AtRoot != nil {
@@ -587,11 +663,11 @@ func Integrate(ctx context.Context, s Stepper, until float64, h *Handlers) error
 	return nil
 }
 
-// Disarm makes the driver wait until the functions of hits have left zero
-// before they count again. Call it after Reset for roots that were just
+// Disarm takes the functions of hits as crossed, and waits until they have left
+// zero before they count again. Call it after Reset for roots that were just
 // handled and are still (nearly) zero.
 func (d *Driver) Disarm(hits []Hit) {
 	for _, h := range hits {
-		d.sign[h.Root] = 0
+		d.sign[h.Root], d.side[h.Root] = 0, int8(h.Direction)
 	}
 }
