@@ -136,13 +136,41 @@ func (m *Simulation) passKinks(hits []solvers.Hit) []solvers.Hit {
 			continue
 		}
 		k := m.kinked[h.Root-n]
-		if h.Direction == solvers.Rising {
-			m.note(k.d.name, false, "%s reaches its %s", k.d.name, k.d.kinks[k.index])
-		} else {
-			m.note(k.d.name, false, "%s leaves its %s", k.d.name, k.d.kinks[k.index])
-		}
+		m.setActing(k.d, k.index, h.Direction == solvers.Rising, true)
 	}
 	return rest
+}
+
+// setActing notes whether the limit behind a kink acts, and tells of a change.
+func (m *Simulation) setActing(d *member, index int, acts, tell bool) {
+	if d.acting[index] == acts {
+		return
+	}
+	d.acting[index] = acts
+	if tell {
+		verb := "leaves"
+		if acts {
+			verb = "reaches"
+		}
+		m.note(d.name, false, "%s %s its %s", d.name, verb, d.kinks[index])
+	}
+}
+
+// reviewKinks notes which limits act in the present state, after a jump.
+func (m *Simulation) reviewKinks(tell bool) {
+	y := m.step.State()
+	for _, d := range m.sys.devices {
+		if d.kinked == nil || d.off || len(d.kinks) == 0 {
+			continue
+		}
+		v := m.ports[:d.ports]
+		m.net.Ports(d.block, v, y)
+		g := make([]float64, len(d.kinks))
+		d.kinked.EvalKinks(g, m.t, v, y[d.lo:d.lo+d.own])
+		for k, x := range g {
+			m.setActing(d, k, x > 0, tell)
+		}
+	}
 }
 
 // crossed notes that a condition has begun or ceased to hold.

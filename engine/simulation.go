@@ -156,6 +156,7 @@ func Start(s *System, o *Options) (*Simulation, error) {
 	s.started = true
 	copy(m.y, m.step.State())
 	m.rearm()
+	m.reviewKinks(false)
 	m.ledger = newLedger(m)
 	m.rec.row(m.t, m.step.State(), false)
 	return m, nil
@@ -438,6 +439,7 @@ func (m *Simulation) restart() error {
 	}
 	copy(m.y, m.step.State())
 	m.rearm()
+	m.reviewKinks(true)
 	return nil
 }
 

@@ -229,5 +229,6 @@ func (m *Simulation) Restore(s *Snapshot) error {
 	m.notes = kept
 	m.rec.restart(m.t)
 	m.rearm()
+	m.reviewKinks(false)
 	return nil
 }

@@ -64,6 +64,7 @@ type member struct {
 	memory   memory
 	kinked   facet.Kinked
 	kinks    []string
+	acting   []bool // whether the limit behind each kink acts
 
 	tripped bool // taken off by an event, for good
 	off     bool // takes no part at present: tripped, or in a dead island
@@ -241,6 +242,7 @@ func (s *System) Add(name string, d Device, at ...Bus) error {
 	m.memory, _ = d.(memory)
 	if m.kinked, _ = d.(facet.Kinked); m.kinked != nil {
 		m.kinks = m.kinked.Kinks()
+		m.acting = make([]bool, len(m.kinks))
 	}
 	s.devAt[name] = len(s.devices)
 	s.devices = append(s.devices, m)
