@@ -185,7 +185,12 @@ func (r DetailRule) matches(d *deviceSpec) (bool, error) {
 func levels(specs []deviceSpec, built []engine.Device, rules []DetailRule) (at []string, errs []error) {
 	at = make([]string, len(specs))
 	errs = make([]error, len(rules))
+	const patience = 20 // faulty rules, before the rest is left unchecked
+	faulty := 0
 	for k, r := range rules {
+		if faulty == patience {
+			break
+		}
 		matched, used := false, false
 		var offered []string
 		for i := range specs {
@@ -221,6 +226,9 @@ func levels(specs []deviceSpec, built []engine.Device, rules []DetailRule) (at [
 			errs[k] = fmt.Errorf("what %q matches has one level of detail only", r.Pattern)
 		default:
 			errs[k] = fmt.Errorf("no device that %q matches offers the level %q; accepted are %s", r.Pattern, r.Level, list(offered))
+		}
+		if errs[k] != nil {
+			faulty++
 		}
 	}
 	return at, errs

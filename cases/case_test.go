@@ -7,6 +7,7 @@ import (
 	"path/filepath"
 	"strings"
 	"testing"
+	"time"
 
 	"islet/engine"
 	"islet/solvers/facet"
@@ -228,6 +229,46 @@ func TestLimits(t *testing.T) {
 	_, err := Parse("x", []byte(small+many(300, "[bus.b%d]\nvoltage_kV = 1 # %d\n")))
 	if err == nil || len(causes(err)) != maxReported+1 || !strings.HasSuffix(err.Error(), "x: 200 more faults") {
 		t.Errorf("300 faults: %d told, ending %.80q", len(causes(err)), err.Error()[max(0, len(err.Error())-80):])
+	}
+}
+
+// Files made to be slow are refused in a bearable time: about 2 s at most where
+// this was written, with room for a busy machine.
+func TestHostileFilesAreQuick(t *testing.T) {
+	head := "[study]\nuntil_s = 1\n"
+	name := func(i int) string { return fmt.Sprintf("%060d", i) }
+	var keys, dangling, rules, many strings.Builder
+	keys.WriteString(head + "[bus.a]\n")
+	for i := range 15000 {
+		fmt.Fprintf(&keys, "k%s = 1\n", name(i))
+	}
+	dangling.WriteString(head)
+	for i := range 4000 {
+		fmt.Fprintf(&dangling, "[bus.%s]\nvoltage_kV = 1\n[device.d%d]\nkind = \"load\"\nbus = \"%s\"\n", name(i), i, name(900000+i))
+	}
+	rules.WriteString(head + "[bus.a]\nvoltage_kV = 1\n[device.g]\nkind = \"grid\"\nbus = \"a\"\nshort_circuit_MVA = 1\n")
+	for i := range 5000 {
+		fmt.Fprintf(&rules, "[device.%s]\nkind = \"load\"\nbus = \"a\"\npower_kW = 1\n", name(i))
+	}
+	many.WriteString(rules.String())
+	rules.WriteString("[detail]\n")
+	record := ""
+	for i := range 100 {
+		fmt.Fprintf(&rules, "\"*%s*\" = \"x\"\n", name(900000+i))
+		record += fmt.Sprintf("\"*%s*.*\", ", name(900000+i))
+	}
+	for what, src := range map[string]string{
+		"keys": keys.String(), "dangling buses": dangling.String(), "rules": rules.String(),
+		"record": strings.Replace(many.String(), "until_s = 1\n", "until_s = 1\nrecord = ["+record+"]\n", 1),
+		"quotes": "a = " + strings.Repeat("\"", MaxBytes-10), "lines": strings.Repeat("x", MaxBytes), "brackets": strings.Repeat("[a]\n", MaxBytes/4),
+	} {
+		begin := time.Now()
+		if _, err := Parse("x", []byte(src)); err == nil {
+			t.Errorf("%s: accepted", what)
+		}
+		if d := time.Since(begin); d > 20*time.Second {
+			t.Errorf("%s: %v", what, d)
+		}
 	}
 }
 

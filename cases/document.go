@@ -40,6 +40,17 @@ func (d *document) fault(key []string, format string, a ...any) {
 	d.faults = append(d.faults, f)
 }
 
+// full tells whether so many faults are known that more of them need no help.
+func (d *document) full() bool { return len(d.faults) >= maxReported }
+
+// suggest is suggest as long as that is worth its time.
+func (d *document) suggest(name string, known []string) string {
+	if d.full() {
+		return "see the faults before"
+	}
+	return suggest(name, known)
+}
+
 // shorten makes a source text fit a message.
 func shorten(s string) string {
 	s = strings.Join(strings.Fields(s), " ")

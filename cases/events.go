@@ -169,7 +169,7 @@ func (l *loader) event(v *values, d *eventDraft) (engine.Event, bool) {
 	i, there := l.devAt[d.device]
 	switch {
 	case !there && !l.named(d.device):
-		v.fault("device", "no device of that name; %s", suggest(d.device, l.c.DeviceNames()))
+		v.fault("device", "no device of that name; %s", l.doc.suggest(d.device, l.c.DeviceNames()))
 	case !there || l.built[i] == nil:
 		return engine.Event{}, false // has faults of its own
 	}

@@ -9,7 +9,7 @@ const (
 	MaxEvents  = 2000 // events and conditions together
 	MaxName    = 64   // bytes of a name
 	MaxString  = 4096 // bytes of any other string
-	MaxEntries = 2000 // of a list, and of detail rules
+	MaxEntries = 100  // of a list, and of detail rules
 
 	maxKeys     = 200000 // keys and tables of a file
 	maxNesting  = 8      // parts of a key; arrays and inline tables within each other

@@ -16,14 +16,15 @@ type loader struct {
 	c      *Case
 	untilP place // where the end of the study is set
 
-	busAt   map[string]int
-	badBus  map[string]bool // there, but at fault
-	devAt   map[string]int
-	badDev  map[string]bool
-	built   []engine.Device // at the file's level of detail; nil if at fault
-	used    []bool
-	channel map[string]string // name -> unit
-	names   []string          // of channels
+	busAt    map[string]int
+	badBus   map[string]bool // there, but at fault
+	busNames []string
+	devAt    map[string]int
+	badDev   map[string]bool
+	built    []engine.Device // at the file's level of detail; nil if at fault
+	used     []bool
+	channel  map[string]string // name -> unit
+	names    []string          // of channels
 }
 
 // sections are the tables of a case file.
@@ -33,7 +34,7 @@ func (l *loader) load() {
 	d := l.doc
 	for _, k := range d.keysOf(nil, d.root) {
 		if !contains(sections, k) {
-			d.fault([]string{k}, "unknown; %s", suggest(k, sections))
+			d.fault([]string{k}, "unknown; %s", d.suggest(k, sections))
 		}
 	}
 	l.study()
@@ -144,6 +145,7 @@ func (l *loader) buses() {
 		l.doc.faults = append(l.doc.faults, &Fault{File: l.doc.file, Text: "no buses; want tables such as [bus.quay]"})
 	}
 	l.used = make([]bool, len(l.c.buses))
+	l.busNames = l.c.BusNames()
 }
 
 // devices
@@ -260,10 +262,14 @@ func (l *loader) terminals(s *deviceSpec, p []string, t map[string]any) bool {
 		}
 		b, ok := l.busAt[name]
 		if !ok {
-			d.fault(key, "no bus of that name; %s", suggest(name, l.c.BusNames()))
-			if meant, ok := nearest(name, l.c.BusNames()); ok {
-				l.used[l.busAt[meant]] = true
+			near := ""
+			if !d.full() {
+				near, _ = nearest(name, l.busNames)
 			}
+			if near != "" {
+				l.used[l.busAt[near]] = true // it is what was meant
+			}
+			d.fault(key, "no bus of that name; %s", hint(near, l.busNames))
 			s.at = append(s.at, -1)
 			good = false
 			continue
@@ -441,7 +447,12 @@ func (l *loader) detail() {
 // record checks the patterns of channels.
 func (l *loader) record() {
 	key := []string{"study", "record"}
+	const patience = 200000 // comparisons that come to nothing, before the rest is left unchecked
+	spent := 0
 	for _, p := range l.c.Record {
+		if spent > patience {
+			break // there are faults already
+		}
 		found := false
 		var err error
 		for _, name := range l.names {
@@ -449,7 +460,14 @@ func (l *loader) record() {
 			if ok, err = path.Match(p, name); err != nil {
 				break
 			}
-			found = found || ok
+			if ok {
+				found = true
+				break
+			}
+			spent++
+		}
+		if found {
+			spent = 0
 		}
 		switch {
 		case err != nil:
@@ -472,6 +490,9 @@ func (l *loader) complete() bool {
 
 // suggestChannel ends a message about an unknown channel.
 func (l *loader) suggestChannel(name string) string {
+	if l.doc.full() {
+		return "see the faults before"
+	}
 	owner, quantity, _ := strings.Cut(name, ".")
 	owners := append(l.c.BusNames(), l.c.DeviceNames()...)
 	if !contains(owners, owner) {

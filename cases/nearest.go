@@ -37,12 +37,13 @@ func distance(a, b string) int {
 
 // nearest finds the known name closest to one, if any is close: within a third
 // of its length, or two, and not all of it. A name that begins another counts as
-// close.
+// close. Of very many names only the first are looked at.
 func nearest(name string, known []string) (string, bool) {
 	best, at := "", max(2, len(name)/3)+1
 	if len(name) > MaxName {
 		return "", false
 	}
+	known = known[:min(len(known), mostCompared)]
 	for _, k := range known {
 		if d := distance(name, k); d < at && d < max(len(name), len(k)) {
 			best, at = k, d
@@ -58,10 +59,19 @@ func nearest(name string, known []string) (string, bool) {
 	return best, best != ""
 }
 
+// mostCompared bounds the work of looking for a near name.
+const mostCompared = 1000
+
 // suggest ends a message about an unknown name.
 func suggest(name string, known []string) string {
-	if k, ok := nearest(name, known); ok {
-		return fmt.Sprintf("did you mean %s?", k)
+	k, _ := nearest(name, known)
+	return hint(k, known)
+}
+
+// hint is suggest for what nearest has found, "" for nothing.
+func hint(near string, known []string) string {
+	if near != "" {
+		return fmt.Sprintf("did you mean %s?", near)
 	}
 	if len(known) == 0 {
 		return "there are none"

@@ -181,7 +181,7 @@ func read[T any](d *document, path []string, table map[string]any, fields []fiel
 		}
 		f := byName[name]
 		if f == nil {
-			v.fault(name, "unknown key of %s; %s", what, suggest(name, names))
+			v.fault(name, "unknown key of %s; %s", what, d.suggest(name, names))
 			continue
 		}
 		v.tried[name] = true
