@@ -147,6 +147,7 @@ func Start(s *System, o *Options) (*Simulation, error) {
 	if err != nil {
 		return nil, err
 	}
+	net.Reanalyse()
 	if m.step, err = m.opt.Method.NewStepper(net, m.opt.Solver); err != nil {
 		return nil, err
 	}

@@ -4,6 +4,7 @@ import (
 	"errors"
 	"fmt"
 	"math"
+	"slices"
 )
 
 // BorderedMatrix is a block-diagonal matrix with a border, given as local
@@ -57,6 +58,9 @@ type BorderedLU struct {
 	prog   []*elimination
 	class  []*elimination // the program of the pattern, before any change of pivots
 	at     []int          // block -> first value in lu
+	stride []int          // block -> distance of its values in lu: 1, or lanes
+	groups []laneGroup    // blocks of one pattern, eliminated together
+	single []int          // the other blocks
 	lu     []float64
 	border *CSC
 	diagAt []int   // border row -> slot in border.X
@@ -71,6 +75,14 @@ type BorderedLU struct {
 	stats    BorderedStats
 	normCols []float64
 	est      []float64 // workspace of the condition estimate
+}
+
+// laneGroup is a group of blocks of one pattern whose values are interleaved.
+type laneGroup struct {
+	prog   *elimination
+	blocks [lanes]int
+	own    [lanes]int // each block's first own unknown
+	at     int        // first value in lu
 }
 
 // BorderedStats counts what a BorderedLU did.
@@ -130,14 +142,10 @@ func NewBorderedLU(m *BorderedMatrix) (*BorderedLU, error) {
 	}
 	f.n += m.Border
 	f.prog = append([]*elimination(nil), f.class...)
-	for k := range m.Blocks {
-		f.at = append(f.at, total)
-		if f.prog[k] != nil {
-			total += f.prog[k].slots
-		}
-	}
+	f.at, f.stride = make([]int, len(m.Blocks)), make([]int, len(m.Blocks))
+	total = f.group()
 	f.lu = make([]float64, total)
-	f.c, f.x = make([]float64, widest), make([]float64, widest)
+	f.c, f.x = make([]float64, lanes*widest), make([]float64, lanes*widest)
 	if m.Border > 0 {
 		var slot []int
 		f.border, slot = NewCSC(m.Border, m.Border, entries)
@@ -159,6 +167,47 @@ func NewBorderedLU(m *BorderedMatrix) (*BorderedLU, error) {
 		f.stats.BorderNonzeros = len(f.border.X)
 	}
 	return f, nil
+}
+
+// group puts blocks of one program together by fours, in their order, and gives
+// every block its place in lu. It returns the length of lu.
+func (f *BorderedLU) group() (total int) {
+	open := make(map[*elimination][]int)
+	for k, e := range f.prog {
+		if e == nil || e.own == 0 {
+			f.single = append(f.single, k)
+			continue
+		}
+		open[e] = append(open[e], k)
+		if g := open[e]; len(g) == lanes {
+			f.groups = append(f.groups, laneGroup{prog: e, blocks: [lanes]int(g)})
+			open[e] = nil
+		}
+	}
+	for k, e := range f.prog {
+		for _, o := range open[e] {
+			if o == k && e != nil {
+				f.single = append(f.single, k)
+			}
+		}
+	}
+	slices.Sort(f.single)
+	for i := range f.groups {
+		g := &f.groups[i]
+		g.at = total
+		for l, k := range g.blocks {
+			f.at[k], f.stride[k] = total+l, lanes
+			g.own[l] = f.ownAt[k]
+		}
+		total += lanes * g.prog.slots
+	}
+	for _, k := range f.single {
+		f.at[k], f.stride[k] = total, 1
+		if f.prog[k] != nil {
+			total += f.prog[k].slots
+		}
+	}
+	return total
 }
 
 func (m *BorderedMatrix) check() error {
@@ -231,40 +280,57 @@ func (f *BorderedLU) shifted(b *BorderedBlock) []float64 {
 	return v
 }
 
-// load writes block k's local matrix into its slots.
-func (f *BorderedLU) load(k int) []float64 {
+// load writes block k's local matrix into its slots, which hold zeros.
+func (f *BorderedLU) load(k int) {
 	b, p := &f.m.Blocks[k], f.prog[k]
-	v := f.lu[f.at[k]:][:p.slots]
-	for i := range v {
-		v[i] = 0
-	}
+	v, stride := f.lu[f.at[k]:], f.stride[k]
 	values := b.Values[:len(p.at)]
 	for i, s := range p.at {
-		v[s] += values[i]
+		v[int(s)*stride] += values[i]
 	}
 	if b.Mass != nil {
 		shift := f.m.Shift
 		mass := b.Mass[:len(p.diag)]
 		for i, s := range p.diag {
-			v[s] += shift * mass[i]
+			v[int(s)*stride] += shift * mass[i]
 		}
 	}
-	return v
 }
 
 // Factor implements [LinearSolver].
 func (f *BorderedLU) Factor() error {
 	f.stats.Factorizations++
 	f.usesGen = false
-	for k := range f.m.Blocks {
-		if f.m.Blocks[k].Own == 0 && f.prog[k] != nil {
+	clear(f.lu)
+	dissolve := -1
+	for i := range f.groups {
+		g := &f.groups[i]
+		for _, k := range g.blocks {
 			f.load(k)
-			continue
 		}
-		if f.prog[k] == nil || f.prog[k].factor(f.load(k)) >= 0 {
+		if !g.prog.factorLanes(f.lu[g.at:][:lanes*g.prog.slots]) {
+			dissolve = i
+			break
+		}
+	}
+	if dissolve >= 0 {
+		// Some block needs pivots of its own: its group goes on one by one.
+		f.dissolve(dissolve)
+		return f.Factor()
+	}
+	for _, k := range f.single {
+		if f.prog[k] == nil {
 			if !f.repivot(k) {
 				return f.factorGeneral()
 			}
+			continue
+		}
+		f.load(k)
+		if f.m.Blocks[k].Own == 0 {
+			continue
+		}
+		if f.prog[k].factor(f.lu[f.at[k]:][:f.prog[k].slots]) >= 0 && !f.repivot(k) {
+			return f.factorGeneral()
 		}
 	}
 	if f.m.Border == 0 {
@@ -288,16 +354,16 @@ func (f *BorderedLU) Factor() error {
 	}
 	for k := range f.m.Blocks {
 		b, p := &f.m.Blocks[k], f.prog[k]
-		v := f.lu[f.at[k]:][:p.slots]
-		np := b.Ports
-		s := v[p.slots-np*np:]
+		np, stride := b.Ports, f.stride[k]
+		s := f.lu[f.at[k]+(p.slots-np*np)*stride:]
 		slots := f.slots[k]
 		for _, r := range b.Rows {
-			row := s[r.Port*np:][:np]
+			at := r.Port * np * stride
 			to := slots[:np]
 			slots = slots[np:]
-			for j, w := range row {
-				x[to[j]] += r.Weight * w
+			for _, t := range to {
+				x[t] += r.Weight * s[at]
+				at += stride
 			}
 		}
 	}
@@ -311,6 +377,24 @@ func (f *BorderedLU) Factor() error {
 	return nil
 }
 
+// dissolve takes a group apart; its blocks get places of their own.
+func (f *BorderedLU) dissolve(i int) {
+	g := f.groups[i]
+	f.groups = slices.Delete(f.groups, i, i+1)
+	for _, k := range g.blocks {
+		f.place(k)
+		f.single = append(f.single, k)
+	}
+	slices.Sort(f.single)
+}
+
+// place gives block k a new place at the end of lu; the old one stays unused
+// until the next analysis.
+func (f *BorderedLU) place(k int) {
+	f.at[k], f.stride[k] = len(f.lu), 1
+	f.lu = append(f.lu, make([]float64, f.prog[k].slots)...)
+}
+
 // repivot makes a program of its own for block k's present values.
 func (f *BorderedLU) repivot(k int) bool {
 	b := &f.m.Blocks[k]
@@ -319,14 +403,15 @@ func (f *BorderedLU) repivot(k int) bool {
 		return false
 	}
 	f.stats.Repivoted++
-	if f.prog[k] == nil || e.slots > f.prog[k].slots {
-		// A new place at the end; the old one stays unused until the next
-		// analysis.
-		f.at[k] = len(f.lu)
-		f.lu = append(f.lu, make([]float64, e.slots)...)
-	}
+	before := f.prog[k]
 	f.prog[k] = e
-	return e.factor(f.load(k)) < 0
+	if before == nil || e.slots > before.slots {
+		f.place(k)
+	}
+	v := f.lu[f.at[k]:][:e.slots]
+	clear(v)
+	f.load(k)
+	return e.factor(v) < 0
 }
 
 // factorGeneral factors the whole matrix.
@@ -405,9 +490,23 @@ func (f *BorderedLU) Solve(b []float64) {
 		f.general.Solve(b)
 		return
 	}
-	base := f.n - f.m.Border
-	border := b[base:]
-	for k := range f.m.Blocks {
+	border := b[f.n-f.m.Border:]
+	for i := range f.groups {
+		g := &f.groups[i]
+		no, np := g.prog.own, g.prog.ports
+		c := f.c[:(no+np)*lanes]
+		b0, b1, b2, b3 := b[g.own[0]:], b[g.own[1]:], b[g.own[2]:], b[g.own[3]:]
+		interleave(c, no, b0, b1, b2, b3)
+		clear(c[no*lanes:])
+		g.prog.forwardLanes(f.lu[g.at:][:lanes*g.prog.slots], c)
+		separate(b0, b1, b2, b3, no, c)
+		for l, k := range g.blocks {
+			for _, r := range f.m.Blocks[k].Rows {
+				border[r.Row] += r.Weight * c[(no+r.Port)*lanes+l]
+			}
+		}
+	}
+	for _, k := range f.single {
 		blk := &f.m.Blocks[k]
 		no := blk.Own
 		if no == 0 {
@@ -418,9 +517,7 @@ func (f *BorderedLU) Solve(b []float64) {
 		own := b[f.ownAt[k]:][:no]
 		copy(c, own)
 		ports := c[no:]
-		for i := range ports {
-			ports[i] = 0
-		}
+		clear(ports)
 		p.forward(f.lu[f.at[k]:][:p.slots], c)
 		copy(own, c)
 		for _, r := range blk.Rows {
@@ -430,7 +527,21 @@ func (f *BorderedLU) Solve(b []float64) {
 	if f.m.Border > 0 {
 		f.blu.Solve(border)
 	}
-	for k := range f.m.Blocks {
+	for i := range f.groups {
+		g := &f.groups[i]
+		no, np := g.prog.own, g.prog.ports
+		c, x := f.c[:no*lanes], f.x[:(no+np)*lanes]
+		b0, b1, b2, b3 := b[g.own[0]:], b[g.own[1]:], b[g.own[2]:], b[g.own[3]:]
+		interleave(c, no, b0, b1, b2, b3)
+		for l, k := range g.blocks {
+			for j, col := range f.m.Blocks[k].At {
+				x[(no+j)*lanes+l] = border[col]
+			}
+		}
+		g.prog.backwardLanes(f.lu[g.at:][:lanes*g.prog.slots], c, x)
+		separate(b0, b1, b2, b3, no, x)
+	}
+	for _, k := range f.single {
 		blk := &f.m.Blocks[k]
 		no := blk.Own
 		if no == 0 {
@@ -462,7 +573,7 @@ func (f *BorderedLU) SolveTranspose(b []float64) {
 		blk := &f.m.Blocks[k]
 		no := blk.Own
 		p := f.prog[k]
-		v := f.lu[f.at[k]:]
+		v, stride := f.lu[f.at[k]:], f.stride[k]
 		c, x := f.c[:no+blk.Ports], f.x[:no]
 		copy(c, b[f.ownAt[k]:][:no])
 		for i := range blk.Ports {
@@ -471,11 +582,11 @@ func (f *BorderedLU) SolveTranspose(b []float64) {
 		// U' x = c, by columns of the own part; the ports receive the rest.
 		for s := range p.steps {
 			st := &p.steps[s]
-			z := c[st.col] * v[st.pivot]
+			z := c[st.col] * v[int(st.pivot)*stride]
 			x[st.row] = z
 			nu := int(st.nu)
-			for j, w := range v[int(st.pivot)+1:][:nu] {
-				c[p.index[int(st.idx)+j]] -= w * z
+			for j := range nu {
+				c[p.index[int(st.idx)+j]] -= v[(int(st.pivot)+1+j)*stride] * z
 			}
 		}
 		copy(b[f.ownAt[k]:][:no], x)
@@ -490,7 +601,7 @@ func (f *BorderedLU) SolveTranspose(b []float64) {
 		blk := &f.m.Blocks[k]
 		no := blk.Own
 		p := f.prog[k]
-		v := f.lu[f.at[k]:]
+		v, stride := f.lu[f.at[k]:], f.stride[k]
 		x := f.x[:no+blk.Ports]
 		copy(x, b[f.ownAt[k]:][:no])
 		for i := range blk.Ports {
@@ -504,8 +615,8 @@ func (f *BorderedLU) SolveTranspose(b []float64) {
 			st := &p.steps[s]
 			nu, nl := int(st.nu), int(st.nl)
 			z := x[st.row]
-			for i, w := range v[int(st.pivot)+1+nu:][:nl] {
-				z -= w * x[p.index[int(st.idx)+nu+i]]
+			for i := range nl {
+				z -= v[(int(st.pivot)+1+nu+i)*stride] * x[p.index[int(st.idx)+nu+i]]
 			}
 			x[st.row] = z
 		}

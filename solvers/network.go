@@ -327,6 +327,11 @@ func (n *Network) Configure(c Configuration) error {
 	return nil
 }
 
+// Reanalyse forgets the pivots chosen so far; the next factorisation chooses
+// anew. Worth a call after factorisations with a very different alpha (an
+// operating point's zero), whose pivots may be poor ones for stepping.
+func (n *Network) Reanalyse() { n.lu = nil }
+
 // Dim implements [System].
 func (n *Network) Dim() int { return n.nOwn + n.nodes }
 
