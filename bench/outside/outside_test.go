@@ -7,6 +7,7 @@ import (
 	"math/cmplx"
 	"os"
 	"path/filepath"
+	"sort"
 	"strconv"
 	"strings"
 	"testing"
@@ -225,13 +226,11 @@ func column(t *testing.T, tr *engine.Trace, channel string, from float64) []floa
 	if c == nil {
 		t.Fatalf("no channel %s recorded", channel)
 	}
-	for k, at := range tr.Time {
-		if at >= from {
-			return c[k:]
-		}
+	k := sort.SearchFloat64s(tr.Time, from)
+	if k == len(tr.Time) {
+		t.Fatalf("nothing recorded from %g s on", from)
 	}
-	t.Fatalf("nothing recorded from %g s on", from)
-	return nil
+	return c[k:]
 }
 
 // ---------------------------------------------------------------------------
@@ -286,28 +285,45 @@ func pairOf(t *testing.T, x []float64, spacing float64) complex128 {
 	return s[0]
 }
 
-// peak returns the first maximum of samples at t0 + k spacing, and its time:
-// that of the parabola through the three samples around it.
-func peak(x []float64, t0, spacing float64) (at, value float64) {
-	for k := 1; k+1 < len(x); k++ {
-		if x[k] >= x[k-1] && x[k] > x[k+1] {
-			curve := x[k+1] - 2*x[k] + x[k-1]
-			slope := (x[k+1] - x[k-1]) / 2
-			d := -slope / curve
-			return t0 + (float64(k)+d)*spacing, x[k] + slope*d/2
+// peak returns the first maximum of sign times a recorded channel after time from,
+// and its time: that of the polynomial of degree four through the samples around it.
+func peak(t *testing.T, tr *engine.Trace, channel string, sign, from float64) (at, value float64) {
+	t.Helper()
+	x := column(t, tr, channel, math.Nextafter(from, math.Inf(1)))
+	times := tr.Time[len(tr.Time)-len(x):]
+	for k := 2; k+2 < len(x); k++ {
+		if sign*x[k] < sign*x[k-1] || sign*x[k] <= sign*x[k+1] {
+			continue
 		}
+		// Newton's divided differences, times relative to the middle sample and
+		// in spacings.
+		h := times[k+1] - times[k]
+		var s, c [5]float64
+		for j := range c {
+			s[j], c[j] = (times[k-2+j]-times[k])/h, sign*x[k-2+j]
+		}
+		for d := 1; d < 5; d++ {
+			for j := 4; j >= d; j-- {
+				c[j] = (c[j] - c[j-1]) / (s[j] - s[j-d])
+			}
+		}
+		eval := func(u float64) (p, dp, ddp float64) {
+			for j := 4; j >= 0; j-- {
+				p, dp, ddp = c[j]+(u-s[j])*p, p+(u-s[j])*dp, 2*dp+(u-s[j])*ddp
+			}
+			return p, dp, ddp
+		}
+		u := 0.0
+		for range 20 {
+			_, dp, ddp := eval(u)
+			u -= dp / ddp
+		}
+		p, _, _ := eval(u)
+		return times[k] + u*h, p
 	}
-	return math.NaN(), math.NaN()
+	t.Fatalf("%s has no maximum after %g s", channel, from)
+	return 0, 0
 }
 
 // turn is e^{j angle}.
 func turn(angle float64) complex128 { return cmplx.Rect(1, angle) }
-
-// negated returns -x.
-func negated(x []float64) []float64 {
-	y := make([]float64, len(x))
-	for k := range x {
-		y[k] = -x[k]
-	}
-	return y
-}
