@@ -3,6 +3,7 @@ package solvers
 import (
 	"errors"
 	"math"
+	"slices"
 )
 
 // rosenbrockTable holds the coefficients of a Rosenbrock-Wanner method. With
@@ -53,7 +54,20 @@ func (m *rosenbrockTable) NewStepper(s System, o Options) (Stepper, error) {
 		r.k = append(r.k, vec())
 	}
 	r.midValue, r.midSlope = m.middle()
+	r.adds = m.increments()
 	return r, nil
+}
+
+// increments tells of each stage whether its argument is that of the stage
+// before plus that stage's increment, as in the last stages of stiffly accurate
+// methods.
+func (m *rosenbrockTable) increments() []bool {
+	adds := make([]bool, len(m.a))
+	for i := 2; i < len(m.a); i++ {
+		row, before := m.a[i], m.a[i-1]
+		adds[i] = slices.Equal(row[:i-1], before) && row[i-1] == 1
+	}
+	return adds
 }
 
 // middle returns the weights of the stages in the dense output at mid-step,
@@ -92,6 +106,7 @@ type rosenbrock struct {
 	haveFt    bool
 	midValue  []float64 // weights of the stages at mid-step
 	midSlope  []float64
+	adds      []bool // see increments
 	haveDense bool
 	started   bool // Reset has been called
 	moved     bool // a step has been taken since Reset
@@ -415,12 +430,22 @@ func (r *rosenbrock) attempt(h float64) error {
 		if i == 0 {
 			copy(u, r.f0)
 		} else {
-			combine(r.trial, r.y, tab.a[i], r.u)
+			switch {
+			case r.adds[i]:
+				// The argument of the stage before, which trial still holds,
+				// plus its increment.
+				combine(r.acc, nil, tab.cc[i], r.u)
+				before := r.u[i-1][:len(u)]
+				for k, v := range before {
+					r.trial[k] += v
+				}
+			default:
+				combineTwo(r.trial, r.acc, r.y, tab.a[i], tab.cc[i], r.u)
+			}
 			r.stats.Evals++
 			if err := r.sys.Eval(u, r.t+tab.c[i]*h, r.trial); err != nil {
 				return err
 			}
-			combine(r.acc, nil, tab.cc[i], r.u)
 			r.sys.AddMass(u, hInv, r.acc)
 			for _, k := range r.hidden {
 				u[k] = 0
@@ -442,6 +467,53 @@ func (r *rosenbrock) attempt(h float64) error {
 		trial[k] += v // the argument of the last stage plus u_s
 	}
 	return nil
+}
+
+// combineTwo writes y + sum_j a[j] u[j] into dst and sum_j c[j] u[j] into acc,
+// reading every u once.
+func combineTwo(dst, acc, y, a, c []float64, u [][]float64) {
+	n := len(dst)
+	acc, y = acc[:n], y[:n]
+	switch len(a) {
+	case 1:
+		a0, c0, u0 := a[0], c[0], u[0][:n]
+		for i, x := range u0 {
+			dst[i], acc[i] = y[i]+a0*x, c0*x
+		}
+		return
+	case 2:
+		a0, c0, u0 := a[0], c[0], u[0][:n]
+		a1, c1, u1 := a[1], c[1], u[1][:n]
+		for i, x := range u0 {
+			x1 := u1[i]
+			dst[i], acc[i] = y[i]+a0*x+a1*x1, c0*x+c1*x1
+		}
+		return
+	}
+	a0, c0, u0 := a[0], c[0], u[0][:n]
+	a1, c1, u1 := a[1], c[1], u[1][:n]
+	a2, c2, u2 := a[2], c[2], u[2][:n]
+	for i, x := range u0 {
+		x1, x2 := u1[i], u2[i]
+		dst[i], acc[i] = y[i]+a0*x+a1*x1+a2*x2, c0*x+c1*x1+c2*x2
+	}
+	j := 3
+	for ; j+2 <= len(a); j += 2 {
+		a0, c0, u0 := a[j], c[j], u[j][:n]
+		a1, c1, u1 := a[j+1], c[j+1], u[j+1][:n]
+		for i, x := range u0 {
+			x1 := u1[i]
+			dst[i] += a0*x + a1*x1
+			acc[i] += c0*x + c1*x1
+		}
+	}
+	if j < len(a) {
+		a0, c0, u0 := a[j], c[j], u[j][:n]
+		for i, x := range u0 {
+			dst[i] += a0 * x
+			acc[i] += c0 * x
+		}
+	}
 }
 
 // combine writes y + sum_j c[j] u[j] into dst; y may be nil for zero. The sum
