@@ -99,5 +99,5 @@ func initialise(s algebraic, t float64, y []float64, work [][]float64) error {
 		copy(y, trial)
 	}
 	size, worst := s.Norm(d, y, y, unit)
-	return fail(worst, size, errors.New("Newton's method did not converge"))
+	return fail(worst, size, errors.New("no convergence of newton's method"))
 }

@@ -12,7 +12,6 @@ import (
 type Network struct {
 	width  int
 	nodes  int // components
-	scale  []float64
 	blocks []netBlock
 	nOwn   int
 	nodeSc []float64

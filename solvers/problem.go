@@ -119,7 +119,6 @@ type flatSystem struct {
 	scale   []float64
 	abs     []bool
 	nulls   []nullSpace
-	fast    float64
 	work    [6][]float64
 	central [3][]float64
 }
