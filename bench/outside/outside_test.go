@@ -257,9 +257,20 @@ func modes(t *testing.T, x []float64, spacing float64, n int) []complex128 {
 	if err := c.SolveVec(a, b); err != nil {
 		t.Fatal(err)
 	}
+	s := roots(t, c.RawVector().Data)
+	for k := range s {
+		s[k] = cmplx.Log(s[k]) / complex(spacing, 0)
+	}
+	return s
+}
+
+// roots returns the roots of x^n = sum of c[j] x^j, j < n = len(c).
+func roots(t *testing.T, c []float64) []complex128 {
+	t.Helper()
+	n := len(c)
 	companion := mat.NewDense(n, n, nil)
 	for j := range n {
-		companion.Set(n-1, j, c.AtVec(j))
+		companion.Set(n-1, j, c[j])
 		if j > 0 {
 			companion.Set(j-1, j, 1)
 		}
@@ -268,11 +279,7 @@ func modes(t *testing.T, x []float64, spacing float64, n int) []complex128 {
 	if !eig.Factorize(companion, mat.EigenNone) {
 		t.Fatal("no eigenvalues")
 	}
-	s := eig.Values(nil)
-	for k := range s {
-		s[k] = cmplx.Log(s[k]) / complex(spacing, 0)
-	}
-	return s
+	return eig.Values(nil)
 }
 
 // pairOf returns the exponent of a fitted pair that has a positive imaginary part.
