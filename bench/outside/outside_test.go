@@ -52,6 +52,15 @@ func (c *checker) want(name string, got, want, tol float64) {
 	}
 }
 
+// agree is want for a check of the reference itself, in which the engine has no part:
+// a table against the closed form it stands for. It doesn't count.
+func (c *checker) agree(name string, got, want, tol float64) {
+	c.t.Helper()
+	if !(math.Abs(got-want) <= tol) {
+		c.t.Errorf("the reference disagrees with itself: %s is %.12g, want %.12g within %.3g", name, got, want, tol)
+	}
+}
+
 // wantZ is want for both parts of a complex value.
 func (c *checker) wantZ(name string, got, want complex128, tol float64) {
 	c.t.Helper()

@@ -38,9 +38,9 @@ func TestSeriesRLC(t *testing.T) {
 			r := n.start(engine.Options{Solver: tight, FromRest: true, Sample: 1e-5, Record: []string{"b.v_a", "line.from.i_a"}})
 			for _, p := range c.points {
 				r.until(p.ms / 1e3)
-				check.want(fmt.Sprintf("v at %g ms", p.ms), r.value("b.v_a"), p.v, 5e-8*10)
+				check.want(fmt.Sprintf("v at %g ms", p.ms), r.value("b.v_a"), p.v, 1e-9*170)
 				if p.i == p.i {
-					check.want(fmt.Sprintf("i at %g ms", p.ms), r.value("line.from.i_a"), p.i, 1e-8*10)
+					check.want(fmt.Sprintf("i at %g ms", p.ms), r.value("line.from.i_a"), p.i, 1e-9*17)
 				}
 			}
 			if c.r != 2 {

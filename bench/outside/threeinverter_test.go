@@ -356,7 +356,7 @@ func TestPublishedReducedLoadStep(t *testing.T) {
 			want, unit := tb.number(row, name)
 			got := r.published(name)
 			where := fmt.Sprintf("%s at %g ms", name, 1e3*at)
-			check.want(where+", equations", running[k], want, unit)
+			check.agree(where+", equations", running[k], want, unit)
 			size := 4400.0
 			if k < 2 {
 				size = 0.012
