@@ -47,7 +47,6 @@ type call struct {
 	asCSV    bool
 	settings list
 	repeat   int
-	plots    bool
 }
 
 // list is a flag that may be given several times.

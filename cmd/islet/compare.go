@@ -3,14 +3,13 @@ package main
 import (
 	"context"
 	"fmt"
-	"os"
-	"path/filepath"
 	"sort"
 	"strings"
 
 	"islet/cases"
 	"islet/engine"
 	"islet/engine/compare"
+	"islet/engine/output"
 )
 
 func compareFlags(c *call) {
@@ -18,7 +17,8 @@ func compareFlags(c *call) {
 	c.fs.Var(&c.settings, "setting", "`NAME: PATTERN=LEVEL, ...`: a setting to compare, applied after --detail; may be repeated (default: every level that the devices offer, each on all devices that offer it, with the network as given and quasi-steady)")
 	c.fs.Var(&c.record, "record", "`PATTERN`: channels to compare; may be repeated")
 	c.fs.IntVar(&c.repeat, "repeat", 5, "timed runs of each setting, taken in turns; the median counts")
-	c.fs.StringVar(&c.out, "out", "", "write table (text), deviations (CSV) and results (JSON) into `DIR`")
+	c.fs.StringVar(&c.out, "out", "", "write table (text), deviations (CSV), results (JSON) and overlay plots into `DIR`")
+	c.fs.BoolVar(&c.noPlots, "no-plots", false, "with --out: leave the plots out")
 	c.fs.BoolVar(&c.quiet, "quiet", false, "no progress")
 	c.fs.BoolVar(&c.asJSON, "json", false, "print JSON instead of text")
 	c.fs.BoolVar(&c.asCSV, "csv", false, "print CSV instead of text")
@@ -86,7 +86,14 @@ func cmdCompare(ctx context.Context, c *call) error {
 	if err != nil || c.out == "" {
 		return err
 	}
-	return writeComparison(c, result)
+	files, err := output.WriteComparison(c.out, result, !c.noPlots)
+	if err != nil {
+		return err
+	}
+	if !c.asJSON && !c.asCSV {
+		fmt.Fprintf(c.stdout, "written to %s: %s\n", c.out, strings.Join(files, ", "))
+	}
+	return nil
 }
 
 type levelSetting struct {
@@ -137,34 +144,4 @@ func everyLevel(k *cases.Case) []levelSetting {
 		}
 	}
 	return out
-}
-
-func writeComparison(c *call, result *compare.Comparison) error {
-	if err := os.MkdirAll(c.out, 0o777); err != nil {
-		return err
-	}
-	for _, f := range []struct {
-		name  string
-		write func(f *os.File) error
-	}{
-		{"comparison.txt", func(f *os.File) error { return result.WriteText(f) }},
-		{"comparison.csv", func(f *os.File) error { return result.WriteCSV(f) }},
-		{"comparison.json", func(f *os.File) error { return result.WriteJSON(f) }},
-	} {
-		file, err := os.Create(filepath.Join(c.out, f.name))
-		if err != nil {
-			return err
-		}
-		if err := f.write(file); err != nil {
-			file.Close()
-			return err
-		}
-		if err := file.Close(); err != nil {
-			return err
-		}
-	}
-	if !c.asJSON && !c.asCSV {
-		fmt.Fprintf(c.stdout, "written to %s: comparison.txt, comparison.csv, comparison.json\n", c.out)
-	}
-	return nil
 }

@@ -41,11 +41,12 @@ type panel struct {
 	caption    string
 	marks      []mark
 	lowerLimit float64 // smallest height of the y range
+	cut        bool    // the y range leaves out the first 5 ms after events
 }
 
 type curve struct {
 	name string
-	t, y []float64
+	t, y []float64 // y is NaN where there is nothing to show
 	dash bool
 }
 
@@ -97,6 +98,9 @@ func Plots(sim *engine.Simulation) []*Picture {
 		y := make([]float64, len(x))
 		for i, v := range x {
 			y[i] = v * scale
+			if v == 0 && (k == 0 || k == 4) {
+				y[i] = math.NaN() // a dead bus
+			}
 		}
 		sets[k].curves = append(sets[k].curves, curve{name: name, t: tr.Time, y: y})
 	}
@@ -143,6 +147,7 @@ func Plots(sim *engine.Simulation) []*Picture {
 		}
 		p := &Picture{Name: s.name, notes: notes, width: 26 * vg.Centimeter}
 		main := makePanel(s.title, s.y, s.curves, tr.Time[0], tr.Time[tr.Rows()-1], events, s.least)
+		main.cut = true
 		p.panels = append(p.panels, main)
 		if t0, ok := busiest(s.curves, events); ok {
 			zoom := makePanel(fmt.Sprintf("%s, 100 ms around %.4g s", s.title, t0), s.y, s.curves, math.Max(tr.Time[0], t0-0.01), math.Min(t0+0.09, tr.Time[tr.Rows()-1]), events, s.least)
@@ -249,7 +254,7 @@ func busiest(curves []curve, events []mark) (t0 float64, ok bool) {
 		for _, c := range curves {
 			lo, hi := math.Inf(1), math.Inf(-1)
 			for k, t := range c.t {
-				if t >= e.t-0.005 && t <= e.t+0.05 {
+				if t >= e.t-0.005 && t <= e.t+0.05 && c.y[k] == c.y[k] {
 					lo, hi = math.Min(lo, c.y[k]), math.Max(hi, c.y[k])
 				}
 			}
@@ -276,7 +281,7 @@ func makePanel(title, y string, curves []curve, from, to float64, marks []mark, 
 	for i, c := range curves {
 		lo, hi := math.Inf(1), math.Inf(-1)
 		for k, t := range c.t {
-			if t >= from && t <= to {
+			if t >= from && t <= to && c.y[k] == c.y[k] {
 				lo, hi = math.Min(lo, c.y[k]), math.Max(hi, c.y[k])
 			}
 		}
@@ -306,9 +311,11 @@ func (p *Picture) layout() {
 	p.height = vg.Length(len(p.panels))*9*vg.Centimeter + vg.Length(len(p.notes))*0.45*vg.Centimeter + 0.3*vg.Centimeter
 }
 
-// thin keeps, for every one of n columns between from and to, the first, the
-// lowest, the highest and the last point, so that nothing that shows is lost.
-func thin(t, y []float64, from, to float64, n int) plotter.XYs {
+// thin returns the stretches of a curve between from and to without its gaps,
+// and keeps, for every one of n columns, the first, the lowest, the highest and
+// the last point, so that nothing that shows is lost.
+func thin(t, y []float64, from, to float64, n int) []plotter.XYs {
+	var all []plotter.XYs
 	var out plotter.XYs
 	column := -1
 	var pts []plotter.XY
@@ -333,8 +340,19 @@ func thin(t, y []float64, from, to float64, n int) plotter.XYs {
 		}
 		pts = pts[:0]
 	}
+	end := func() {
+		flush()
+		if len(out) > 0 {
+			all = append(all, out)
+		}
+		out = nil
+	}
 	for k, x := range t {
-		if x < from || x > to || math.IsNaN(y[k]) || math.IsInf(y[k], 0) {
+		if x < from || x > to {
+			continue
+		}
+		if math.IsNaN(y[k]) || math.IsInf(y[k], 0) {
+			end()
 			continue
 		}
 		c := int(float64(n) * (x - from) / (to - from))
@@ -344,8 +362,48 @@ func thin(t, y []float64, from, to float64, n int) plotter.XYs {
 		}
 		pts = append(pts, plotter.XY{X: x, Y: y[k]})
 	}
-	flush()
-	return out
+	end()
+	return all
+}
+
+// spike reports whether a time is so close behind an event that a switching
+// spike would hide everything else. A zoom shows all.
+func (p *panel) spike(t float64) bool {
+	if !p.cut {
+		return false
+	}
+	for _, m := range p.marks {
+		if t >= m.t && t < m.t+0.005 {
+			return true
+		}
+	}
+	return false
+}
+
+// ticks labels the default ticks with as many figures as tell them apart.
+type ticks struct{}
+
+func (ticks) Ticks(lo, hi float64) []plot.Tick {
+	marks := plot.DefaultTicks{}.Ticks(lo, hi)
+	exact := func(decimals int) bool {
+		scale := math.Pow(10, float64(decimals))
+		for _, m := range marks {
+			if x := m.Value * scale; m.Label != "" && math.Abs(x-math.Round(x)) > 1e-6*scale*(hi-lo) {
+				return false
+			}
+		}
+		return true
+	}
+	decimals := 0
+	for decimals < 12 && !exact(decimals) {
+		decimals++
+	}
+	for i, m := range marks {
+		if m.Label != "" {
+			marks[i].Label = fmt.Sprintf("%.*f", decimals, m.Value)
+		}
+	}
+	return marks
 }
 
 func (p *panel) build() (*plot.Plot, error) {
@@ -358,24 +416,29 @@ func (p *panel) build() (*plot.Plot, error) {
 	}
 	pl.Y.Label.Text = p.y
 	pl.X.Min, pl.X.Max = p.from, p.to
+	pl.X.Tick.Marker, pl.Y.Tick.Marker = ticks{}, ticks{}
 	lo, hi := math.Inf(1), math.Inf(-1)
-	line := func(c curve, col color.Color, width vg.Length, columns int) (*plotter.Line, error) {
-		xy := thin(c.t, c.y, p.from, p.to, columns)
-		for _, q := range xy {
-			lo, hi = math.Min(lo, q.Y), math.Max(hi, q.Y)
+	low, high := lo, hi // of everything, spikes included
+	line := func(c curve, col color.Color, width vg.Length, columns int) ([]*plotter.Line, error) {
+		var lines []*plotter.Line
+		for _, xy := range thin(c.t, c.y, p.from, p.to, columns) {
+			for _, q := range xy {
+				low, high = math.Min(low, q.Y), math.Max(high, q.Y)
+				if !p.spike(q.X) {
+					lo, hi = math.Min(lo, q.Y), math.Max(hi, q.Y)
+				}
+			}
+			l, err := plotter.NewLine(xy)
+			if err != nil {
+				return nil, err
+			}
+			l.Color, l.Width = col, width
+			if c.dash {
+				l.Dashes = []vg.Length{vg.Points(5), vg.Points(3)}
+			}
+			lines = append(lines, l)
 		}
-		if len(xy) == 0 {
-			return nil, nil
-		}
-		l, err := plotter.NewLine(xy)
-		if err != nil {
-			return nil, err
-		}
-		l.Color, l.Width = col, width
-		if c.dash {
-			l.Dashes = []vg.Length{vg.Points(5), vg.Points(3)}
-		}
-		return l, nil
+		return lines, nil
 	}
 	grid := plotter.NewGrid()
 	grid.Horizontal.Color, grid.Vertical.Color = color.RGBA{235, 235, 235, 255}, color.RGBA{235, 235, 235, 255}
@@ -385,8 +448,8 @@ func (p *panel) build() (*plot.Plot, error) {
 		if err != nil {
 			return nil, err
 		}
-		if l != nil {
-			pl.Add(l)
+		for _, x := range l {
+			pl.Add(x)
 		}
 	}
 	for i, c := range p.curves {
@@ -394,10 +457,15 @@ func (p *panel) build() (*plot.Plot, error) {
 		if err != nil {
 			return nil, err
 		}
-		if l != nil {
-			pl.Add(l)
-			pl.Legend.Add(c.name, l)
+		for _, x := range l {
+			pl.Add(x)
 		}
+		if len(l) > 0 {
+			pl.Legend.Add(c.name, l[0])
+		}
+	}
+	if lo > hi {
+		lo, hi = low, high
 	}
 	if lo > hi {
 		lo, hi = 0, 1
@@ -411,6 +479,9 @@ func (p *panel) build() (*plot.Plot, error) {
 	}
 	pad := 0.06 * (hi - lo)
 	lo, hi = lo-pad, hi+1.6*pad
+	if low < lo || high > hi {
+		pl.X.Label.Text += fmt.Sprintf("    (spikes at the switching, %.4g to %.4g, cut off)", low, high)
+	}
 	pl.Y.Min, pl.Y.Max = lo, hi
 	for _, m := range p.marks {
 		if m.t < p.from || m.t > p.to {

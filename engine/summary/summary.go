@@ -39,9 +39,9 @@ type Extreme struct {
 
 // Source is a source's state at the end of a segment.
 type Source struct {
-	Name string  `json:"name"`
-	P    float64 `json:"p_kW"`
-	Q    float64 `json:"q_kvar"`
+	Name string   `json:"name"`
+	P    float64  `json:"p_kW"`
+	Q    *float64 `json:"q_kvar,omitempty"` // nil if not recorded
 	// Loading is P over the rating of a source that holds the network by
 	// droop or the like; nil where no rating bounds P (a grid's is its
 	// short-circuit power).
@@ -313,7 +313,8 @@ func segment(tr *engine.Trace, g *signals, a, b int) Segment {
 	for _, s := range g.power {
 		src := Source{Name: s.owner, P: s.x[b] / 1e3}
 		if q := g.q[s.owner]; q != nil {
-			src.Q = q[b] / 1e3
+			kvar := q[b] / 1e3
+			src.Q = &kvar
 		}
 		if s.base > 0 {
 			l := s.x[b] / s.base

@@ -78,7 +78,7 @@ func (p *writer) segment(g *Segment) {
 	} else if g.From > 0 {
 		head = "(" + strings.Join(g.Followed, "; ") + ")"
 	}
-	p.wrap("", fmt.Sprintf("%.4f s  %s", g.From, head))
+	p.wrap("", fmt.Sprintf("%.4f s %s", g.From, head))
 	if len(g.Events) > 0 {
 		for _, c := range g.Followed {
 			p.wrap("    - ", c)
@@ -151,7 +151,11 @@ func (p *writer) sources(list []Source) {
 		if s.Loading != nil {
 			pu = num(*s.Loading, 3) + " pu"
 		}
-		cell := fmt.Sprintf("%-*s %9s kW %9s kvar %8s", widest, s.Name, num(s.P, 1), num(s.Q, 1), pu)
+		kvar := "-"
+		if s.Q != nil {
+			kvar = num(*s.Q, 1)
+		}
+		cell := fmt.Sprintf("%-*s %9s kW %9s kvar %8s", widest, s.Name, num(s.P, 1), kvar, pu)
 		if line != "" && len(line)+3+len(cell) > p.width {
 			p.line("%s", strings.TrimRight(line, " "))
 			line = ""
