@@ -45,7 +45,7 @@ func cmdCompare(ctx context.Context, c *call) error {
 	for _, s := range c.settings {
 		name, spec, ok := strings.Cut(s, ":")
 		if !ok {
-			return fmt.Errorf("%w: --setting %q: want NAME: PATTERN=LEVEL, ...", errUsage, s)
+			return fmt.Errorf("%w: --setting %q: want NAME: PATTERN=LEVEL and more of those behind commas", errUsage, s)
 		}
 		extra, err := rules(strings.Split(spec, ","))
 		if err != nil {
