@@ -5,6 +5,7 @@ import (
 	"errors"
 	"math"
 	"strings"
+	"sync"
 	"testing"
 
 	"islet/engine"
@@ -283,5 +284,42 @@ func TestLastSourceTrips(t *testing.T) {
 	}
 	if c := m.Energy().Closure(); c > 1e-6 {
 		t.Errorf("ledger closes to %g: %+v", c, m.Energy())
+	}
+}
+
+// Independent simulations share nothing: run side by side they give the bits
+// they give alone. The race detector runs this too.
+func TestIndependentRunsSideBySide(t *testing.T) {
+	one := func() *engine.Simulation {
+		m := start(t, tied(t, false), nil)
+		at(t, m, 0.1, engine.Open("tie"))
+		return m
+	}
+	alone := run(t, one(), 0.5).Column("b.v")
+	const n = 4
+	sims, results := make([]*engine.Simulation, n), make([][]float64, n)
+	for k := range sims {
+		sims[k] = one()
+	}
+	var wait sync.WaitGroup
+	for k := range sims {
+		wait.Add(1)
+		go func() {
+			defer wait.Done()
+			if tr, err := sims[k].Run(context.Background(), 0.5); err == nil {
+				results[k] = tr.Column("b.v")
+			}
+		}()
+	}
+	wait.Wait()
+	for k, got := range results {
+		if len(got) != len(alone) {
+			t.Fatalf("run %d has %d rows, alone %d", k, len(got), len(alone))
+		}
+		for i := range got {
+			if math.Float64bits(got[i]) != math.Float64bits(alone[i]) {
+				t.Fatalf("run %d differs from the one alone at row %d", k, i)
+			}
+		}
 	}
 }
