@@ -184,9 +184,9 @@ func (p *writer) labelled(label, text string) {
 	p.line("%s", line)
 }
 
-// figures formats x with three figures that count.
+// figures formats x with three figures that count, and less than 1e-6 as 0.
 func figures(x float64) string {
-	if x == 0 {
+	if math.Abs(x) < 1e-6 {
 		return "0"
 	}
 	return num(x, max(0, 2-int(math.Floor(math.Log10(math.Abs(x))))))
