@@ -24,6 +24,7 @@ package summary
 import (
 	"errors"
 	"math"
+	"slices"
 	"strings"
 
 	"islet/engine"
@@ -91,6 +92,11 @@ type Summary struct {
 	Iterations  int       `json:"operating_point_iterations"`
 	Drift       float64   `json:"operating_point_drift_per_s"`
 
+	// Reduced lists devices below full detail. Quasi-steady elements take their
+	// reactance at the speed of their island's network frame, FrameSpeeds at
+	// the end of the run, and store no energy.
+	Reduced     []string             `json:"reduced,omitempty"`
+	FrameSpeeds []float64            `json:"frame_speeds_Hz"`
 	Segments    []Segment            `json:"segments"`
 	NotRecorded []string             `json:"not_recorded,omitempty"`
 	Energy      engine.EnergyBalance `json:"energy_J"`
@@ -117,6 +123,17 @@ func Summarise(sim *engine.Simulation) (*Summary, error) {
 		Frequencies: op.Frequencies, Iterations: op.Iterations, Drift: op.Drift, Energy: sim.Energy()}
 	s.Closure = s.Energy.Closure()
 	g := gather(sim, tr)
+	sys := sim.System()
+	for _, name := range sys.DeviceNames() {
+		if d, ok := sys.Device(name).(facet.Detailed); ok && len(d.Details()) > 0 && d.Detail() != d.Details()[0] {
+			s.Reduced = append(s.Reduced, name)
+		}
+	}
+	for _, b := range sys.BusNames() {
+		if w := sim.FrameSpeed(b) / (2 * math.Pi); w > 0 && !slices.Contains(s.FrameSpeeds, w) {
+			s.FrameSpeeds = append(s.FrameSpeeds, w)
+		}
+	}
 	for _, m := range []struct {
 		list []signal
 		name string

@@ -37,6 +37,16 @@ func (s *Summary) WriteText(w io.Writer, width int) error {
 		p.wrap("", fmt.Sprintf("Energy: %s kJ supplied, %s kJ dissipated or used, %s kJ more stored, %s J destroyed at switching; the ledger closes to %.1e of the throughput.",
 			num(e.Supplied/1e3, 3), num((e.Dissipated+e.Elsewhere)/1e3, 3), num(e.StoredChange/1e3, 4), figures(e.Destroyed), s.Closure))
 	}
+	if len(s.Energy.LeftOut) > 0 {
+		p.wrap("", "Devices that keep no energy account, taken by their terminal power: "+strings.Join(s.Energy.LeftOut, ", ")+".")
+	}
+	if n := len(s.Reduced); n > 0 {
+		var f []string
+		for _, w := range s.FrameSpeeds {
+			f = append(f, num(w, 4)+" Hz")
+		}
+		p.wrap("", fmt.Sprintf("%d devices below full detail: what is quasi-steady stores no energy, and takes its reactance at the speed of the network frame (%s at the end).", n, strings.Join(f, ", ")))
+	}
 	return p.err
 }
 
