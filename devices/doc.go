@@ -39,5 +39,7 @@
 // Where a device has two levels, "full" integrates all its inductors and
 // capacitors, and "quasi-steady" sets their derivatives in the network frame to
 // zero: the phasor model at the frame's speed. Quasi-steady elements store no
-// energy in the ledger.
+// energy in the ledger. Inverters have a ladder of levels, from "full" by
+// "current loop gone", "inner loops gone" and "primary only" to "phase only"
+// (grid-forming) or "injection only" (grid-following); see inverter.go.
 package devices
