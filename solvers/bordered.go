@@ -3,7 +3,6 @@ package solvers
 import (
 	"errors"
 	"fmt"
-	"math"
 	"slices"
 )
 
@@ -68,13 +67,12 @@ type BorderedLU struct {
 	blu    *SparseLU
 	c, x   []float64 // local workspace
 
-	general  *SparseLU // of the whole matrix, made when first needed
-	gen      *CSC
-	genAt    []int
-	usesGen  bool
-	stats    BorderedStats
-	normCols []float64
-	est      []float64 // workspace of the condition estimate
+	general *SparseLU // of the whole matrix, made when first needed
+	gen     *CSC
+	genAt   []int
+	usesGen bool
+	stats   BorderedStats
+	est     []float64 // workspace of the condition estimate
 }
 
 // laneGroup is a group of blocks of one pattern whose values are interleaved.
@@ -417,26 +415,31 @@ func (f *BorderedLU) repivot(k int) bool {
 // factorGeneral factors the whole matrix.
 func (f *BorderedLU) factorGeneral() error {
 	f.stats.General++
+	f.assemble()
 	if f.general == nil {
-		var entries []Entry
-		f.entries(func(row, col int, _ float64) { entries = append(entries, Entry{row, col}) })
-		f.gen, f.genAt = NewCSC(f.n, f.n, entries)
 		lu, err := NewSparseLU(f.gen, LUOptions{})
 		if err != nil {
 			return err
 		}
 		f.general = lu
 	}
-	for i := range f.gen.X {
-		f.gen.X[i] = 0
+	f.usesGen = true
+	return f.general.Factor()
+}
+
+// assemble writes the whole matrix into f.gen.
+func (f *BorderedLU) assemble() {
+	if f.gen == nil {
+		var entries []Entry
+		f.entries(func(row, col int, _ float64) { entries = append(entries, Entry{row, col}) })
+		f.gen, f.genAt = NewCSC(f.n, f.n, entries)
 	}
+	clear(f.gen.X)
 	i := 0
 	f.entries(func(_, _ int, v float64) {
 		f.gen.X[f.genAt[i]] += v
 		i++
 	})
-	f.usesGen = true
-	return f.general.Factor()
 }
 
 // entries calls visit for every entry of the whole matrix, always in the same
@@ -624,20 +627,12 @@ func (f *BorderedLU) SolveTranspose(b []float64) {
 	}
 }
 
-// Condition implements [LinearSolver].
+// Condition implements [LinearSolver]. It assembles the whole matrix for its
+// norm.
 func (f *BorderedLU) Condition() float64 {
-	if f.normCols == nil {
-		f.normCols, f.est = make([]float64, f.n), make([]float64, 2*f.n)
+	if f.est == nil {
+		f.est = make([]float64, 2*f.n)
 	}
-	// Entries of one place that come from several blocks are added by
-	// magnitude, so the norm may be overestimated.
-	for i := range f.normCols {
-		f.normCols[i] = 0
-	}
-	f.entries(func(_, col int, v float64) { f.normCols[col] += math.Abs(v) })
-	norm := 0.0
-	for _, s := range f.normCols {
-		norm = math.Max(norm, s)
-	}
-	return norm * inverseNorm1(f, f.est[:f.n], f.est[f.n:])
+	f.assemble()
+	return f.gen.Norm1() * inverseNorm1(f, f.est[:f.n], f.est[f.n:])
 }
