@@ -483,7 +483,7 @@ func (n *Network) difference(b *netBlock, t float64, v, x []float64) error {
 			p, scale = &xx[j-b.ports], b.scale[j-b.ports]
 		}
 		at := *p
-		d := cbrtEps * math.Max(math.Abs(at), scale*1e-3)
+		d := cbrtEps * math.Max(math.Abs(at), scale)
 		*p = at + d
 		hi := *p
 		if err := b.b.Eval(fp, rp, t, vv, xx); err != nil {
