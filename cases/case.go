@@ -6,6 +6,7 @@ import (
 	"os"
 	"path"
 	"path/filepath"
+	"strconv"
 	"strings"
 
 	"islet/engine"
@@ -53,8 +54,9 @@ type Condition struct {
 
 // DetailRule puts the devices that a pattern matches at a level of detail, as
 // far as they offer it. The pattern is matched against the device's name (see
-// path.Match), or, after "kind:", against its kind: "kind:line". Of several
-// rules for a device the last counts; those of the file come first.
+// path.Match), or, after "kind:", against its kind: "kind:line"; "near:NAME:N"
+// means the devices within N buses of a bus or device, "far:NAME:N" all others.
+// Of several rules for a device the last counts; those of the file come first.
 type DetailRule struct {
 	Pattern, Level string
 }
@@ -171,18 +173,90 @@ func (c *Case) Details() map[string][]string {
 	return out
 }
 
-// matches tells whether a rule means the device. The error is that of a
-// malformed pattern.
-func (r DetailRule) matches(d *deviceSpec) (bool, error) {
-	if p, ok := strings.CutPrefix(r.Pattern, "kind:"); ok {
-		return path.Match(strings.TrimSpace(p), d.kind.name)
+// selector returns a function that tells whether a rule means device i.
+func (r DetailRule) selector(specs []deviceSpec, buses []busSpec) (func(i int) bool, error) {
+	for _, side := range []string{"near:", "far:"} {
+		rest, ok := strings.CutPrefix(r.Pattern, side)
+		if !ok {
+			continue
+		}
+		name, count, _ := strings.Cut(rest, ":")
+		hops, err := strconv.Atoi(strings.TrimSpace(count))
+		if err != nil || hops < 0 {
+			return nil, fmt.Errorf("%q is no distance; want %sNAME:N with a bus or device and a number of buses", r.Pattern, side)
+		}
+		within, err := reach(specs, buses, strings.TrimSpace(name), hops)
+		if err != nil {
+			return nil, err
+		}
+		near := side == "near:"
+		return func(i int) bool {
+			for _, b := range specs[i].at {
+				if within[b] {
+					return near
+				}
+			}
+			return !near
+		}, nil
 	}
-	return path.Match(r.Pattern, d.name)
+	pattern, of := r.Pattern, func(d *deviceSpec) string { return d.name }
+	if p, ok := strings.CutPrefix(r.Pattern, "kind:"); ok {
+		pattern, of = strings.TrimSpace(p), func(d *deviceSpec) string { return d.kind.name }
+	}
+	if _, err := path.Match(pattern, ""); err != nil {
+		return nil, fmt.Errorf("%q is no pattern; want a name in which * stands for any characters, ? for one and [a-z] for a range", r.Pattern)
+	}
+	return func(i int) bool {
+		ok, _ := path.Match(pattern, of(&specs[i]))
+		return ok
+	}, nil
+}
+
+// reach marks the buses at most hops lines, transformers or breakers away from
+// a bus, or from the buses of a device.
+func reach(specs []deviceSpec, buses []busSpec, name string, hops int) ([]bool, error) {
+	within := make([]bool, len(buses))
+	var front []int
+	var known []string
+	for b := range buses {
+		known = append(known, buses[b].name)
+		if buses[b].name == name {
+			front = append(front, b)
+		}
+	}
+	for i := range specs {
+		if specs[i].name == name {
+			front = append(front, specs[i].at...)
+		}
+	}
+	if len(front) == 0 {
+		return nil, fmt.Errorf("no bus or device is named %q; %s", name, suggest(name, append(known, names(specs)...)))
+	}
+	for _, b := range front {
+		within[b] = true
+	}
+	for range hops {
+		var next []int
+		for i := range specs {
+			at := specs[i].at
+			if len(at) != 2 || within[at[0]] == within[at[1]] {
+				continue
+			}
+			next = append(next, at...)
+		}
+		for _, b := range next {
+			within[b] = true
+		}
+		if len(next) == 0 {
+			break
+		}
+	}
+	return within, nil
 }
 
 // levels finds the level of each device under the rules, "" for as built. The
 // errors, one for each rule at most, belong to the rules of the same number.
-func levels(specs []deviceSpec, built []engine.Device, rules []DetailRule) (at []string, errs []error) {
+func levels(specs []deviceSpec, buses []busSpec, built []engine.Device, rules []DetailRule) (at []string, errs []error) {
 	at = make([]string, len(specs))
 	errs = make([]error, len(rules))
 	const patience = 20 // faulty rules, before the rest is left unchecked
@@ -193,13 +267,14 @@ func levels(specs []deviceSpec, built []engine.Device, rules []DetailRule) (at [
 		}
 		matched, used := false, false
 		var offered []string
+		means, err := r.selector(specs, buses)
+		if err != nil {
+			errs[k] = err
+			faulty++
+			continue
+		}
 		for i := range specs {
-			ok, err := r.matches(&specs[i])
-			if err != nil {
-				errs[k] = fmt.Errorf("%q is no pattern; want a name in which * stands for any characters, ? for one and [a-z] for a range", r.Pattern)
-				break
-			}
-			if !ok {
+			if !means(i) {
 				continue
 			}
 			matched = true
@@ -288,7 +363,7 @@ func (c *Case) Build(rules ...DetailRule) (*engine.System, error) {
 		return nil, err
 	}
 	all := append(append([]DetailRule(nil), c.Rules...), rules...)
-	at, ruleErrs := levels(c.devices, built, all)
+	at, ruleErrs := levels(c.devices, c.buses, built, all)
 	for k, err := range ruleErrs {
 		if err != nil && k >= len(c.Rules) {
 			errs = append(errs, fmt.Errorf("cases: detail %s=%s: %w", all[k].Pattern, all[k].Level, err))

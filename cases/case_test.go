@@ -459,3 +459,44 @@ func FuzzParse(f *testing.F) {
 		}
 	})
 }
+
+// Rules by distance: the harbour's devices within two buses of the tie, and all
+// others, share the devices out between them.
+func TestDetailByDistance(t *testing.T) {
+	c, err := Open("harbour")
+	if err != nil {
+		t.Fatal(err)
+	}
+	reduced := func(rules ...DetailRule) map[string]bool {
+		t.Helper()
+		s, err := c.Build(rules...)
+		if err != nil {
+			t.Fatal(err)
+		}
+		out := make(map[string]bool)
+		for _, n := range s.DeviceNames() {
+			if d, ok := s.Device(n).(facet.Detailed); ok && d.Detail() == "quasi-steady" {
+				out[n] = true
+			}
+		}
+		return out
+	}
+	far, near, all := reduced(DetailRule{"far:tie:2", "quasi-steady"}), reduced(DetailRule{"near:tie:2", "quasi-steady"}), reduced(DetailRule{"*", "quasi-steady"})
+	for n := range all {
+		if far[n] == near[n] {
+			t.Errorf("%s is near: %v, far: %v", n, near[n], far[n])
+		}
+	}
+	// The tie joins causeway and landing; the town's load hangs at landing, the
+	// cranes several boards away.
+	if !near["landing-town"] || !far["crane-1"] || len(far) == 0 || len(near) == 0 {
+		t.Errorf("near %v, far %v", near, far)
+	}
+	for _, bad := range []struct{ pattern, want string }{
+		{"near:tie", "want near:NAME:N"}, {"far:tie:-1", "want far:NAME:N"}, {"near:tye:2", "did you mean tie"},
+	} {
+		if _, err := c.Build(DetailRule{bad.pattern, "full"}); err == nil || !strings.Contains(err.Error(), bad.want) {
+			t.Errorf("%s: %v, want %q", bad.pattern, err, bad.want)
+		}
+	}
+}

@@ -428,7 +428,7 @@ func (l *loader) detail() {
 			return // rules can't be judged before all devices are there
 		}
 	}
-	at, errs := levels(l.c.devices, l.built, l.c.Rules)
+	at, errs := levels(l.c.devices, l.c.buses, l.built, l.c.Rules)
 	for k, err := range errs {
 		if err != nil {
 			l.doc.fault(keys[k], "%s", err)

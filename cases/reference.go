@@ -70,7 +70,7 @@ func referenceSection(b *strings.Builder, section string) {
 		referenceTable(b, infosOf(conditionFields()))
 	case "detail":
 		b.WriteString("[detail]\n  \"PATTERN\" = \"LEVEL\"\n")
-		b.WriteString("PATTERN is a device's name in which * stands for any characters, or kind:LINE for\nall of a kind. Of several lines for a device the last counts. Levels are full and\nquasi-steady for networks; for inverters full, current loop gone, inner loops gone,\nprimary only, phase only (forming), and injection only (following).\n")
+		b.WriteString("PATTERN is a device's name in which * stands for any characters, kind:LINE for\nall of a kind, near:NAME:N for all within N buses of a bus or device, or far:NAME:N\nfor all others. Of several lines for a device the last counts. Levels are full and\nquasi-steady for networks; for inverters full, current loop gone, inner loops gone,\nprimary only, phase only (forming), and injection only (following).\n")
 	}
 }
 
