@@ -47,6 +47,7 @@ type call struct {
 	asCSV    bool
 	settings list
 	repeat   int
+	windows  string
 }
 
 // list is a flag that may be given several times.

@@ -16,6 +16,7 @@ func compareFlags(c *call) {
 	studyFlags(c)
 	c.fs.Var(&c.settings, "setting", "`NAME: PATTERN=LEVEL, ...`: a setting to compare, applied after --detail; may be repeated (default: every level that the devices offer, each on all devices that offer it, with the network as given and quasi-steady)")
 	c.fs.Var(&c.record, "record", "`PATTERN`: channels to compare; may be repeated")
+	c.fs.StringVar(&c.windows, "windows", "", "`A,B`: ends of the two windows after an event in which deviations are told apart, s (default 0.02,0.3)")
 	c.fs.IntVar(&c.repeat, "repeat", 5, "timed runs of each setting, taken in turns; the median counts")
 	c.fs.StringVar(&c.out, "out", "", "write table (text), deviations (CSV), results (JSON) and overlay plots into `DIR`")
 	c.fs.BoolVar(&c.noPlots, "no-plots", false, "with --out: leave the plots out")
@@ -64,6 +65,14 @@ func cmdCompare(ctx context.Context, c *call) error {
 	}
 	if len(c.record) > 0 {
 		co.Channels = c.record
+	}
+	if c.windows != "" {
+		if n, err := fmt.Sscanf(c.windows, "%g,%g", &co.Windows[0], &co.Windows[1]); n != 2 || err != nil {
+			return fmt.Errorf("%w: --windows %q: want two times, 0.02,0.3", errUsage, c.windows)
+		}
+	}
+	if c.repeat < 1 {
+		return fmt.Errorf("%w: --repeat %d: want at least 1", errUsage, c.repeat)
 	}
 	hook, clear := c.progress()
 	if hook != nil {

@@ -58,6 +58,9 @@ func TestWrongUse(t *testing.T) {
 		{[]string{"run", "starter", "--record", "nothing.at.all"}, []string{"no channel matches"}},
 		{[]string{"check", bad}, []string{"bad.toml:3", "bad.toml:7", "rated_kV"}},
 		{[]string{"compare", "starter", "--setting", "x"}, []string{"want NAME: PATTERN=LEVEL"}},
+		{[]string{"compare", "starter", "--windows", "x"}, []string{"want two times"}},
+		{[]string{"compare", "starter", "--windows", "0.3,0.1"}, []string{"ascending"}},
+		{[]string{"compare", "starter", "--repeat", "0"}, []string{"want at least 1"}},
 		{[]string{"keys", "no such kind"}, []string{"no such kind"}},
 	} {
 		code, out, err := islet(c.args...)

@@ -39,6 +39,9 @@ type Options struct {
 	// Repetitions is the number of timed runs of each setting, taken in turns;
 	// 0 means 5. One more run of each, untimed, is compared.
 	Repetitions int
+	// Windows are the ends, s after an event, of the first and the second
+	// window in which deviations are told apart; zeros mean 0.02 and 0.3.
+	Windows [2]float64
 	// Engine holds method, tolerances and frame options for all runs.
 	Engine engine.Options
 	// Progress is called before every run; nil is left out.
@@ -48,17 +51,26 @@ type Options struct {
 // Window is a stretch of time after an event.
 type Window int
 
-// Windows. The first two are counted from every event; Rest is everything
-// else, the time before the first event included.
+// Windows. The first two are counted from every event, as far as
+// Options.Windows says; Rest is everything else, the time before the first event
+// included.
 const (
-	First20ms Window = iota
-	To300ms
+	Early Window = iota
+	Middle
 	Rest
 	numWindows
 )
 
-func (w Window) String() string {
-	return [...]string{"first 20 ms", "20 to 300 ms", "rest"}[w]
+// WindowName is what a window of this comparison is, in words: "first 20 ms".
+func (c *Comparison) WindowName(w Window) string {
+	a, b := 1e3*c.Windows[0], 1e3*c.Windows[1]
+	switch w {
+	case Early:
+		return fmt.Sprintf("first %.4g ms", a)
+	case Middle:
+		return fmt.Sprintf("%.4g to %.4g ms", a, b)
+	}
+	return "rest"
 }
 
 // Deviation is how far a channel strays from the reference in a window.
@@ -92,7 +104,7 @@ type Channel struct {
 
 // Worst returns the window with the largest deviation.
 func (c *Channel) Worst() Window {
-	w := First20ms
+	w := Early
 	for k := range c.Windows {
 		if c.Windows[k].Max > c.Windows[w].Max {
 			w = Window(k)
@@ -132,7 +144,8 @@ type Result struct {
 // Comparison is the outcome of all settings, the reference first.
 type Comparison struct {
 	Until   float64
-	Events  []float64 // times of events in the reference run
+	Windows [2]float64 // s after an event
+	Events  []float64  // times of events in the reference run
 	Results []Result
 }
 
@@ -149,6 +162,12 @@ func Run(ctx context.Context, settings []Setting, o Options) (*Comparison, error
 	if !(o.Sample >= 0) {
 		errs = append(errs, fmt.Errorf("compare: the sample spacing is %g s, want 0 (default) or more", o.Sample))
 	}
+	if o.Windows == [2]float64{} {
+		o.Windows = [2]float64{0.02, 0.3}
+	}
+	if !(o.Windows[0] > 0 && o.Windows[1] > o.Windows[0]) {
+		errs = append(errs, fmt.Errorf("compare: the windows end at %g and %g s, want two ascending times", o.Windows[0], o.Windows[1]))
+	}
 	if err := errors.Join(errs...); err != nil {
 		return nil, err
 	}
@@ -158,7 +177,7 @@ func Run(ctx context.Context, settings []Setting, o Options) (*Comparison, error
 	if o.Repetitions == 0 {
 		o.Repetitions = 5
 	}
-	c := &Comparison{Until: o.Until}
+	c := &Comparison{Until: o.Until, Windows: o.Windows}
 	total := (o.Repetitions + 1) * len(settings)
 	done := 0
 	progress := func(name string) {
@@ -240,7 +259,7 @@ func Run(ctx context.Context, settings []Setting, o Options) (*Comparison, error
 		if i > 0 {
 			r.Changes = changes(ref.Verdicts, r.Verdicts)
 		}
-		r.Summary = sentence(ref, r, i == 0)
+		r.Summary = c.sentence(ref, r, i == 0)
 	}
 	return c, nil
 }
@@ -307,10 +326,10 @@ func (c *Comparison) compare(ref, r *Result, sample float64) {
 			w := Rest
 			if e >= 0 {
 				switch d := t - c.Events[e]; {
-				case d < 0.02:
-					w = First20ms
-				case d < 0.3:
-					w = To300ms
+				case d < c.Windows[0]:
+					w = Early
+				case d < c.Windows[1]:
+					w = Middle
 				}
 			}
 			dv := &cc.Windows[w]
@@ -461,7 +480,7 @@ func changes(a, b []string) []string {
 }
 
 // sentence sums up a result.
-func sentence(ref, r *Result, isRef bool) string {
+func (c *Comparison) sentence(ref, r *Result, isRef bool) string {
 	if isRef {
 		return fmt.Sprintf("%s is the reference: %d unknowns, %d steps, %s.", r.Setting, r.Unknowns, r.Steps, duration(r.Time))
 	}
@@ -493,15 +512,15 @@ func sentence(ref, r *Result, isRef bool) string {
 				continue
 			}
 			x := ch.Windows[w].Relative()
-			if Window(w) == First20ms {
+			if Window(w) == Early {
 				first, at = x, ch
 			} else {
 				later = math.Max(later, x)
 			}
 		}
-		s := fmt.Sprintf("%s by up to %s of a channel's range in the first 20 ms after an event", g.Name, percent(first))
+		s := fmt.Sprintf("%s by up to %s of a channel's range in the first %.4g ms after an event", g.Name, percent(first), 1e3*c.Windows[0])
 		if at != nil {
-			s += fmt.Sprintf(" (%s, rms %s)", at.Name, percent(at.Windows[First20ms].RelativeRMS()))
+			s += fmt.Sprintf(" (%s, rms %s)", at.Name, percent(at.Windows[Early].RelativeRMS()))
 		}
 		s += fmt.Sprintf(" and %s later", percent(later))
 		parts = append(parts, s)

@@ -111,7 +111,7 @@ func TestDeviationsAreTheClosedForm(t *testing.T) {
 	if p == nil {
 		t.Fatal("heater.p is not compared")
 	}
-	first := p.Windows[compare.First20ms]
+	first := p.Windows[compare.Early]
 	if math.Abs(first.Relative()-1) > 1e-6 || first.At != 0.1 {
 		t.Errorf("largest deviation %g of range at %g s, want 1 at 0.1", first.Relative(), first.At)
 	}
@@ -120,7 +120,7 @@ func TestDeviationsAreTheClosedForm(t *testing.T) {
 	if math.Abs(first.RelativeRMS()-want) > 1e-5*want {
 		t.Errorf("rms %g, want %g", first.RelativeRMS(), want)
 	}
-	if got, want := p.Windows[compare.To300ms].Relative(), math.Exp(-0.02/tau); math.Abs(got-want) > 1e-4 {
+	if got, want := p.Windows[compare.Middle].Relative(), math.Exp(-0.02/tau); math.Abs(got-want) > 1e-4 {
 		t.Errorf("after 20 ms %g, want %g", got, want)
 	}
 	if got := p.Windows[compare.Rest].Relative(); got > 1e-5 {

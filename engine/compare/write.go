@@ -28,7 +28,7 @@ func (c *Comparison) WriteText(w io.Writer) error {
 		p.printf("\n%s against %s: largest deviation and its channel's rms, %% of the channel's range\n", r.Setting, c.Results[0].Setting)
 		table := [][]string{{""}}
 		for k := range numWindows {
-			table[0] = append(table[0], k.String())
+			table[0] = append(table[0], c.WindowName(k))
 		}
 		for _, g := range r.Groups {
 			row := []string{g.Name}
@@ -93,7 +93,7 @@ func (c *Comparison) WriteCSV(w io.Writer) error {
 				if d.Count == 0 {
 					continue
 				}
-				if err := out.Write([]string{r.Setting, ch.Name, ch.Unit, ch.Group, Window(k).String(), num(d.Max), num(d.RMS), num(d.Range), num(d.Relative()), num(d.RelativeRMS()), num(d.At)}); err != nil {
+				if err := out.Write([]string{r.Setting, ch.Name, ch.Unit, ch.Group, c.WindowName(Window(k)), num(d.Max), num(d.RMS), num(d.Range), num(d.Relative()), num(d.RelativeRMS()), num(d.At)}); err != nil {
 					return err
 				}
 			}
@@ -150,7 +150,7 @@ func (c *Comparison) WriteJSON(w io.Writer) error {
 				if d.Count == 0 {
 					continue
 				}
-				v := deviation{Window: Window(k).String(), Max: finite(d.Max), RMS: finite(d.RMS), At: d.At}
+				v := deviation{Window: c.WindowName(Window(k)), Max: finite(d.Max), RMS: finite(d.RMS), At: d.At}
 				if rel := d.Relative(); !math.IsInf(rel, 0) && rel == rel {
 					v.Relative = &rel
 				}

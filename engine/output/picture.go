@@ -171,9 +171,9 @@ func Overlays(c *compare.Comparison) []*Picture {
 		}
 		for _, g := range r.Groups {
 			// The first 300 ms tell more than a spike at the switching.
-			ch := g.Worst[compare.To300ms]
+			ch := g.Worst[compare.Middle]
 			if ch == nil {
-				ch = g.Worst[compare.First20ms]
+				ch = g.Worst[compare.Early]
 			}
 			if ch == nil || g.Name == "other" {
 				continue
