@@ -537,7 +537,7 @@ func (c *Comparison) sentence(ref, r *Result, isRef bool) string {
 
 // percent prints a ratio with two figures that count, without an exponent.
 func percent(x float64) string {
-	if x >= 1 {
+	if x >= 0.0995 {
 		return fmt.Sprintf("%.0f %%", 100*x)
 	}
 	return fmt.Sprintf("%.2g %%", 100*x)

@@ -199,8 +199,9 @@ func Overlays(c *compare.Comparison) []*Picture {
 	return out
 }
 
+// slug makes a file name of a setting's name.
 func slug(s string) string {
-	return strings.Trim(strings.Map(func(r rune) rune {
+	return strings.Trim(strings.ReplaceAll(strings.Map(func(r rune) rune {
 		switch {
 		case r >= 'a' && r <= 'z', r >= '0' && r <= '9':
 			return r
@@ -208,7 +209,7 @@ func slug(s string) string {
 			return r + 'a' - 'A'
 		}
 		return '-'
-	}, s), "-")
+	}, s), "--", "-"), "-")
 }
 
 func fingerprint(x []float64) string {
