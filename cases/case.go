@@ -10,7 +10,6 @@ import (
 	"strings"
 
 	"islet/engine"
-	"islet/solvers"
 	"islet/solvers/facet"
 )
 
@@ -23,7 +22,7 @@ type Case struct {
 	Frequency  float64 // nominal, Hz
 	Until      float64 // end of the study, s
 	Sample     float64 // spacing of the trace, s; 0 for the solver's own steps
-	Tolerance  float64 // relative, of the solver
+	Tolerance  float64 // see engine.Options.Tolerance
 	Record     []string
 	Rules      []DetailRule // the file's own
 	Events     []Event
@@ -392,7 +391,7 @@ func (c *Case) Build(rules ...DetailRule) (*engine.System, error) {
 
 // Start builds the case, starts it (engine.Start finds the operating point)
 // and schedules its events and conditions. Options left at zero (Record nil,
-// Sample and Solver.RelTol 0) are the case's; o may be nil and isn't changed.
+// Sample and Tolerance 0) are the case's; o may be nil and isn't changed.
 func (c *Case) Start(o *engine.Options, rules ...DetailRule) (*engine.Simulation, error) {
 	sys, err := c.Build(rules...)
 	if err != nil {
@@ -408,8 +407,8 @@ func (c *Case) Start(o *engine.Options, rules ...DetailRule) (*engine.Simulation
 	if opt.Sample == 0 {
 		opt.Sample = c.Sample
 	}
-	if opt.Solver == (solvers.Options{}) || opt.Solver.RelTol == 0 {
-		opt.Solver.RelTol = c.Tolerance
+	if opt.Tolerance == 0 {
+		opt.Tolerance = c.Tolerance
 	}
 	sim, err := engine.Start(sys, &opt)
 	if err != nil {

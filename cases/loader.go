@@ -100,7 +100,7 @@ func studyFields() []field[studyDraft] {
 		num("frequency_Hz", "Hz", "50", 1, 1000, func(d *T, x float64) { d.hertz = x }, "nominal frequency"),
 		above("until_s", "s", "required", 0, 1e6, func(d *T, x float64) { d.until = x }, "end of the study"),
 		num("sample_ms", "ms", "0", 0, 1e6, func(d *T, x float64) { d.sample = x }, "spacing of the recorded waveforms; 0 for the solver's own steps").in(1e-3),
-		num("tolerance", "1", "1e-6", 1e-12, 0.1, func(d *T, x float64) { d.relative = x }, "relative tolerance of the solver"),
+		num("tolerance", "1", "1e-6", 1e-12, 0.1, func(d *T, x float64) { d.relative = x }, "accuracy asked of waveforms, relative to their range"),
 		words("record", "voltages, frequencies, and all derived quantities of devices", func(d *T, s []string) { d.record = s }, "channels to record, by name or pattern like battery-*.p"),
 	}
 }

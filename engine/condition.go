@@ -248,6 +248,24 @@ func (m *Simulation) syncSides(w *watch, t float64, y []float64) (dv, df, da flo
 	return mag[0] - mag[1], freq[0] - freq[1], wrap(ang[0] - ang[1])
 }
 
+// syncStride bounds a step while a synchronism check waits. Islands at rest in
+// their own frames allow steps of many seconds, in which the angle between them
+// may turn past the window unseen: the points at which a step is looked at must
+// lie less than a third of a radian apart.
+func (m *Simulation) syncStride() float64 {
+	stride := math.Inf(1)
+	y := m.step.State()
+	for _, w := range m.conditions {
+		if !w.sync || w.fired {
+			continue
+		}
+		if _, df, _ := m.syncSides(w, m.t, y); df != 0 {
+			stride = math.Min(stride, 1.5/(2*math.Pi*math.Abs(df)))
+		}
+	}
+	return stride
+}
+
 // syncMargin is positive where all windows are met.
 func (m *Simulation) syncMargin(w *watch, t float64, y []float64) float64 {
 	dv, df, da := m.syncSides(w, t, y)

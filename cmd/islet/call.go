@@ -79,7 +79,7 @@ func caseFlags(c *call) {
 func studyFlags(c *call) {
 	caseFlags(c)
 	c.fs.Float64Var(&c.until, "until", 0, "end of the run, `s` (default: the case's)")
-	c.fs.Float64Var(&c.tolerance, "tolerance", 0, "relative tolerance of the integrator (default: the case's, or 1e-6)")
+	c.fs.Float64Var(&c.tolerance, "tolerance", 0, "accuracy asked of waveforms, relative to their range (default: the case's, or 1e-6)")
 	c.fs.StringVar(&c.method, "method", "", "integrator: `NAME` is Rodas5P (default), Rodas4P or Trapezoidal")
 	c.fs.Float64Var(&c.step, "step", 0, "largest step, `s`; the fixed step of Trapezoidal")
 	c.fs.Float64Var(&c.sample, "sample", 0, "spacing of recorded waveforms, `s` (default: the case's)")
@@ -187,7 +187,7 @@ func (c *call) engineOptions() (engine.Options, error) {
 	if len(c.record) > 0 {
 		o.Record = c.record
 	}
-	o.Solver.RelTol = c.tolerance
+	o.Tolerance = c.tolerance
 	o.Solver.MaxStep = c.step
 	switch strings.ToLower(c.method) {
 	case "", "rodas5p":
