@@ -244,7 +244,7 @@ func Run(ctx context.Context, settings []Setting, o Options) (*Comparison, error
 	}
 	for i := range c.Results {
 		r := &c.Results[i]
-		r.Verdicts = verdicts(r, o.Until)
+		r.Verdicts = verdicts(r)
 		if r.Time > 0 {
 			r.Speedup = float64(ref.Time) / float64(r.Time)
 		}
@@ -385,7 +385,7 @@ func (c *Comparison) compare(ref, r *Result, sample float64) {
 }
 
 // verdicts lists what an engineer would conclude from a run.
-func verdicts(r *Result, until float64) []string {
+func verdicts(r *Result) []string {
 	var v []string
 	if r.Failure != "" {
 		v = append(v, "the run fails")
@@ -393,6 +393,7 @@ func verdicts(r *Result, until float64) []string {
 	if r.Trace == nil {
 		return v
 	}
+	told := make(map[float64]bool) // buses of one island have one frequency
 	for i, ch := range r.Trace.Channels {
 		col := r.Trace.Values(i)
 		switch {
@@ -404,8 +405,19 @@ func verdicts(r *Result, until float64) []string {
 				}
 			}
 		case strings.HasSuffix(ch.Name, ".frequency") && ch.Bus:
-			if grows(r.Trace.Time, col, until) {
+			sum := 0.0
+			for _, x := range col {
+				sum += x
+			}
+			if told[sum] {
+				continue
+			}
+			told[sum] = true
+			switch {
+			case grows(r.Trace.Time, col):
 				v = append(v, "the frequency at "+ch.Owner+" swings with growing amplitude")
+			case unsettled(r.Trace.Time, col):
+				v = append(v, "the frequency at "+ch.Owner+" has not settled at the end")
 			}
 		}
 	}
@@ -421,29 +433,47 @@ func verdicts(r *Result, until float64) []string {
 // grows reports whether the swing of a signal grows over the last half of the
 // time since its last event: its range in the last quarter exceeds that in the
 // quarter before, by a tenth, and is not negligible.
-func grows(t, x []float64, until float64) bool {
+func grows(t, x []float64) bool {
 	if len(t) == 0 {
 		return false
 	}
-	start := t[0]
+	start, end := lastEvent(t), t[len(t)-1]
+	q := (end - start) / 4
+	early, late := span(t, x, end-2*q, end-q), span(t, x, end-q, end+1)
+	return late > 1.1*early && late > 1e-3*math.Abs(x[len(x)-1])
+}
+
+// unsettled reports whether a frequency still moves at the end: in the last
+// tenth of the time since the last event by more than 2 % of what it did in all
+// of it, and more than 2 mHz.
+func unsettled(t, x []float64) bool {
+	if len(t) == 0 {
+		return false
+	}
+	start, end := lastEvent(t), t[len(t)-1]
+	return span(t, x, end-0.1*(end-start), end+1) > math.Max(0.02*span(t, x, start, end+1), 2e-3)
+}
+
+// lastEvent is the time of the last pair of rows of one time, or of the start.
+func lastEvent(t []float64) float64 {
+	at := t[0]
 	for k := 1; k < len(t); k++ {
 		if t[k] == t[k-1] {
-			start = t[k]
+			at = t[k]
 		}
 	}
-	span := func(a, b float64) float64 {
-		lo, hi := math.Inf(1), math.Inf(-1)
-		for k := range t {
-			if t[k] >= a && t[k] < b {
-				lo, hi = math.Min(lo, x[k]), math.Max(hi, x[k])
-			}
+	return at
+}
+
+// span is the range of x over a <= t < b.
+func span(t, x []float64, a, b float64) float64 {
+	lo, hi := math.Inf(1), math.Inf(-1)
+	for k := range t {
+		if t[k] >= a && t[k] < b {
+			lo, hi = math.Min(lo, x[k]), math.Max(hi, x[k])
 		}
-		return hi - lo
 	}
-	end := t[len(t)-1]
-	q := (end - start) / 4
-	early, late := span(end-2*q, end-q), span(end-q, end+1)
-	return late > 1.1*early && late > 1e-3*math.Abs(x[len(x)-1])
+	return hi - lo
 }
 
 func unique(v []string) []string {

@@ -169,3 +169,26 @@ func TestFailureIsAResult(t *testing.T) {
 		t.Errorf("wrong options: %v", err)
 	}
 }
+
+// The same study at two settings of detail, from Go.
+func ExampleRun() {
+	c, err := compare.Run(context.Background(),
+		[]compare.Setting{setting("full", 0.01), setting("reduced", 0)},
+		compare.Options{Until: 0.6, Channels: []string{"heater.p"}, Repetitions: 1})
+	if err != nil {
+		fmt.Println(err)
+		return
+	}
+	r := c.Results[1]
+	for _, ch := range r.Channels {
+		for w, d := range ch.Windows {
+			fmt.Printf("%s, %s: %.1f %% of its range\n", ch.Name, c.WindowName(compare.Window(w)), 100*d.Relative())
+		}
+	}
+	fmt.Println("changes of verdict:", len(r.Changes))
+	// Output:
+	// heater.p, first 20 ms: 100.0 % of its range
+	// heater.p, 20 to 300 ms: 13.5 % of its range
+	// heater.p, rest: 0.0 % of its range
+	// changes of verdict: 0
+}
