@@ -326,9 +326,9 @@ func (c *Comparison) compare(ref, r *Result, sample float64) {
 			w := Rest
 			if e >= 0 {
 				switch d := t - c.Events[e]; {
-				case d < c.Windows[0]:
+				case d < c.Windows[0]-1e-9: // a sample on the edge is in the next
 					w = Early
-				case d < c.Windows[1]:
+				case d < c.Windows[1]-1e-9:
 					w = Middle
 				}
 			}
