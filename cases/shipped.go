@@ -33,7 +33,7 @@ func shippedNames() []string {
 	return names
 }
 
-// Shipped lists the shipped cases by name.
+// Shipped lists the shipped cases by name, and last the generated ones.
 func Shipped() []Info {
 	var out []Info
 	for _, name := range shippedNames() {
@@ -50,11 +50,17 @@ func Shipped() []Info {
 		line, _, _ := strings.Cut(strings.TrimSpace(v.Study.Text), "\n")
 		out = append(out, Info{name, v.Study.Title, line})
 	}
+	out = append(out, Info{"mesh-N", fmt.Sprintf("Generated mesh of N inverters, N from %d to %d, such as mesh-100", meshLeast, meshMost),
+		"70 % forming the grid by three kinds of control, 30 % following, on short cables; 15 s with twelve events"})
 	return out
 }
 
-// Source returns the file of a shipped case, to be copied and changed.
+// Source returns the file of a shipped or generated case, to be copied and
+// changed.
 func Source(name string) ([]byte, error) {
+	if n, ok := meshSize(name); ok {
+		return meshSource(n), nil
+	}
 	if !strings.ContainsAny(name, `/\`) {
 		if data, err := shipped.ReadFile(path.Join("files", name+".toml")); err == nil {
 			return data, nil

@@ -393,7 +393,7 @@ func verdicts(r *Result) []string {
 	if r.Trace == nil {
 		return v
 	}
-	told := make(map[float64]bool) // buses of one island have one frequency
+	growing, moving := false, false
 	for i, ch := range r.Trace.Channels {
 		col := r.Trace.Values(i)
 		switch {
@@ -404,22 +404,16 @@ func verdicts(r *Result) []string {
 					break
 				}
 			}
-		case strings.HasSuffix(ch.Name, ".frequency") && ch.Bus:
-			sum := 0.0
-			for _, x := range col {
-				sum += x
-			}
-			if told[sum] {
-				continue
-			}
-			told[sum] = true
-			switch {
-			case grows(r.Trace.Time, col):
-				v = append(v, "the frequency at "+ch.Owner+" swings with growing amplitude")
-			case unsettled(r.Trace.Time, col):
-				v = append(v, "the frequency at "+ch.Owner+" has not settled at the end")
-			}
+		case strings.HasSuffix(ch.Name, ".frequency"):
+			growing = growing || grows(r.Trace.Time, col)
+			moving = moving || unsettled(r.Trace.Time, col)
 		}
+	}
+	switch {
+	case growing:
+		v = append(v, "frequencies swing with growing amplitude")
+	case moving:
+		v = append(v, "frequencies have not settled at the end")
 	}
 	for _, n := range r.Notes {
 		if strings.Contains(n.Text, "trip") && n.Device != "" {
@@ -430,16 +424,16 @@ func verdicts(r *Result) []string {
 	return unique(v)
 }
 
-// grows reports whether the swing of a signal grows over the last half of the
-// time since its last event: its range in the last quarter exceeds that in the
-// quarter before, by a tenth, and is not negligible.
+// grows reports whether the swing of a signal grows over the time since the
+// last event: its range in the last quarter exceeds that in the second, by a
+// tenth, and is not negligible.
 func grows(t, x []float64) bool {
 	if len(t) == 0 {
 		return false
 	}
 	start, end := lastEvent(t), t[len(t)-1]
 	q := (end - start) / 4
-	early, late := span(t, x, end-2*q, end-q), span(t, x, end-q, end+1)
+	early, late := span(t, x, start+q, start+2*q), span(t, x, end-q, end+1)
 	return late > 1.1*early && late > 1e-3*math.Abs(x[len(x)-1])
 }
 
