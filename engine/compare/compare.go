@@ -37,7 +37,9 @@ type Options struct {
 	// record of the engine.
 	Channels []string
 	// Repetitions is the number of timed runs of each setting, taken in turns;
-	// 0 means 5. One more run of each, untimed, is compared.
+	// 0 means 5. One more run of each, untimed, is compared. A setting that
+	// takes more than five times the reference's steps plus 5000 counts as
+	// failed, unless Engine.Solver.MaxSteps says otherwise, and isn't timed.
 	Repetitions int
 	// Windows are the ends, s after an event, of the first and the second
 	// window in which deviations are told apart; zeros mean 0.02 and 0.3.
@@ -190,6 +192,9 @@ func Run(ctx context.Context, settings []Setting, o Options) (*Comparison, error
 		progress(s.Name)
 		opt := o.Engine
 		opt.Sample, opt.Record, opt.NoLedger = o.Sample, o.Channels, true
+		if i > 0 && opt.Solver.MaxSteps == 0 {
+			opt.Solver.MaxSteps = patience * (c.Results[0].Steps + 1000)
+		}
 		r := Result{Setting: s.Name}
 		sim, err := s.Start(&opt)
 		if err == nil {
@@ -214,6 +219,9 @@ func Run(ctx context.Context, settings []Setting, o Options) (*Comparison, error
 	for range o.Repetitions {
 		for i, s := range settings {
 			progress(s.Name)
+			if c.Results[i].Failure != "" {
+				continue
+			}
 			opt := o.Engine
 			opt.Record, opt.NoLedger = []string{}, true
 			sim, err := s.Start(&opt)
@@ -263,6 +271,11 @@ func Run(ctx context.Context, settings []Setting, o Options) (*Comparison, error
 	}
 	return c, nil
 }
+
+// patience is how many times the reference's steps (and a thousand) a setting
+// may take before it counts as failed: a reduction that rings on undamped modes
+// can take a thousand times as many.
+const patience = 5
 
 // group tells which group a channel belongs to by its unit.
 func group(unit string) string {
