@@ -525,7 +525,10 @@ func (c *Comparison) sentence(ref, r *Result, isRef bool) string {
 		return fmt.Sprintf("%s can't be run: %s.", r.Setting, brief(r.Failure))
 	}
 	var b strings.Builder
-	fmt.Fprintf(&b, "%s keeps %d of %d unknowns and takes %s", r.Setting, r.Unknowns, ref.Unknowns, duration(r.Time))
+	fmt.Fprintf(&b, "%s keeps %d of %d unknowns", r.Setting, r.Unknowns, ref.Unknowns)
+	if r.Time > 0 {
+		fmt.Fprintf(&b, " and takes %s", duration(r.Time))
+	}
 	if r.Speedup > 0 {
 		fmt.Fprintf(&b, " (%.2g times as fast)", r.Speedup)
 	}
