@@ -597,13 +597,29 @@ func (r *rosenbrock) Interpolate(dst []float64, which []int, t float64) {
 	}
 	w0, w1 := 1-th, th
 	if which == nil {
-		for i := range dst[:r.n] {
-			dst[i] = r.interpolateOne(i, w0, w1)
-		}
+		r.interpolateAll(dst[:r.n], w0, w1)
 		return
 	}
 	for i, c := range which {
 		dst[i] = r.interpolateOne(c, w0, w1)
+	}
+}
+
+// interpolateAll is interpolateOne for every component, with the coefficients
+// of the dense output at hand.
+func (r *rosenbrock) interpolateAll(dst []float64, w0, w1 float64) {
+	n := len(dst)
+	y0, y1 := r.prev[:n], r.y[:n]
+	k0, k1 := r.k[0][:n], r.k[1][:n]
+	if len(r.k) == 2 {
+		for i := range dst {
+			dst[i] = w0*y0[i] + w1*(y1[i]+w0*(k0[i]+w1*k1[i]))
+		}
+		return
+	}
+	k2 := r.k[2][:n]
+	for i := range dst {
+		dst[i] = w0*y0[i] + w1*(y1[i]+w0*(k0[i]+w1*(k1[i]+w1*k2[i])))
 	}
 }
 
