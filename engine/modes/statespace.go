@@ -416,39 +416,48 @@ func (r *reduction) stateSpace(relative bool) *StateSpace {
 	return s
 }
 
-// findZeros recognises islands whose common turn A leaves alone.
-func (s *StateSpace) findZeros(r *reduction) {
+// rotating lists the islands whose common turn leaves everything alone: J r = 0
+// for the rotation r, to rounding.
+func rotating(l *engine.Linear) []int {
 	const (
 		rounding = 1e-7 // of the sum of the terms that cancel in a row
 		still    = 1e-6 // per unit per second: what a steady state found to rounding leaves
 	)
-	n := len(r.indep)
-	place := make([]int, r.n)
-	for i := range place {
-		place[i] = -1
-	}
-	for k, st := range r.indep {
-		place[r.diff[st]] = k
-	}
-	for island, is := range r.l.Islands {
-		z := Zero{Island: island, Leader: is.Leader, Reference: place[is.Reference], Rotation: make([]float64, n)}
-		if z.Reference < 0 {
-			continue
-		}
-		for k, st := range r.indep {
-			z.Rotation[k] = is.Rotation[r.diff[st]]
-		}
-		ok := true
-		for i := range n {
-			sum, terms := 0.0, 0.0
-			for j, a := range s.A.RawRowView(i) {
-				p := a * z.Rotation[j]
-				sum += p
-				terms += math.Abs(p)
+	sum, terms := make([]float64, len(l.E)), make([]float64, len(l.E))
+	var list []int
+	for k, is := range l.Islands {
+		clear(sum)
+		clear(terms)
+		for j, turn := range is.Rotation {
+			for p := l.J.P[j]; p < l.J.P[j+1]; p++ {
+				v := turn * l.J.X[p]
+				sum[l.J.I[p]] += v
+				terms[l.J.I[p]] += math.Abs(v)
 			}
-			ok = ok && math.Abs(sum) <= rounding*terms+still*s.States[i].Base
+		}
+		ok := l.E[is.Reference] != 0
+		for i, v := range sum {
+			ok = ok && math.Abs(v) <= rounding*terms[i]+still*l.E[i]*l.Unknowns[i].Base
 		}
 		if ok {
+			list = append(list, k)
+		}
+	}
+	return list
+}
+
+// findZeros lists the rotational modes over the independent states.
+func (s *StateSpace) findZeros(r *reduction) {
+	for _, k := range rotating(r.l) {
+		is := r.l.Islands[k]
+		z := Zero{Island: k, Leader: is.Leader, Reference: -1, Rotation: make([]float64, len(r.indep))}
+		for j, st := range r.indep {
+			z.Rotation[j] = is.Rotation[r.diff[st]]
+			if r.diff[st] == is.Reference {
+				z.Reference = j
+			}
+		}
+		if z.Reference >= 0 {
 			s.Zeros = append(s.Zeros, z)
 		}
 	}

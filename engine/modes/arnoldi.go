@@ -1,0 +1,536 @@
+package modes
+
+import (
+	"fmt"
+	"math"
+	"math/cmplx"
+	"math/rand/v2"
+	"sort"
+
+	"gonum.org/v1/gonum/floats"
+	"gonum.org/v1/gonum/mat"
+)
+
+// nearest finds the modes nearest each shift.
+//
+// The operator (sigma E - J)^-1 E has the eigenvalues 1/(sigma - lambda) and
+// the pencil's eigenvectors; what the algebraic equations and hidden laws
+// exclude has eigenvalue zero and is never found. For a complex shift its real
+// part is taken, which keeps the iteration real (B. N. Parlett, Y. Saad,
+// "Complex shift and invert strategies for real matrices", Linear Algebra and
+// its Applications 88/89, 1987). The rotational modes, known in advance, are
+// taken out: with r the rotation and p its reference, x - r x_p follows the
+// other modes. Every mode found is refined by inverse iteration close to its
+// eigenvalue, which gives the left vector as well.
+func (rep *Report) nearest(r *reduction, o *Options) error {
+	a := &arnoldi{rep: rep, r: r, real: newShifted(r.l, false)}
+	for _, i := range r.diff {
+		a.base = append(a.base, r.l.Unknowns[i].Base)
+	}
+	for _, k := range rotating(r.l) {
+		is := &r.l.Islands[k]
+		turn := make([]float64, len(r.diff))
+		for s, i := range r.diff {
+			turn[s] = is.Rotation[i] / a.base[s]
+		}
+		a.turns = append(a.turns, turn)
+		a.refs = append(a.refs, r.state[is.Reference])
+		a.leaders = append(a.leaders, is.Leader)
+	}
+	if err := a.zeros(); err != nil {
+		return err
+	}
+	count := o.Count
+	if count == 0 {
+		count = 20
+	}
+	for _, shift := range o.Shifts {
+		if err := a.around(shift, count); err != nil {
+			return err
+		}
+	}
+	return nil
+}
+
+// arnoldi is the workspace of nearest. Vectors are over the differential
+// unknowns, right ones in per unit, left ones its inverse.
+type arnoldi struct {
+	rep     *Report
+	r       *reduction
+	base    []float64
+	turns   [][]float64 // rotations, and what they are about
+	refs    []int
+	leaders []string
+	real    *shifted
+	complex *shifted // made when first needed
+	full    []complex128
+}
+
+// at factors sigma E - J.
+func (a *arnoldi) at(sigma complex128) (*shifted, error) {
+	s := a.real
+	if imag(sigma) != 0 {
+		if a.complex == nil {
+			a.complex = newShifted(a.r.l, true)
+		}
+		s = a.complex
+	}
+	return s, s.factor(sigma)
+}
+
+// right overwrites x with (sigma E - J)^-1 E x.
+func (a *arnoldi) right(s *shifted, x []complex128) {
+	f := a.clear()
+	for k, i := range a.r.diff {
+		f[i] = x[k] * complex(a.r.l.E[i]*a.base[k], 0)
+	}
+	s.solve(f)
+	for k, i := range a.r.diff {
+		x[k] = f[i] / complex(a.base[k], 0)
+	}
+}
+
+// left overwrites w with w (sigma E - J)^-1 E.
+func (a *arnoldi) left(s *shifted, w []complex128) {
+	f := a.clear()
+	for k, i := range a.r.diff {
+		f[i] = w[k] / complex(a.base[k], 0)
+	}
+	s.solveTranspose(f)
+	for k, i := range a.r.diff {
+		w[k] = f[i] * complex(a.r.l.E[i]*a.base[k], 0)
+	}
+}
+
+func (a *arnoldi) clear() []complex128 {
+	if a.full == nil {
+		a.full = make([]complex128, len(a.r.l.E))
+	}
+	clear(a.full)
+	return a.full
+}
+
+// still takes the common turns out of x.
+func (a *arnoldi) still(x []float64) {
+	for k, turn := range a.turns {
+		p := a.refs[k]
+		floats.AddScaled(x, -x[p]/turn[p], turn)
+	}
+}
+
+// zeros appends the rotational modes.
+func (a *arnoldi) zeros() error {
+	if len(a.turns) == 0 {
+		return nil
+	}
+	// Close to zero the inverse is w times v over the shift, and little else.
+	s, err := a.at(complex(1e-6, 0))
+	if err != nil {
+		return err
+	}
+	for k, turn := range a.turns {
+		m := Mode{Zero: true, Island: a.leaders[k], Right: make([]complex128, len(turn)), Left: make([]complex128, len(turn))}
+		for i, t := range turn {
+			m.Right[i] = complex(t*a.base[i], 0)
+		}
+		// An impulse on this reference drives this island's turn alone.
+		m.Left[a.refs[k]] = 1
+		for range 3 {
+			a.left(s, m.Left)
+			unit(m.Left)
+		}
+		for i := range m.Left {
+			m.Left[i] /= complex(a.base[i], 0)
+		}
+		a.rep.addFull(m)
+	}
+	return nil
+}
+
+// unit scales x to length one.
+func unit(x []complex128) {
+	sum := 0.0
+	for _, v := range x {
+		sum += real(v)*real(v) + imag(v)*imag(v)
+	}
+	f := complex(1/math.Sqrt(sum), 0)
+	for i := range x {
+		x[i] *= f
+	}
+}
+
+// inner returns conj(x) y.
+func inner(x, y []complex128) complex128 {
+	sum := complex(0, 0)
+	for i, v := range x {
+		sum += cmplx.Conj(v) * y[i]
+	}
+	return sum
+}
+
+// around appends the modes nearest a shift, of which it finds a few more.
+func (a *arnoldi) around(shift complex128, count int) error {
+	if cmplx.Abs(shift) < 1e-3 && len(a.turns) > 0 {
+		shift = complex(1e-3, imag(shift)) // zero is an eigenvalue
+	}
+	s, err := a.at(shift)
+	if err != nil {
+		return err
+	}
+	want := min(count+4, len(a.r.indep))
+	guesses, missed := a.iterate(s, want)
+	// The eigenvalue of each guess by the operator itself, whose real part
+	// the iteration may have seen.
+	type found struct {
+		lambda complex128
+		x      []complex128
+	}
+	var list []found
+	for _, x := range guesses {
+		y := append([]complex128(nil), x...)
+		a.right(s, y)
+		list = append(list, found{shift - 1/inner(x, y), x})
+	}
+	sort.SliceStable(list, func(i, j int) bool {
+		return cmplx.Abs(list[i].lambda-shift) < cmplx.Abs(list[j].lambda-shift)
+	})
+	added := 0
+	for _, f := range list {
+		if added == count {
+			break
+		}
+		m, err := a.refine(f.lambda, f.x)
+		if err != nil {
+			return err
+		}
+		if imag(m.Value) < 0 {
+			m.Value = cmplx.Conj(m.Value)
+			for i := range m.Right {
+				m.Right[i], m.Left[i] = cmplx.Conj(m.Right[i]), cmplx.Conj(m.Left[i])
+			}
+		}
+		if !a.known(&m) {
+			a.rep.addFull(m)
+		}
+		added++
+	}
+	if missed > 0 {
+		a.rep.Notes = append(a.rep.Notes, fmt.Sprintf("near %.6g 1/s the iteration left %d modes inaccurate before they were refined one by one: others may be missing", shift, missed))
+	}
+	return nil
+}
+
+// known reports whether another shift has found the mode already.
+func (a *arnoldi) known(m *Mode) bool {
+	scaled := func(v []complex128) []complex128 {
+		x := make([]complex128, len(v))
+		for i := range v {
+			x[i] = v[i] / complex(a.base[i], 0)
+		}
+		unit(x)
+		return x
+	}
+	for k := range a.rep.Modes {
+		o := &a.rep.Modes[k]
+		if cmplx.Abs(o.Value-m.Value) <= 1e-7*cmplx.Abs(m.Value) && cmplx.Abs(inner(scaled(o.Right), scaled(m.Right))) > 0.999 {
+			return true
+		}
+	}
+	return false
+}
+
+// refine improves an eigenvalue and its right vector by inverse iteration and
+// finds the left one.
+func (a *arnoldi) refine(lambda complex128, x []complex128) (Mode, error) {
+	if math.Abs(imag(lambda)) < 1e-9*cmplx.Abs(lambda) {
+		lambda = complex(real(lambda), 0)
+	}
+	// So close that the other modes vanish in an iteration or two, and far
+	// enough for the factorisation.
+	mu := lambda + complex(1e-6*cmplx.Abs(lambda)+1e-9, 0)
+	s, err := a.at(mu)
+	if err != nil {
+		return Mode{}, err
+	}
+	m := Mode{}
+	x = append([]complex128(nil), x...)
+	y := make([]complex128, len(x))
+	for range 4 {
+		unit(x)
+		copy(y, x)
+		a.right(s, y)
+		m.Value = mu - 1/inner(x, y)
+		// (A - lambda) y = (mu - lambda) y - x
+		res, size := 0.0, 0.0
+		for i, v := range y {
+			d := (mu-m.Value)*v - x[i]
+			res += real(d)*real(d) + imag(d)*imag(d)
+			size += real(v)*real(v) + imag(v)*imag(v)
+		}
+		m.Residual = math.Sqrt(res/size) / cmplx.Abs(m.Value)
+		x, y = y, x
+		if m.Residual < 1e-11 {
+			break
+		}
+	}
+	if imag(mu) == 0 {
+		m.Value = complex(real(m.Value), 0)
+	}
+	w := make([]complex128, len(x))
+	rng := rand.New(rand.NewPCG(1, 1))
+	for i := range w {
+		w[i] = complex(rng.NormFloat64(), 0)
+	}
+	for range 4 {
+		unit(w)
+		a.left(s, w)
+	}
+	unit(x)
+	unit(w)
+	for i := range x {
+		x[i] *= complex(a.base[i], 0)
+		w[i] /= complex(a.base[i], 0)
+	}
+	m.Right, m.Left = x, w
+	m.Neutral = cmplx.Abs(m.Value) <= 1e-7
+	return m, nil
+}
+
+// iterate finds vectors of the wanted number of modes of the operator with the
+// largest eigenvalues, by Arnoldi's method restarted with the best invariant
+// subspace at hand (Krylov-Schur: G. W. Stewart, "A Krylov-Schur algorithm for
+// large eigenproblems", SIAM J. Matrix Analysis and Applications 23(3), 2001):
+//
+//	Op V = V S + v b'
+//
+// missed is how many of them have not converged.
+func (a *arnoldi) iterate(s *shifted, want int) (vectors [][]complex128, missed int) {
+	const (
+		restarts  = 60
+		tolerance = 1e-8 // of a Ritz value; refinement does the rest
+	)
+	n := len(a.r.diff)
+	order := min(len(a.r.indep)-len(a.turns), 4*want+20) // of the subspace
+	if order < 1 {
+		return nil, 0
+	}
+	op := func(dst, x []float64) {
+		f := a.clear()
+		for k, i := range a.r.diff {
+			f[i] = complex(x[k]*a.r.l.E[i]*a.base[k], 0)
+		}
+		if s.width == 1 {
+			// One solution instead of two.
+			b := s.b
+			for i, v := range f {
+				b[i] = real(v)
+			}
+			s.lu.Solve(b)
+			for k, i := range a.r.diff {
+				dst[k] = b[i] / a.base[k]
+			}
+		} else {
+			s.solve(f)
+			for k, i := range a.r.diff {
+				dst[k] = real(f[i]) / a.base[k]
+			}
+		}
+		a.still(dst)
+	}
+	rng := rand.New(rand.NewPCG(2, 2))
+	v := make([][]float64, order+1)
+	for k := range v {
+		v[k] = make([]float64, n)
+	}
+	// orthogonalise makes w orthogonal to v[:k], twice, adds the coefficients
+	// to h and returns the length left.
+	orthogonalise := func(w []float64, k int, h []float64) float64 {
+		for range 2 {
+			for j := range k {
+				c := floats.Dot(v[j], w)
+				h[j] += c
+				floats.AddScaled(w, -c, v[j])
+			}
+		}
+		return floats.Norm(w, 2)
+	}
+	scratch := make([]float64, order+1)
+	fresh := func(k int) {
+		for i := range v[k] {
+			v[k][i] = rng.NormFloat64()
+		}
+		// Twice through the operator, which leaves nothing of what the
+		// hidden laws exclude.
+		w := make([]float64, n)
+		for range 2 {
+			op(w, v[k])
+			copy(v[k], w)
+			floats.Scale(1/floats.Norm(v[k], 2), v[k])
+		}
+		floats.Scale(1/orthogonalise(v[k], k, scratch), v[k])
+	}
+	fresh(0)
+	sm := mat.NewDense(order, order, nil)
+	b := make([]float64, order) // coupling to the vector after the subspace
+	have := 0
+	var e mat.Eigen
+	var y mat.CDense
+	for restart := 0; ; restart++ {
+		for k := have; k < order; k++ {
+			// Row k: how the vectors before couple to v[k].
+			for j := range k {
+				sm.Set(k, j, b[j])
+			}
+			clear(b)
+			w := v[k+1]
+			op(w, v[k])
+			before := floats.Norm(w, 2)
+			h := make([]float64, k+1)
+			left := orthogonalise(w, k+1, h)
+			for j, c := range h {
+				sm.Set(j, k, c)
+			}
+			if left > 1e-13*before {
+				floats.Scale(1/left, w)
+				b[k] = left
+			} else if k+1 < order {
+				fresh(k + 1) // the subspace is invariant: another start
+			}
+		}
+		if !e.Factorize(sm, mat.EigenRight) {
+			return nil, want
+		}
+		theta := e.Values(nil)
+		e.VectorsTo(&y)
+		rank := make([]int, 0, order)
+		for k, t := range theta {
+			if imag(t) >= 0 {
+				rank = append(rank, k)
+			}
+		}
+		sort.SliceStable(rank, func(i, j int) bool { return cmplx.Abs(theta[rank[i]]) > cmplx.Abs(theta[rank[j]]) })
+		take := rank[:min(want, len(rank))]
+		missed = 0
+		for _, k := range take {
+			res, norm := complex(0, 0), 0.0
+			for j := range order {
+				c := y.At(j, k)
+				res += complex(b[j], 0) * c
+				norm += real(c)*real(c) + imag(c)*imag(c)
+			}
+			if cmplx.Abs(res) > tolerance*cmplx.Abs(theta[k])*math.Sqrt(norm) {
+				missed++
+			}
+		}
+		if missed == 0 || restart == restarts || order == len(a.r.indep)-len(a.turns) {
+			for _, k := range take {
+				if cmplx.Abs(theta[k]) < 1e-14*cmplx.Abs(theta[rank[0]]) {
+					continue // the operator's null space
+				}
+				x := make([]complex128, n)
+				for j := range order {
+					c := y.At(j, k)
+					for i, u := range v[j] {
+						x[i] += c * complex(u, 0)
+					}
+				}
+				unit(x)
+				vectors = append(vectors, x)
+			}
+			return vectors, missed
+		}
+		// Keep the wanted subspace and half of the rest.
+		room := (dimension(theta, take) + order) / 2
+		var columns [][]float64
+		for _, k := range rank {
+			re, im := make([]float64, order), make([]float64, order)
+			for j := range order {
+				re[j], im[j] = real(y.At(j, k)), imag(y.At(j, k))
+			}
+			if imag(theta[k]) == 0 {
+				columns = append(columns, re)
+			} else {
+				columns = append(columns, re, im)
+			}
+			if len(columns) >= room {
+				break
+			}
+		}
+		have = min(len(columns), order-1)
+		q := orthonormal(columns[:have])
+		a.rotate(v, q, order, sm, b)
+	}
+}
+
+// dimension is that of the real subspace of the modes listed.
+func dimension(theta []complex128, list []int) int {
+	d := 0
+	for _, k := range list {
+		d++
+		if imag(theta[k]) != 0 {
+			d++
+		}
+	}
+	return d
+}
+
+// orthonormal returns an orthonormal basis of the columns.
+func orthonormal(columns [][]float64) *mat.Dense {
+	m := mat.NewDense(len(columns[0]), len(columns), nil)
+	for k, c := range columns {
+		m.SetCol(k, c)
+	}
+	var qr mat.QR
+	qr.Factorize(m)
+	var q mat.Dense
+	qr.QTo(&q)
+	return mat.DenseCopyOf(q.Slice(0, len(columns[0]), 0, len(columns)))
+}
+
+// rotate makes V Q the basis, Q'S Q its matrix and b'Q its coupling; the
+// vector after the subspace moves to its place.
+func (a *arnoldi) rotate(v [][]float64, q *mat.Dense, order int, sm *mat.Dense, b []float64) {
+	_, have := q.Dims()
+	var sq, next mat.Dense
+	sq.Mul(sm, q)
+	next.Mul(q.T(), &sq)
+	sm.Zero()
+	for i := range have {
+		for j := range have {
+			sm.Set(i, j, next.At(i, j))
+		}
+	}
+	c := make([]float64, order)
+	for k := range have {
+		for j := range order {
+			c[k] += b[j] * q.At(j, k)
+		}
+	}
+	copy(b, c)
+	row := make([]float64, have)
+	for i := range v[0] {
+		clear(row)
+		for j := range order {
+			u := v[j][i]
+			for k, w := range q.RawRowView(j) {
+				row[k] += u * w
+			}
+		}
+		for k, w := range row {
+			v[k][i] = w
+		}
+	}
+	copy(v[have], v[order])
+}
+
+// DefaultShifts are points along the imaginary axis, a little to the right of
+// it, from which [Analyse] finds the rightmost modes of most inverter-rich
+// networks: 0, 5, 15, 40, 100 and 300 Hz. An unstable mode further away than
+// Count modes from all of them is missed.
+func DefaultShifts() []complex128 {
+	var s []complex128
+	for _, hz := range []float64{0, 5, 15, 40, 100, 300} {
+		s = append(s, complex(1, 2*math.Pi*hz))
+	}
+	return s
+}
