@@ -118,6 +118,17 @@ func (a *arnoldi) still(x []float64) {
 	}
 }
 
+// stillComplex is still for complex vectors.
+func (a *arnoldi) stillComplex(x []complex128) {
+	for k, turn := range a.turns {
+		p := a.refs[k]
+		c := -x[p] / complex(turn[p], 0)
+		for i, t := range turn {
+			x[i] += c * complex(t, 0)
+		}
+	}
+}
+
 // zeros appends the rotational modes.
 func (a *arnoldi) zeros() error {
 	if len(a.turns) == 0 {
@@ -185,23 +196,37 @@ func (a *arnoldi) around(shift complex128, count int) error {
 		lambda complex128
 		x      []complex128
 	}
+	isReal := func(x []complex128) bool {
+		for _, v := range x {
+			if imag(v) != 0 {
+				return false
+			}
+		}
+		return true
+	}
 	var list []found
 	for _, x := range guesses {
 		y := append([]complex128(nil), x...)
 		a.right(s, y)
-		list = append(list, found{shift - 1/inner(x, y), x})
+		a.stillComplex(y)
+		lambda := shift - 1/inner(x, y)
+		if isReal(x) {
+			lambda = complex(real(lambda), 0)
+		}
+		list = append(list, found{lambda, x})
 	}
 	sort.SliceStable(list, func(i, j int) bool {
 		return cmplx.Abs(list[i].lambda-shift) < cmplx.Abs(list[j].lambda-shift)
 	})
-	added := 0
-	for _, f := range list {
-		if added == count {
-			break
-		}
+	bad := 0
+	for _, f := range list[:min(count, len(list))] {
 		m, err := a.refine(f.lambda, f.x)
 		if err != nil {
 			return err
+		}
+		if !(m.Residual < 1e-6) {
+			bad++
+			continue
 		}
 		if imag(m.Value) < 0 {
 			m.Value = cmplx.Conj(m.Value)
@@ -212,10 +237,9 @@ func (a *arnoldi) around(shift complex128, count int) error {
 		if !a.known(&m) {
 			a.rep.addFull(m)
 		}
-		added++
 	}
-	if missed > 0 {
-		a.rep.Notes = append(a.rep.Notes, fmt.Sprintf("near %.6g 1/s the iteration left %d modes inaccurate before they were refined one by one: others may be missing", shift, missed))
+	if missed > 0 || bad > 0 {
+		a.rep.Notes = append(a.rep.Notes, fmt.Sprintf("near %.6g 1/s the iteration had not converged for %d modes, and %d were given up: there may be others than those listed", shift, missed, bad))
 	}
 	return nil
 }
@@ -242,9 +266,6 @@ func (a *arnoldi) known(m *Mode) bool {
 // refine improves an eigenvalue and its right vector by inverse iteration and
 // finds the left one.
 func (a *arnoldi) refine(lambda complex128, x []complex128) (Mode, error) {
-	if math.Abs(imag(lambda)) < 1e-9*cmplx.Abs(lambda) {
-		lambda = complex(real(lambda), 0)
-	}
 	// So close that the other modes vanish in an iteration or two, and far
 	// enough for the factorisation.
 	mu := lambda + complex(1e-6*cmplx.Abs(lambda)+1e-9, 0)
@@ -259,6 +280,7 @@ func (a *arnoldi) refine(lambda complex128, x []complex128) (Mode, error) {
 		unit(x)
 		copy(y, x)
 		a.right(s, y)
+		a.stillComplex(y)
 		m.Value = mu - 1/inner(x, y)
 		// (A - lambda) y = (mu - lambda) y - x
 		res, size := 0.0, 0.0
@@ -275,6 +297,11 @@ func (a *arnoldi) refine(lambda complex128, x []complex128) (Mode, error) {
 	}
 	if imag(mu) == 0 {
 		m.Value = complex(real(m.Value), 0)
+	}
+	// What the mode turns: close to lambda the mode itself outgrows the turn.
+	for range 2 {
+		unit(x)
+		a.right(s, x)
 	}
 	w := make([]complex128, len(x))
 	rng := rand.New(rand.NewPCG(1, 1))
@@ -338,9 +365,10 @@ func (a *arnoldi) iterate(s *shifted, want int) (vectors [][]complex128, missed 
 		a.still(dst)
 	}
 	rng := rand.New(rand.NewPCG(2, 2))
+	basis := mat.NewDense(order+1, n, nil) // a vector a row
 	v := make([][]float64, order+1)
 	for k := range v {
-		v[k] = make([]float64, n)
+		v[k] = basis.RawRowView(k)
 	}
 	// orthogonalise makes w orthogonal to v[:k], twice, adds the coefficients
 	// to h and returns the length left.
@@ -458,7 +486,7 @@ func (a *arnoldi) iterate(s *shifted, want int) (vectors [][]complex128, missed 
 		}
 		have = min(len(columns), order-1)
 		q := orthonormal(columns[:have])
-		a.rotate(v, q, order, sm, b)
+		rotate(basis, q, sm, b)
 	}
 }
 
@@ -488,39 +516,23 @@ func orthonormal(columns [][]float64) *mat.Dense {
 }
 
 // rotate makes V Q the basis, Q'S Q its matrix and b'Q its coupling; the
-// vector after the subspace moves to its place.
-func (a *arnoldi) rotate(v [][]float64, q *mat.Dense, order int, sm *mat.Dense, b []float64) {
-	_, have := q.Dims()
+// vector after the subspace, the last one, moves to its place.
+func rotate(v, q, s *mat.Dense, b []float64) {
+	order, have := q.Dims()
+	_, n := v.Dims()
 	var sq, next mat.Dense
-	sq.Mul(sm, q)
+	sq.Mul(s, q)
 	next.Mul(q.T(), &sq)
-	sm.Zero()
-	for i := range have {
-		for j := range have {
-			sm.Set(i, j, next.At(i, j))
-		}
-	}
-	c := make([]float64, order)
-	for k := range have {
-		for j := range order {
-			c[k] += b[j] * q.At(j, k)
-		}
-	}
-	copy(b, c)
-	row := make([]float64, have)
-	for i := range v[0] {
-		clear(row)
-		for j := range order {
-			u := v[j][i]
-			for k, w := range q.RawRowView(j) {
-				row[k] += u * w
-			}
-		}
-		for k, w := range row {
-			v[k][i] = w
-		}
-	}
-	copy(v[have], v[order])
+	s.Zero()
+	s.Slice(0, have, 0, have).(*mat.Dense).Copy(&next)
+	var c mat.VecDense
+	c.MulVec(q.T(), mat.NewVecDense(order, b))
+	clear(b)
+	copy(b, c.RawVector().Data)
+	var turned mat.Dense
+	turned.Mul(q.T(), v.Slice(0, order, 0, n))
+	v.Slice(0, have, 0, n).(*mat.Dense).Copy(&turned)
+	copy(v.RawRowView(have), v.RawRowView(order))
 }
 
 // DefaultShifts are points along the imaginary axis, a little to the right of
