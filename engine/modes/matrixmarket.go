@@ -173,7 +173,6 @@ func ReadMatrixMarket(r io.Reader) (*mat.Dense, error) {
 func (s *StateSpace) WriteNames(w io.Writer) error {
 	c := csv.NewWriter(w)
 	rows := [][]string{{"kind", "index", "name", "unit", "base", "value", "owner", "dynamics"}}
-	number := func(v float64) string { return strconv.FormatFloat(v, 'g', -1, 64) }
 	for i, u := range s.States {
 		rows = append(rows, []string{"state", strconv.Itoa(i + 1), u.Name, u.Unit, number(u.Base), "", u.Owner, u.Dynamics})
 	}
