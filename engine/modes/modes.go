@@ -64,8 +64,8 @@ type Mode struct {
 
 // Share is a part of a mode's participation, 0 to 1.
 type Share struct {
-	Name  string
-	Value float64
+	Name  string  `json:"name"`
+	Value float64 `json:"share"`
 }
 
 // Report is the result of an analysis.

@@ -10,9 +10,10 @@ import (
 // Timescale is a group of modes that lie close together in magnitude, far from
 // the next.
 type Timescale struct {
-	Slowest, Fastest float64 // magnitudes, 1/s
-	Modes            []int   // numbers, slowest first
-	ByDynamics       []Share // mean over the modes
+	Slowest    float64 `json:"slowest_1/s"` // magnitude
+	Fastest    float64 `json:"fastest_1/s"`
+	Modes      []int   `json:"modes"`    // numbers, slowest first
+	ByDynamics []Share `json:"dynamics"` // mean over the modes
 }
 
 // timescales groups the modes by gaps in magnitude.
