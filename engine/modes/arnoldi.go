@@ -15,13 +15,20 @@ import (
 //
 // The operator (sigma E - J)^-1 E has the eigenvalues 1/(sigma - lambda) and
 // the pencil's eigenvectors; what the algebraic equations and hidden laws
-// exclude has eigenvalue zero and is never found. For a complex shift its real
-// part is taken, which keeps the iteration real (B. N. Parlett, Y. Saad,
-// "Complex shift and invert strategies for real matrices", Linear Algebra and
-// its Applications 88/89, 1987). The rotational modes, known in advance, are
-// taken out: with r the rotation and p its reference, x - r x_p follows the
-// other modes. Every mode found is refined by inverse iteration close to its
-// eigenvalue, which gives the left vector as well.
+// exclude has eigenvalue zero and is never found. For a complex shift its
+// imaginary part is taken, which keeps the iteration real and has the
+// eigenvalues
+//
+//	-Im sigma / ((sigma - lambda) (conj sigma - lambda))
+//
+// so that modes come in the order of the product of their distances to the
+// shift and to its conjugate (B. N. Parlett, Y. Saad, "Complex shift and invert
+// strategies for real matrices", Linear Algebra and its Applications 88/89,
+// 1987; the real part, the other choice there, is blind to some modes close
+// by). The rotational modes, known in advance, are taken out: with r the
+// rotation and p its reference, x - r x_p follows the other modes. Every mode
+// found is refined by inverse iteration close to its eigenvalue, which gives
+// the left vector as well.
 func (rep *Report) nearest(r *reduction, o *Options) error {
 	a := &arnoldi{rep: rep, r: r, real: newShifted(r.l, false)}
 	for _, i := range r.diff {
@@ -188,10 +195,7 @@ func (a *arnoldi) around(shift complex128, count int) error {
 	if err != nil {
 		return err
 	}
-	want := min(count+4, len(a.r.indep))
-	guesses, missed := a.iterate(s, want)
-	// The eigenvalue of each guess by the operator itself, whose real part
-	// the iteration may have seen.
+	guesses, missed := a.guess(s, count)
 	type found struct {
 		lambda complex128
 		x      []complex128
@@ -216,7 +220,7 @@ func (a *arnoldi) around(shift complex128, count int) error {
 		list = append(list, found{lambda, x})
 	}
 	sort.SliceStable(list, func(i, j int) bool {
-		return cmplx.Abs(list[i].lambda-shift) < cmplx.Abs(list[j].lambda-shift)
+		return distance(list[i].lambda, shift) < distance(list[j].lambda, shift)
 	})
 	bad := 0
 	for _, f := range list[:min(count, len(list))] {
@@ -323,64 +327,82 @@ func (a *arnoldi) refine(lambda complex128, x []complex128) (Mode, error) {
 	return m, nil
 }
 
-// iterate finds vectors of the wanted number of modes of the operator with the
-// largest eigenvalues, by Arnoldi's method restarted with the best invariant
-// subspace at hand (Krylov-Schur: G. W. Stewart, "A Krylov-Schur algorithm for
-// large eigenproblems", SIAM J. Matrix Analysis and Applications 23(3), 2001):
-//
-//	Op V = V S + v b'
-//
-// missed is how many of them have not converged.
-func (a *arnoldi) iterate(s *shifted, want int) (vectors [][]complex128, missed int) {
-	const (
-		restarts  = 60
-		tolerance = 1e-8 // of a Ritz value; refinement does the rest
-	)
+// distance is that of a mode from a shift, for a complex one the product of
+// those to it and to its conjugate.
+func distance(lambda, shift complex128) float64 {
+	return cmplx.Abs(lambda-shift) * cmplx.Abs(lambda-cmplx.Conj(shift))
+}
+
+// margin is how many modes more than asked for the iteration settles, so that
+// those of a cluster at the rim are told apart.
+func margin(count int) int { return 4 + count/4 }
+
+// guess finds vectors of the modes nearest the shift that s holds, of which
+// count have converged but those that missed counts.
+func (a *arnoldi) guess(s *shifted, count int) (vectors [][]complex128, missed int) {
 	n := len(a.r.diff)
-	order := min(len(a.r.indep)-len(a.turns), 4*want+20) // of the subspace
-	if order < 1 {
+	rank := len(a.r.indep) - len(a.turns)
+	if rank == 0 {
 		return nil, 0
 	}
+	y := make([]float64, s.width*len(a.r.l.E))
 	op := func(dst, x []float64) {
-		f := a.clear()
+		clear(y)
 		for k, i := range a.r.diff {
-			f[i] = complex(x[k]*a.r.l.E[i]*a.base[k], 0)
+			y[s.width*i] = x[k] * a.r.l.E[i] * a.base[k]
 		}
-		if s.width == 1 {
-			// One solution instead of two.
-			b := s.b
-			for i, v := range f {
-				b[i] = real(v)
-			}
-			s.lu.Solve(b)
-			for k, i := range a.r.diff {
-				dst[k] = b[i] / a.base[k]
-			}
-		} else {
-			s.solve(f)
-			for k, i := range a.r.diff {
-				dst[k] = real(f[i]) / a.base[k]
-			}
+		s.lu.Solve(y)
+		// The imaginary part of a complex solution stands behind the real one.
+		for k, i := range a.r.diff {
+			dst[k] = y[s.width*i+s.width-1] / a.base[k]
 		}
 		a.still(dst)
 	}
+	count = min(count, rank)
+	return krylovSchur(op, n, rank, count, min(count+margin(count), rank))
+}
+
+// krylovSchur finds vectors of the wanted number of modes, real eigenvalues or
+// pairs, of a real operator of order n and the given rank with
+// the largest magnitudes, by Arnoldi's method restarted with the best invariant
+// subspace at hand (G. W. Stewart, "A Krylov-Schur algorithm for large
+// eigenproblems", SIAM J. Matrix Analysis and Applications 23(3), 2001):
+//
+//	Op V = V S + v b'
+//
+// The first count of them must converge; missed is how many have not.
+func krylovSchur(op func(dst, x []float64), n, rank, count, want int) (vectors [][]complex128, missed int) {
+	const (
+		restarts  = 15   // more help only inside a dense cluster, where any shift is a poor one
+		tolerance = 1e-8 // of a Ritz value; refinement does the rest
+	)
+	order := min(rank, 4*want+20) // of the subspace
 	rng := rand.New(rand.NewPCG(2, 2))
 	basis := mat.NewDense(order+1, n, nil) // a vector a row
 	v := make([][]float64, order+1)
 	for k := range v {
 		v[k] = basis.RawRowView(k)
 	}
-	// orthogonalise makes w orthogonal to v[:k], twice, adds the coefficients
-	// to h and returns the length left.
+	// orthogonalise makes w orthogonal to v[:k], adds the coefficients to h
+	// and returns the length left. A second pass is made where the first has
+	// cancelled much (J. W. Daniel, W. B. Gragg, L. Kaufman, G. W. Stewart,
+	// Math. Comp. 30, 1976).
 	orthogonalise := func(w []float64, k int, h []float64) float64 {
-		for range 2 {
-			for j := range k {
-				c := floats.Dot(v[j], w)
-				h[j] += c
-				floats.AddScaled(w, -c, v[j])
+		part := basis.Slice(0, k, 0, n)
+		c, x := mat.NewVecDense(k, nil), mat.NewVecDense(n, w)
+		var d mat.VecDense
+		before := floats.Norm(w, 2)
+		for {
+			c.MulVec(part, x)
+			d.MulVec(part.T(), c)
+			floats.Sub(w, d.RawVector().Data)
+			floats.Add(h[:k], c.RawVector().Data)
+			after := floats.Norm(w, 2)
+			if after > 0.7*before || after < 1e-14*floats.Norm(h[:k], 2) {
+				return after
 			}
+			before = after
 		}
-		return floats.Norm(w, 2)
 	}
 	scratch := make([]float64, order+1)
 	fresh := func(k int) {
@@ -395,7 +417,11 @@ func (a *arnoldi) iterate(s *shifted, want int) (vectors [][]complex128, missed 
 			copy(v[k], w)
 			floats.Scale(1/floats.Norm(v[k], 2), v[k])
 		}
-		floats.Scale(1/orthogonalise(v[k], k, scratch), v[k])
+		left := floats.Norm(v[k], 2)
+		if k > 0 {
+			left = orthogonalise(v[k], k, scratch)
+		}
+		floats.Scale(1/left, v[k])
 	}
 	fresh(0)
 	sm := mat.NewDense(order, order, nil)
@@ -426,20 +452,20 @@ func (a *arnoldi) iterate(s *shifted, want int) (vectors [][]complex128, missed 
 			}
 		}
 		if !e.Factorize(sm, mat.EigenRight) {
-			return nil, want
+			return nil, count
 		}
 		theta := e.Values(nil)
 		e.VectorsTo(&y)
-		rank := make([]int, 0, order)
+		sorted := make([]int, 0, order)
 		for k, t := range theta {
 			if imag(t) >= 0 {
-				rank = append(rank, k)
+				sorted = append(sorted, k)
 			}
 		}
-		sort.SliceStable(rank, func(i, j int) bool { return cmplx.Abs(theta[rank[i]]) > cmplx.Abs(theta[rank[j]]) })
-		take := rank[:min(want, len(rank))]
+		sort.SliceStable(sorted, func(i, j int) bool { return cmplx.Abs(theta[sorted[i]]) > cmplx.Abs(theta[sorted[j]]) })
+		take := sorted[:min(want, len(sorted))]
 		missed = 0
-		for _, k := range take {
+		for _, k := range take[:min(count, len(take))] {
 			res, norm := complex(0, 0), 0.0
 			for j := range order {
 				c := y.At(j, k)
@@ -450,9 +476,9 @@ func (a *arnoldi) iterate(s *shifted, want int) (vectors [][]complex128, missed 
 				missed++
 			}
 		}
-		if missed == 0 || restart == restarts || order == len(a.r.indep)-len(a.turns) {
+		if missed == 0 || restart == restarts || order == rank {
 			for _, k := range take {
-				if cmplx.Abs(theta[k]) < 1e-14*cmplx.Abs(theta[rank[0]]) {
+				if cmplx.Abs(theta[k]) < 1e-14*cmplx.Abs(theta[sorted[0]]) {
 					continue // the operator's null space
 				}
 				x := make([]complex128, n)
@@ -470,7 +496,7 @@ func (a *arnoldi) iterate(s *shifted, want int) (vectors [][]complex128, missed 
 		// Keep the wanted subspace and half of the rest.
 		room := (dimension(theta, take) + order) / 2
 		var columns [][]float64
-		for _, k := range rank {
+		for _, k := range sorted {
 			re, im := make([]float64, order), make([]float64, order)
 			for j := range order {
 				re[j], im[j] = real(y.At(j, k)), imag(y.At(j, k))

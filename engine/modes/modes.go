@@ -112,7 +112,8 @@ func (m *Mode) String() string {
 // them by the QR algorithm, for up to a few thousand states: the time grows
 // with the cube of their number. With shifts it finds the Count modes nearest
 // each by shift-invert Arnoldi iteration, in a time that grows little faster
-// than the system. An iteration may miss a mode of a tight cluster, so the
+// than the system; nearest a complex shift is what has the least product of
+// distances to it and to its conjugate, which is fair to pairs. An iteration may miss a mode of a tight cluster, so the
 // verdict of a report that isn't All is about what was found. o may be nil.
 func Analyse(l *engine.Linear, o *Options) (*Report, error) {
 	if o == nil {
