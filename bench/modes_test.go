@@ -9,6 +9,8 @@ import (
 	"strings"
 	"testing"
 
+	"gonum.org/v1/gonum/mat"
+
 	"islet/cases"
 	"islet/devices"
 	"islet/engine"
@@ -541,4 +543,88 @@ func BenchmarkLinearise(b *testing.B) {
 			}
 		}
 	})
+}
+
+// Every shipped case at its operating point: one rotational mode an island, the
+// eigenvalues' sum is the trace, and the vectors are eigenvectors. All of them
+// are stable by design.
+func TestModesOfShippedCases(t *testing.T) {
+	names := []string{"mesh-20"}
+	for _, s := range cases.Shipped() {
+		if s.Name != "mesh-N" {
+			names = append(names, s.Name)
+		}
+	}
+	for _, name := range names {
+		c, err := cases.Open(name)
+		if err != nil {
+			t.Fatal(err)
+		}
+		m, err := c.Start(nil)
+		if err != nil {
+			t.Fatal(err)
+		}
+		l, err := m.Linearise(nil)
+		if err != nil {
+			t.Errorf("%s: %v", name, err)
+			continue
+		}
+		r, err := modes.Analyse(l, nil)
+		if err != nil {
+			t.Errorf("%s: %v", name, err)
+			continue
+		}
+		s, err := modes.Reduce(l, false)
+		if err != nil {
+			t.Errorf("%s: %v", name, err)
+			continue
+		}
+		if l.Drift > 1e-6 || !r.Stable {
+			t.Errorf("%s: drift %g, notes %q, stable %v (%s)", name, l.Drift, l.Notes, r.Stable, r.Rightmost())
+		}
+		at := make(map[string]int)
+		for i, u := range r.States {
+			at[u.Name] = i
+		}
+		zeros := 0
+		sum, size := 0.0, 0.0
+		for i := range r.Modes {
+			v := &r.Modes[i]
+			if v.Zero {
+				zeros++
+			}
+			if v.Neutral {
+				t.Errorf("%s: %s is neutral", name, v)
+			}
+			sum += real(v.Value)
+			if imag(v.Value) != 0 {
+				sum += real(v.Value)
+			}
+			// The QR algorithm is backward stable: what is left is rounding
+			// times the matrix, whatever the mode.
+			worst, scale := 0.0, 0.0
+			for k, u := range s.States {
+				av, row := complex(0, 0), 0.0
+				for j, x := range s.States {
+					a := s.A.At(k, j) / u.Base
+					av += complex(a, 0) * v.Right[at[x.Name]]
+					row += math.Abs(a) * x.Base
+				}
+				scale = math.Max(scale, row)
+				worst = math.Max(worst, cmplx.Abs(av-v.Value*v.Right[at[u.Name]]/complex(u.Base, 0)))
+			}
+			if worst > 1e-13*scale {
+				t.Errorf("%s: %s: A v - lambda v is %.3g, |A| is %.3g", name, v, worst, scale)
+			}
+		}
+		for k := range s.States {
+			size += math.Abs(s.A.At(k, k))
+		}
+		if tr := mat.Trace(s.A); math.Abs(sum-tr) > 1e-10*size {
+			t.Errorf("%s: eigenvalues sum to %.12g, the trace is %.12g", name, sum, tr)
+		}
+		if zeros != len(l.Islands) {
+			t.Errorf("%s: %d rotational modes of %d islands", name, zeros, len(l.Islands))
+		}
+	}
 }

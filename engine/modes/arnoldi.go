@@ -293,7 +293,7 @@ func (a *arnoldi) refine(lambda complex128, x []complex128) (Mode, error) {
 			res += real(d)*real(d) + imag(d)*imag(d)
 			size += real(v)*real(v) + imag(v)*imag(v)
 		}
-		m.Residual = math.Sqrt(res/size) / cmplx.Abs(m.Value)
+		m.Residual = math.Sqrt(res/size) / math.Max(cmplx.Abs(m.Value), 1e-3)
 		x, y = y, x
 		if m.Residual < 1e-11 {
 			break

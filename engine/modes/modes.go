@@ -57,8 +57,8 @@ type Mode struct {
 	// tell of (nearly) equal eigenvalues with one eigenvector, whose
 	// participation factors mean little.
 	Condition float64
-	// Residual is |A v - lambda v| / |lambda v| in per unit where the mode
-	// was found by iteration, 0 else.
+	// Residual is |A v - lambda v| / |v| in per unit, over |lambda| or, if
+	// that is less, 1e-3 1/s, where the mode was found by iteration; 0 else.
 	Residual float64
 }
 

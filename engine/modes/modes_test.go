@@ -677,3 +677,93 @@ func TestProposal(t *testing.T) {
 		}
 	}
 }
+
+// Two islands turn each for itself; two ideal sources in one island hold an
+// angle between them that nothing moves, a neutral mode; a dead bus has no place
+// in the system.
+func TestIslandsAndIdealSources(t *testing.T) {
+	for _, o := range []*modes.Options{nil, {Shifts: []complex128{-100}, Count: 50}} {
+		s := two(t)
+		s.add("far", &machine{v0: 326, r: 0.1, l: 1e-3, w0: 1.01 * w50, m: 1e-4}, "far-bus")
+		s.add("far-load", &coil{r: 20}, "far-bus")
+		s.add("nothing", &coil{r: 20}, "dead-bus")
+		l := linear(t, s.start(nil), nil)
+		if _, ok := l.BusUnknown("dead-bus"); ok || len(l.Islands) != 2 {
+			t.Errorf("the dead bus is in service (%v), or %d islands are not two", ok, len(l.Islands))
+		}
+		var leaders []string
+		for _, m := range analyse(t, l, o).Modes {
+			if m.Zero {
+				leaders = append(leaders, m.Island)
+				for k, p := range m.Participation {
+					if u := l.Unknowns; p > 1e-6 && (m.Island == "far") != strings.HasPrefix(u[stateIndex(l, k)].Name, "far") {
+						t.Errorf("turn of %s's island: %s takes part by %g", m.Island, u[stateIndex(l, k)].Name, p)
+					}
+				}
+			}
+		}
+		if len(leaders) != 2 {
+			t.Errorf("options %+v: common turns of %q, want two", o, leaders)
+		}
+
+		s = newNet(t, 50)
+		s.add("left", &machine{v0: 326, r: 0.1, l: 1e-3, w0: w50}, "bus")
+		s.add("right", &machine{v0: 320, r: 0.2, l: 3e-3, w0: w50}, "bus")
+		s.add("load", &coil{r: 20}, "bus")
+		m := s.start(&engine.Options{FromRest: true, Tolerance: 1e-10})
+		if _, err := m.Run(context.Background(), 0.5); err != nil {
+			t.Fatal(err)
+		}
+		r := analyse(t, linear(t, m, nil), o)
+		zeros, neutral := 0, 0
+		for _, m := range r.Modes {
+			if m.Zero {
+				zeros++
+			}
+			if m.Neutral {
+				neutral++
+			}
+		}
+		if zeros != 1 || neutral != 1 || !r.Stable {
+			t.Errorf("options %+v: %d rotational and %d neutral modes, stable %v; want 1, 1 and true", o, zeros, neutral, r.Stable)
+		}
+	}
+}
+
+// stateIndex is the unknown behind state k of a report.
+func stateIndex(l *engine.Linear, k int) int {
+	for i, e := range l.E {
+		if e != 0 {
+			if k == 0 {
+				return i
+			}
+			k--
+		}
+	}
+	return -1
+}
+
+// A system whose only state is the common angle has no other mode.
+func TestNothingButTheTurn(t *testing.T) {
+	s := newNet(t, 50)
+	s.add("source", &machine{v0: 326, r: 0.1, l: 1e-3, w0: w50, quasi: true}, "bus")
+	s.add("load", &coil{r: 20}, "bus")
+	l := linear(t, s.start(nil), nil)
+	for _, o := range []*modes.Options{nil, {Shifts: []complex128{0}}} {
+		r := analyse(t, l, o)
+		if len(r.Modes) != 1 || !r.Modes[0].Zero || !r.Stable || r.Rightmost() != nil {
+			t.Errorf("modes: %+v", r.Modes)
+		}
+		var b bytes.Buffer
+		if err := r.WriteText(&b); err != nil || !strings.Contains(b.String(), "no mode to judge") {
+			t.Errorf("%v:\n%s", err, &b)
+		}
+	}
+	if rel, err := modes.Reduce(l, true); err != nil || rel.A != nil || len(rel.States) != 0 {
+		t.Errorf("relative: %+v, %v", rel, err)
+	}
+	full, err := modes.Reduce(l, false)
+	if err != nil || full.A.At(0, 0) != 0 {
+		t.Errorf("%+v, %v", full, err)
+	}
+}
