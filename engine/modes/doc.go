@@ -16,5 +16,7 @@
 // Eigenvalues are in 1/s, deviations grow as e^(lambda t). A mode is a real
 // eigenvalue or a complex pair, of which the one with positive imaginary part
 // stands for both. Frequencies of modes are |Im lambda|/2 pi, Hz, seen in the
-// rotating network frame: a frequency f there is f0 ± f in the phases.
+// rotating network frame: a frequency f there is f0 ± f in the phases. A mode at the frame's own
+// frequency, ± j314 1/s at 50 Hz, is a DC offset of phase currents; its damping
+// ratio says little, its time constant what it seems.
 package modes
