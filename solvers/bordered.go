@@ -61,6 +61,7 @@ type BorderedLU struct {
 	groups []laneGroup    // blocks of one pattern, eliminated together
 	single []int          // the other blocks
 	lu     []float64
+	mid    []float64 // of groups: own entries, then port entries, half-way through a solution
 	border *CSC
 	diagAt []int   // border row -> slot in border.X
 	slots  [][]int // block -> for each PortRow, for each port column: slot in border.X
@@ -76,11 +77,23 @@ type BorderedLU struct {
 }
 
 // laneGroup is a group of blocks of one pattern whose values are interleaved.
+// Lanes left over repeat the first block: its results are written again, the
+// same bits.
 type laneGroup struct {
 	prog   *elimination
+	count  int // different blocks
 	blocks [lanes]int
 	own    [lanes]int // each block's first own unknown
 	at     int        // first value in lu
+	mid    int        // first value in mid
+	rows   []laneRow
+	cols   []int32 // border column of each port of each block, interleaved
+}
+
+// laneRow adds weight times an interleaved value to a row of the border.
+type laneRow struct {
+	from, row int32
+	weight    float64
 }
 
 // BorderedStats counts what a BorderedLU did.
@@ -170,32 +183,44 @@ func NewBorderedLU(m *BorderedMatrix) (*BorderedLU, error) {
 // group puts blocks of one program together by fours, in their order, and gives
 // every block its place in lu. It returns the length of lu.
 func (f *BorderedLU) group() (total int) {
-	open := make(map[*elimination][]int)
+	open := make(map[*elimination]int) // 1 + group with a lane left
 	for k, e := range f.prog {
 		if e == nil || e.own == 0 {
 			f.single = append(f.single, k)
 			continue
 		}
-		open[e] = append(open[e], k)
-		if g := open[e]; len(g) == lanes {
-			f.groups = append(f.groups, laneGroup{prog: e, blocks: [lanes]int(g)})
-			open[e] = nil
+		i := open[e] - 1
+		if i < 0 {
+			i = len(f.groups)
+			f.groups = append(f.groups, laneGroup{prog: e, blocks: [lanes]int{k, k, k, k}})
+		}
+		g := &f.groups[i]
+		g.blocks[g.count] = k
+		g.count++
+		open[e] = i + 1
+		if g.count == lanes {
+			open[e] = 0
 		}
 	}
-	for k, e := range f.prog {
-		for _, o := range open[e] {
-			if o == k && e != nil {
-				f.single = append(f.single, k)
-			}
-		}
-	}
-	slices.Sort(f.single)
+	mid := 0
 	for i := range f.groups {
 		g := &f.groups[i]
 		g.at = total
+		g.mid = mid
+		no, np := g.prog.own, g.prog.ports
+		mid += lanes * (no + np)
+		g.cols = make([]int32, lanes*np)
 		for l, k := range g.blocks {
-			f.at[k], f.stride[k] = total+l, lanes
 			g.own[l] = f.ownAt[k]
+			for j, c := range f.m.Blocks[k].At {
+				g.cols[lanes*j+l] = int32(c)
+			}
+		}
+		for l, k := range g.blocks[:g.count] {
+			f.at[k], f.stride[k] = total+l, lanes
+			for _, r := range f.m.Blocks[k].Rows {
+				g.rows = append(g.rows, laneRow{int32(lanes*(no+r.Port) + l), int32(r.Row), r.Weight})
+			}
 		}
 		total += lanes * g.prog.slots
 	}
@@ -205,6 +230,7 @@ func (f *BorderedLU) group() (total int) {
 			total += f.prog[k].slots
 		}
 	}
+	f.mid = make([]float64, mid)
 	return total
 }
 
@@ -295,6 +321,31 @@ func (f *BorderedLU) load(k int) {
 	}
 }
 
+// loadLanes is load for the blocks of a group.
+func (f *BorderedLU) loadLanes(g *laneGroup) {
+	p, v := g.prog, f.lu[g.at:][:lanes*g.prog.slots]
+	b0, b1, b2, b3 := &f.m.Blocks[g.blocks[0]], &f.m.Blocks[g.blocks[1]], &f.m.Blocks[g.blocks[2]], &f.m.Blocks[g.blocks[3]]
+	n := len(p.at)
+	v0, v1, v2, v3 := b0.Values[:n], b1.Values[:n], b2.Values[:n], b3.Values[:n]
+	for i, s := range p.at {
+		d := (*lane)(v[int(s)*lanes:])
+		d[0] += v0[i]
+		d[1] += v1[i]
+		d[2] += v2[i]
+		d[3] += v3[i]
+	}
+	shift := f.m.Shift
+	for l, b := range [lanes]*BorderedBlock{b0, b1, b2, b3} {
+		if b.Mass == nil {
+			continue
+		}
+		mass := b.Mass[:len(p.diag)]
+		for i, s := range p.diag {
+			v[int(s)*lanes+l] += shift * mass[i]
+		}
+	}
+}
+
 // Factor implements [LinearSolver].
 func (f *BorderedLU) Factor() error {
 	f.stats.Factorizations++
@@ -303,9 +354,7 @@ func (f *BorderedLU) Factor() error {
 	dissolve := -1
 	for i := range f.groups {
 		g := &f.groups[i]
-		for _, k := range g.blocks {
-			f.load(k)
-		}
+		f.loadLanes(g)
 		if !g.prog.factorLanes(f.lu[g.at:][:lanes*g.prog.slots]) {
 			dissolve = i
 			break
@@ -353,6 +402,9 @@ func (f *BorderedLU) Factor() error {
 	for k := range f.m.Blocks {
 		b, p := &f.m.Blocks[k], f.prog[k]
 		np, stride := b.Ports, f.stride[k]
+		if np == 0 {
+			continue
+		}
 		s := f.lu[f.at[k]+(p.slots-np*np)*stride:]
 		slots := f.slots[k]
 		for _, r := range b.Rows {
@@ -379,7 +431,7 @@ func (f *BorderedLU) Factor() error {
 func (f *BorderedLU) dissolve(i int) {
 	g := f.groups[i]
 	f.groups = slices.Delete(f.groups, i, i+1)
-	for _, k := range g.blocks {
+	for _, k := range g.blocks[:g.count] {
 		f.place(k)
 		f.single = append(f.single, k)
 	}
@@ -496,17 +548,13 @@ func (f *BorderedLU) Solve(b []float64) {
 	border := b[f.n-f.m.Border:]
 	for i := range f.groups {
 		g := &f.groups[i]
-		no, np := g.prog.own, g.prog.ports
-		c := f.c[:(no+np)*lanes]
-		b0, b1, b2, b3 := b[g.own[0]:], b[g.own[1]:], b[g.own[2]:], b[g.own[3]:]
-		interleave(c, no, b0, b1, b2, b3)
+		no := g.prog.own
+		c := f.mid[g.mid:][:(no+g.prog.ports)*lanes]
+		interleave(c, no, b[g.own[0]:], b[g.own[1]:], b[g.own[2]:], b[g.own[3]:])
 		clear(c[no*lanes:])
 		g.prog.forwardLanes(f.lu[g.at:][:lanes*g.prog.slots], c)
-		separate(b0, b1, b2, b3, no, c)
-		for l, k := range g.blocks {
-			for _, r := range f.m.Blocks[k].Rows {
-				border[r.Row] += r.Weight * c[(no+r.Port)*lanes+l]
-			}
+		for _, r := range g.rows {
+			border[r.row] += r.weight * c[r.from]
 		}
 	}
 	for _, k := range f.single {
@@ -532,17 +580,13 @@ func (f *BorderedLU) Solve(b []float64) {
 	}
 	for i := range f.groups {
 		g := &f.groups[i]
-		no, np := g.prog.own, g.prog.ports
-		c, x := f.c[:no*lanes], f.x[:(no+np)*lanes]
-		b0, b1, b2, b3 := b[g.own[0]:], b[g.own[1]:], b[g.own[2]:], b[g.own[3]:]
-		interleave(c, no, b0, b1, b2, b3)
-		for l, k := range g.blocks {
-			for j, col := range f.m.Blocks[k].At {
-				x[(no+j)*lanes+l] = border[col]
-			}
+		no := g.prog.own
+		c, x := f.mid[g.mid:][:no*lanes], f.x[:no*lanes+len(g.cols)]
+		for j, col := range g.cols {
+			x[no*lanes+j] = border[col]
 		}
 		g.prog.backwardLanes(f.lu[g.at:][:lanes*g.prog.slots], c, x)
-		separate(b0, b1, b2, b3, no, x)
+		separate(b[g.own[0]:], b[g.own[1]:], b[g.own[2]:], b[g.own[3]:], no, x)
 	}
 	for _, k := range f.single {
 		blk := &f.m.Blocks[k]

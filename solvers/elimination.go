@@ -26,6 +26,8 @@ type elimination struct {
 	index      []int32 // local index of the entries: see eliminationStep
 	schur      []schurEntry
 	diag       []int32 // own unknown -> slot of its diagonal, -1 if none
+
+	laneProgram
 }
 
 type eliminationStep struct {
@@ -236,6 +238,7 @@ func newElimination(ports, own int, pattern []Entry, values []float64) (*elimina
 		}
 		e.diag = append(e.diag, s)
 	}
+	e.laneProgram = newLaneProgram(e)
 	return e, nil
 }
 
@@ -301,119 +304,5 @@ func (e *elimination) backward(v, b, x []float64) {
 			s -= w * x[cols[j]]
 		}
 		x[st.col] = s * v[st.pivot]
-	}
-}
-
-// lanes is the number of blocks of one pattern that are eliminated together,
-// their values interleaved: the indices of a program are read once for all,
-// and the blocks' arithmetic is independent, so it overlaps. Four filled the
-// processor best in trials (two: 1.5 times the speed of one block at a time,
-// four: 2, eight: no more).
-const lanes = 4
-
-type lane = [lanes]float64
-
-// The kernels name the lanes one by one: an array in a local variable lives in
-// memory, scalars live in registers.
-
-// factorLanes is factor for interleaved blocks: v holds lanes values a slot. It
-// reports whether every pivot of every block was acceptable.
-func (e *elimination) factorLanes(v []float64) bool {
-	worst := 0.0
-	for k := range e.steps {
-		st := &e.steps[k]
-		p := (*lane)(v[int(st.pivot)*lanes:])
-		i0, i1, i2, i3 := 1/p[0], 1/p[1], 1/p[2], 1/p[3]
-		if !(math.Abs(i0)+math.Abs(i1)+math.Abs(i2)+math.Abs(i3) <= math.MaxFloat64) {
-			return false
-		}
-		p[0], p[1], p[2], p[3] = i0, i1, i2, i3
-		nu, nl := int(st.nu), int(st.nl)
-		u := v[(int(st.pivot)+1)*lanes:][:nu*lanes]
-		l := v[(int(st.pivot)+1+nu)*lanes:][:nl*lanes]
-		tgt := e.target[st.tgt:][:nu*nl]
-		for ; len(l) >= lanes; l = l[lanes:] {
-			m := (*lane)(l)
-			m0, m1, m2, m3 := m[0]*i0, m[1]*i1, m[2]*i2, m[3]*i3
-			m[0], m[1], m[2], m[3] = m0, m1, m2, m3
-			size := max(math.Abs(m0), math.Abs(m1), math.Abs(m2), math.Abs(m3))
-			if !(size <= worst) {
-				worst = size // and stays NaN if it is
-				if !(size <= maxGrowth) {
-					return false
-				}
-			}
-			uu := u
-			for _, t := range tgt[:nu] {
-				x, y := (*lane)(v[int(t)*lanes:]), (*lane)(uu)
-				x[0] -= m0 * y[0]
-				x[1] -= m1 * y[1]
-				x[2] -= m2 * y[2]
-				x[3] -= m3 * y[3]
-				uu = uu[lanes:]
-			}
-			tgt = tgt[nu:]
-		}
-	}
-	return true
-}
-
-// forwardLanes is forward for interleaved blocks.
-func (e *elimination) forwardLanes(v, b []float64) {
-	for k := range e.steps {
-		st := &e.steps[k]
-		c := (*lane)(b[int(st.row)*lanes:])
-		c0, c1, c2, c3 := c[0], c[1], c[2], c[3]
-		nu, nl := int(st.nu), int(st.nl)
-		l := v[(int(st.pivot)+1+nu)*lanes:][:nl*lanes]
-		for _, r := range e.index[int(st.idx)+nu:][:nl] {
-			m, x := (*lane)(l), (*lane)(b[int(r)*lanes:])
-			x[0] -= m[0] * c0
-			x[1] -= m[1] * c1
-			x[2] -= m[2] * c2
-			x[3] -= m[3] * c3
-			l = l[lanes:]
-		}
-	}
-}
-
-// backwardLanes is backward for interleaved blocks.
-func (e *elimination) backwardLanes(v, b, x []float64) {
-	for k := len(e.steps) - 1; k >= 0; k-- {
-		st := &e.steps[k]
-		s := (*lane)(b[int(st.row)*lanes:])
-		s0, s1, s2, s3 := s[0], s[1], s[2], s[3]
-		nu := int(st.nu)
-		u := v[(int(st.pivot)+1)*lanes:][:nu*lanes]
-		for _, c := range e.index[st.idx:][:nu] {
-			m, y := (*lane)(u), (*lane)(x[int(c)*lanes:])
-			s0 -= m[0] * y[0]
-			s1 -= m[1] * y[1]
-			s2 -= m[2] * y[2]
-			s3 -= m[3] * y[3]
-			u = u[lanes:]
-		}
-		p, y := (*lane)(v[int(st.pivot)*lanes:]), (*lane)(x[int(st.col)*lanes:])
-		y[0], y[1], y[2], y[3] = s0*p[0], s1*p[1], s2*p[2], s3*p[3]
-	}
-}
-
-// interleave writes a[l][j] to dst[j*lanes+l] for j < n.
-func interleave(dst []float64, n int, a0, a1, a2, a3 []float64) {
-	a0, a1, a2, a3 = a0[:n], a1[:n], a2[:n], a3[:n]
-	dst = dst[:n*lanes]
-	for j, x := range a0 {
-		d := (*lane)(dst[j*lanes:])
-		d[0], d[1], d[2], d[3] = x, a1[j], a2[j], a3[j]
-	}
-}
-
-// separate is the inverse of interleave.
-func separate(a0, a1, a2, a3 []float64, n int, src []float64) {
-	a0, a1, a2, a3 = a0[:n], a1[:n], a2[:n], a3[:n]
-	src = src[:n*lanes]
-	for j := range a0 {
-		d := (*lane)(src[j*lanes:])
-		a0[j], a1[j], a2[j], a3[j] = d[0], d[1], d[2], d[3]
 	}
 }

@@ -20,10 +20,11 @@ type Network struct {
 	ready    bool
 	n        int
 	hidden   []int
-	isHidden []bool // node component
-	fixed    []bool // node component of a dead node
-	nodeMass []float64
-	active   []int // indices of blocks that are on
+	isHidden []bool    // node component
+	fixed    []bool    // node component of a dead node
+	mass     []float64 // diagonal of M
+	nodeMass []float64 // its part of the nodes
+	active   []int     // indices of blocks that are on
 	matrix   BorderedMatrix
 	lu       *BorderedLU
 	algRow   []bool
@@ -187,7 +188,8 @@ func (n *Network) Configure(c Configuration) error {
 	n.hidden = n.hidden[:0]
 	n.isHidden = make([]bool, n.nodes)
 	n.fixed = make([]bool, n.nodes)
-	n.nodeMass = make([]float64, n.nodes)
+	n.mass = make([]float64, n.n)
+	n.nodeMass = n.mass[n.nOwn:]
 	for i, d := range c.Dead {
 		if d {
 			for k := range n.width {
@@ -232,7 +234,7 @@ func (n *Network) Configure(c Configuration) error {
 				n.frozen = append(n.frozen, b.lo+i)
 			}
 			// The block's unknowns keep their place with M = 1, f = 0.
-			nb := BorderedBlock{Own: b.own, Mass: make([]float64, b.own)}
+			nb := BorderedBlock{Own: b.own, Mass: n.mass[b.lo:][:b.own]}
 			for i := range b.own {
 				nb.Mass[i] = 1
 				nb.Pattern = append(nb.Pattern, Entry{i, i})
@@ -243,7 +245,7 @@ func (n *Network) Configure(c Configuration) error {
 			continue
 		}
 		n.active = append(n.active, k)
-		nb := BorderedBlock{Ports: b.ports, Own: b.own, At: b.at, Mass: make([]float64, b.own)}
+		nb := BorderedBlock{Ports: b.ports, Own: b.own, At: b.at, Mass: n.mass[b.lo:][:b.own]}
 		portMass = portMass[:0]
 		for range b.ports {
 			portMass = append(portMass, 0)
@@ -538,21 +540,14 @@ func (n *Network) LinearStats() BorderedStats {
 
 // AddMass implements [System].
 func (n *Network) AddMass(dst []float64, c float64, x []float64) {
-	for k := range n.blocks {
-		b := &n.blocks[k]
-		mass := n.matrix.Blocks[b.mat].Mass
-		d, xx := dst[b.lo:][:len(mass)], x[b.lo:][:len(mass)]
-		for i, m := range mass {
-			d[i] += c * m * xx[i]
-		}
-	}
-	d, xx := dst[n.nOwn:n.n], x[n.nOwn:n.n]
-	for i, m := range n.nodeMass {
-		if m != 0 {
-			d[i] += c * m * xx[i]
-		}
+	mass, x := n.mass[:len(dst)], x[:len(dst)]
+	for i, m := range mass {
+		dst[i] += c * m * x[i]
 	}
 }
+
+// MassDiagonal implements [DiagonalMass].
+func (n *Network) MassDiagonal(dst []float64) { copy(dst, n.mass) }
 
 // Pin adds a spring of the given stiffness to an own unknown in the Jacobian
 // kept last: d rate/d x is lowered by it. It makes a Jacobian regular whose

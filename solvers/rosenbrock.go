@@ -45,8 +45,11 @@ func (m *rosenbrockTable) NewStepper(s System, o Options) (Stepper, error) {
 	}
 	n := s.Dim()
 	r := &rosenbrock{sys: s, tab: m, tol: o.tolerance(), opt: o, n: n, hidden: s.Hidden()}
-	vec := func() []float64 { return make([]float64, n) }
+	// Vectors reach to a multiple of four values, as combineTwo wants it.
+	vec := func() []float64 { return make([]float64, n, (n+3)&^3) }
 	r.y, r.prev, r.trial, r.f0, r.ft, r.acc = vec(), vec(), vec(), vec(), vec(), vec()
+	r.mass = vec()
+	r.pairs = make([]float64, 2*len(m.c))
 	for range m.c {
 		r.u = append(r.u, vec())
 	}
@@ -103,6 +106,9 @@ type rosenbrock struct {
 	acc       []float64
 	u         [][]float64 // stage increments
 	k         [][]float64 // dense output coefficients
+	mass      []float64   // its diagonal, where the system has one; else ones
+	diagonal  bool
+	pairs     []float64 // coefficients of a stage, see combineTwo
 	haveFt    bool
 	midValue  []float64 // weights of the stages at mid-step
 	midSlope  []float64
@@ -138,7 +144,7 @@ func (r *rosenbrock) Reset(t float64, y []float64) error {
 		panic("solvers: length of y doesn't match the system")
 	}
 	r.stats.Restarts++
-	r.hidden = r.sys.Hidden()
+	r.connect()
 	copy(r.y, y)
 	if err := r.sys.Initialise(t, r.y, true); err != nil {
 		return err
@@ -149,6 +155,19 @@ func (r *rosenbrock) Reset(t float64, y []float64) error {
 	r.hLast, r.errLast = 0, 0
 	r.h = r.opt.InitialStep
 	return nil
+}
+
+// connect reads what depends on how the system is connected at present.
+func (r *rosenbrock) connect() {
+	r.hidden = r.sys.Hidden()
+	d, ok := r.sys.(DiagonalMass)
+	if r.diagonal = ok; ok {
+		d.MassDiagonal(r.mass)
+		return
+	}
+	for i := range r.mass {
+		r.mass[i] = 1
+	}
 }
 
 // firstStep chooses the first step after a reset from the sizes of y, y' and
@@ -430,23 +449,33 @@ func (r *rosenbrock) attempt(h float64) error {
 		if i == 0 {
 			copy(u, r.f0)
 		} else {
-			switch {
-			case r.adds[i]:
-				// The argument of the stage before, which trial still holds,
-				// plus its increment.
-				combine(r.acc, nil, tab.cc[i], r.u)
-				before := r.u[i-1][:len(u)]
-				for k, v := range before {
-					r.trial[k] += v
-				}
-			default:
-				combineTwo(r.trial, r.acc, r.y, tab.a[i], tab.cc[i], r.u)
+			// What the stages before add: M times a sum, over h. In a last
+			// stage the argument is that of the stage before, which trial
+			// still holds, plus its increment.
+			for j, c := range tab.cc[i] {
+				r.pairs[2*j], r.pairs[2*j+1] = tab.a[i][j], hInv*c
 			}
+			from := r.y
+			if r.adds[i] {
+				from = r.trial
+				for j := range i {
+					r.pairs[2*j] = 0
+				}
+				r.pairs[2*i-2] = 1
+			}
+			combineTwo(r.trial, r.acc, from, r.mass, r.pairs[:2*i], r.u[:i])
 			r.stats.Evals++
 			if err := r.sys.Eval(u, r.t+tab.c[i]*h, r.trial); err != nil {
 				return err
 			}
-			r.sys.AddMass(u, hInv, r.acc)
+			if r.diagonal {
+				acc := r.acc[:len(u)]
+				for k, v := range acc {
+					u[k] += v
+				}
+			} else {
+				r.sys.AddMass(u, 1, r.acc)
+			}
 			for _, k := range r.hidden {
 				u[k] = 0
 			}
@@ -469,50 +498,52 @@ func (r *rosenbrock) attempt(h float64) error {
 	return nil
 }
 
-// combineTwo writes y + sum_j a[j] u[j] into dst and sum_j c[j] u[j] into acc,
-// reading every u once.
-func combineTwo(dst, acc, y, a, c []float64, u [][]float64) {
+// combineTwo writes y + sum_j a[j] u[j] into dst and scale times sum_j c[j]
+// u[j] into acc, reading every u once. ac holds a[0], c[0], a[1], ...; all
+// vectors reach to a multiple of four values.
+func combineTwo(dst, acc, y, scale, ac []float64, u [][]float64) {
 	n := len(dst)
-	acc, y = acc[:n], y[:n]
-	switch len(a) {
-	case 1:
-		a0, c0, u0 := a[0], c[0], u[0][:n]
-		for i, x := range u0 {
-			dst[i], acc[i] = y[i]+a0*x, c0*x
-		}
-		return
-	case 2:
-		a0, c0, u0 := a[0], c[0], u[0][:n]
-		a1, c1, u1 := a[1], c[1], u[1][:n]
-		for i, x := range u0 {
-			x1 := u1[i]
-			dst[i], acc[i] = y[i]+a0*x+a1*x1, c0*x+c1*x1
-		}
+	if n == 0 {
 		return
 	}
-	a0, c0, u0 := a[0], c[0], u[0][:n]
-	a1, c1, u1 := a[1], c[1], u[1][:n]
-	a2, c2, u2 := a[2], c[2], u[2][:n]
-	for i, x := range u0 {
-		x1, x2 := u1[i], u2[i]
-		dst[i], acc[i] = y[i]+a0*x+a1*x1+a2*x2, c0*x+c1*x1+c2*x2
+	if useAVX {
+		full := (n + 3) &^ 3
+		for _, v := range u {
+			_ = v[:full]
+		}
+		_, _, _, _ = dst[:full], acc[:full], y[:full], scale[:full]
+		combineTwoAVX(&dst[0], &acc[0], &y[0], &scale[0], n, &ac[0], &u[0], len(u))
+		return
 	}
-	j := 3
-	for ; j+2 <= len(a); j += 2 {
-		a0, c0, u0 := a[j], c[j], u[j][:n]
-		a1, c1, u1 := a[j+1], c[j+1], u[j+1][:n]
+	combineTwoGo(dst, acc, y, scale, ac, u)
+}
+
+func combineTwoGo(dst, acc, y, scale, ac []float64, u [][]float64) {
+	n := len(dst)
+	acc, y, scale = acc[:n], y[:n], scale[:n]
+	if &dst[0] != &y[0] {
+		copy(dst, y)
+	}
+	clear(acc)
+	j := 0
+	for ; j+2 <= len(u); j += 2 {
+		a0, c0, a1, c1 := ac[2*j], ac[2*j+1], ac[2*j+2], ac[2*j+3]
+		u0, u1 := u[j][:n], u[j+1][:n]
 		for i, x := range u0 {
 			x1 := u1[i]
-			dst[i] += a0*x + a1*x1
-			acc[i] += c0*x + c1*x1
+			dst[i] = dst[i] + a0*x + a1*x1
+			acc[i] = acc[i] + c0*x + c1*x1
 		}
 	}
-	if j < len(a) {
-		a0, c0, u0 := a[j], c[j], u[j][:n]
+	if j < len(u) {
+		a0, c0, u0 := ac[2*j], ac[2*j+1], u[j][:n]
 		for i, x := range u0 {
 			dst[i] += a0 * x
 			acc[i] += c0 * x
 		}
+	}
+	for i, m := range scale {
+		acc[i] *= m
 	}
 }
 
@@ -676,6 +707,6 @@ func (r *rosenbrock) UnmarshalBinary(data []byte) error {
 	copy(r.y, y)
 	copy(r.prev, y)
 	r.moved, r.haveDense = false, false
-	r.hidden = r.sys.Hidden()
+	r.connect()
 	return nil
 }

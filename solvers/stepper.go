@@ -34,7 +34,7 @@ type System interface {
 	// Solve overwrites b with the solution of (alpha M - J) x = b.
 	Solve(b []float64)
 
-	// AddMass adds c M x to dst.
+	// AddMass adds c M x to dst. See also DiagonalMass.
 	AddMass(dst []float64, c float64, x []float64)
 
 	// Hidden lists equations of the form 0 = s(y), s linear in differential
@@ -62,6 +62,14 @@ type System interface {
 	// dropped for unknowns that are measured absolutely. worst is the index
 	// of the largest entry of that group.
 	Norm(e, y0, y1 []float64, tol Tolerance) (norm float64, worst int)
+}
+
+// DiagonalMass is the facet of a [System] whose M is diagonal, for methods that
+// add M x in passing.
+type DiagonalMass interface {
+	// MassDiagonal writes the diagonal of M, as it is until the system is
+	// configured again, into dst (len Dim).
+	MassDiagonal(dst []float64)
 }
 
 // Tolerance is a pair of error tolerances.
