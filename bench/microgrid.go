@@ -12,10 +12,10 @@ import (
 
 // Microgrid builds an islanded 400 V microgrid of any number of inverters (at
 // least 4), invented for this benchmark: four inverters of 20 to 50 kVA a bus,
-// 70 % of them grid-forming with droop and 30 % followers at half their
-// rating, buses in a square mesh of short cables, and at every bus a parallel
-// R-L load of about 60 % of what the bus can give. Every device at full
-// detail. The same number gives the same network.
+// 70 % of them grid-forming (droop, virtual machine and oscillator in turn) and
+// 30 % followers at half their rating, buses in a square mesh of short cables,
+// and at every bus a parallel R-L load of about 60 % of what the bus can give.
+// Every device at full detail. The same number gives the same network.
 func Microgrid(inverters int) (*engine.System, error) {
 	if inverters < 4 {
 		return nil, fmt.Errorf("bench: a microgrid of %d inverters, want at least 4", inverters)
@@ -32,6 +32,7 @@ func Microgrid(inverters int) (*engine.System, error) {
 	}
 	buses := make([]engine.Bus, (inverters+aBus-1)/aBus)
 	capacity := make([]float64, len(buses))
+	controls := []devices.ControlKind{devices.DroopControl, devices.VirtualMachineControl, devices.OscillatorControl}
 	for b := range buses {
 		buses[b] = s.Bus(fmt.Sprintf("bus-%d", b), volts)
 	}
@@ -39,7 +40,8 @@ func Microgrid(inverters int) (*engine.System, error) {
 		b := k % len(buses)
 		va := 20e3 + 30e3*rng.Float64()
 		if k%10 < 7 {
-			p, err := devices.GridFormingNameplate{Power: va, Voltage: volts, Frequency: hertz, P: va / 2}.Params()
+			control := controls[(k/10*7+k%10)%len(controls)]
+			p, err := devices.GridFormingNameplate{Power: va, Voltage: volts, Frequency: hertz, P: va / 2, Control: control}.Params()
 			var d *devices.GridForming
 			if err == nil {
 				d, err = devices.NewGridForming(p)
