@@ -168,6 +168,7 @@ type followingLayout struct {
 var (
 	_ solvers.Block              = (*GridFollowing)(nil)
 	_ solvers.Differentiable     = (*GridFollowing)(nil)
+	_ solvers.CompactJacobian    = (*GridFollowing)(nil)
 	_ solvers.TimeDependent      = (*GridFollowing)(nil)
 	_ facet.Described            = (*GridFollowing)(nil)
 	_ facet.Framed               = (*GridFollowing)(nil)
@@ -467,6 +468,12 @@ func (g *GridFollowing) Pattern() []solvers.Entry { return g.sparsity.entries }
 func (g *GridFollowing) Jacobian(jac []float64, t float64, v, x []float64) {
 	g.fill(g.orders(t), v, x)
 	g.sparsity.store(jac)
+}
+
+// JacobianEntries writes the entries of the Jacobian in the order of Pattern.
+func (g *GridFollowing) JacobianEntries(dst []float64, t float64, v, x []float64) {
+	g.fill(g.orders(t), v, x)
+	g.sparsity.collect(dst)
 }
 
 // followingSlopes are the slopes of what has limits or floors at one point.

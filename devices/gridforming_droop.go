@@ -68,6 +68,11 @@ func (d *droop) rates(dst, z []float64, _ orders, s stimulus) {
 	dst[1] = d.wc * (s.q - z[1])
 }
 
+func (d *droop) act(dst, z []float64, u orders, s stimulus) (omega, v float64) {
+	d.rates(dst, z, u, s)
+	return d.speed(z, u, s), d.voltage(z, u)
+}
+
 func (d *droop) gradients(g *primaryGradient, _ []float64, _ orders, _ stimulus) {
 	g.omegaZ[0], g.omegaZ[1] = -d.m*d.sin, d.m*d.cos
 	g.vZ[0], g.vZ[1] = -d.n*d.cos, -d.n*d.sin

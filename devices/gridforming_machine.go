@@ -123,6 +123,11 @@ func (m *machine) rates(dst, z []float64, u orders, s stimulus) {
 	}
 }
 
+func (m *machine) act(dst, z []float64, u orders, s stimulus) (omega, v float64) {
+	m.rates(dst, z, u, s)
+	return m.speed(z, u, s), m.voltage(z, u)
+}
+
 func (m *machine) gradients(g *primaryGradient, _ []float64, _ orders, _ stimulus) {
 	k, l := m.speedAt, m.voltAt
 	g.omegaZ[k] = 1

@@ -163,6 +163,12 @@ func (o *oscillator) rates(dst, z []float64, u orders, s stimulus) {
 	dst[0] = o.eta * growth
 }
 
+func (o *oscillator) act(dst, z []float64, u orders, s stimulus) (omega, v float64) {
+	growth, omega := o.growth(u, s, z[0])
+	dst[0] = o.eta * growth
+	return omega, z[0]
+}
+
 func (o *oscillator) gradients(g *primaryGradient, z []float64, u orders, s stimulus) {
 	growth, omega := o.growthSlopes(u, s, z[0])
 	h, _ := o.inverse(z[0])

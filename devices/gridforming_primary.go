@@ -71,6 +71,8 @@ type primary interface {
 	speed(z []float64, u orders, s stimulus) float64
 	// rates writes dz/dt into dst.
 	rates(dst, z []float64, u orders, s stimulus)
+	// act is voltage, speed and rates in one.
+	act(dst, z []float64, u orders, s stimulus) (omega, v float64)
 	// gradients writes the partial derivatives into d.
 	gradients(d *primaryGradient, z []float64, u orders, s stimulus)
 	// drift writes the change of dz/dt with the setpoints moving at du into

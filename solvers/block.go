@@ -50,6 +50,14 @@ type Differentiable interface {
 	Jacobian(jac []float64, t float64, v, x []float64)
 }
 
+// CompactJacobian is the optional facet of a [Differentiable] block that can
+// write the entries of its pattern alone, which is faster.
+type CompactJacobian interface {
+	// JacobianEntries writes the entries of the Jacobian in the order of
+	// Pattern into dst, which has its length.
+	JacobianEntries(dst []float64, t float64, v, x []float64)
+}
+
 // TimeDependent is the optional facet of a [Block] that knows its explicit
 // dependence on time. A block without it is differenced in t once a step.
 type TimeDependent interface {

@@ -36,3 +36,8 @@ func separateAVX(a0, a1, a2, a3 *float64, n int, src *float64)
 //
 //go:noescape
 func combineTwoAVX(dst, acc, y, scale *float64, n int, ac *float64, u *[]float64, k int)
+
+// addAVX adds src to dst; n and the vectors as for combineTwoAVX, n > 0.
+//
+//go:noescape
+func addAVX(dst, src *float64, n int)

@@ -356,3 +356,20 @@ vector:
 	JG      four
 	VZEROUPPER
 	RET
+
+// func addAVX(dst, src *float64, n int)
+TEXT ·addAVX(SB), NOSPLIT, $0-24
+	MOVQ dst+0(FP), DI
+	MOVQ src+8(FP), SI
+	MOVQ n+16(FP), CX
+
+four:
+	VMOVUPD (DI), Y0
+	VADDPD  (SI), Y0, Y0
+	VMOVUPD Y0, (DI)
+	ADDQ    $32, DI
+	ADDQ    $32, SI
+	SUBQ    $4, CX
+	JG      four
+	VZEROUPPER
+	RET

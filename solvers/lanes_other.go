@@ -11,3 +11,4 @@ func backwardAVX(*laneStep, int, *int32, *float64, *float64, *float64)          
 func interleaveAVX(*float64, int, *float64, *float64, *float64, *float64)       { panic("no AVX") }
 func separateAVX(*float64, *float64, *float64, *float64, int, *float64)         { panic("no AVX") }
 func combineTwoAVX(_, _, _, _ *float64, _ int, _ *float64, _ *[]float64, _ int) { panic("no AVX") }
+func addAVX(_, _ *float64, _ int)                                               { panic("no AVX") }

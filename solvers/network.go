@@ -23,8 +23,11 @@ type Network struct {
 	isHidden []bool    // node component
 	fixed    []bool    // node component of a dead node
 	mass     []float64 // diagonal of M
+	scale    []float64 // of every unknown, for the norm
+	relative []float64 // 1, or 0 for those measured absolutely
 	nodeMass []float64 // its part of the nodes
 	active   []int     // indices of blocks that are on
+	evals    []evaluation
 	matrix   BorderedMatrix
 	lu       *BorderedLU
 	algRow   []bool
@@ -40,6 +43,7 @@ type Network struct {
 type netBlock struct {
 	b      Block
 	diff   Differentiable
+	direct CompactJacobian
 	timed  TimeDependent
 	ports  int
 	own    int
@@ -52,6 +56,20 @@ type netBlock struct {
 	jac    []float64 // n x n, shared by blocks of one pattern
 	mat    int       // index in matrix.Blocks
 	nDense int       // number of pattern entries that come from the Jacobian
+	from   []int32   // their places in jac, shared by blocks of one pattern
+	nPort  int       // those before it lie in port rows, the rest in own rows; -1 if mixed
+}
+
+// evaluation is what Eval needs of a block that is on, packed.
+type evaluation struct {
+	b     Block
+	block int32
+	lo    int32
+	own   int32
+	ports int32
+	// node is the first node component of a block with one pair of ports,
+	// whose flows go to these components alone; else -1.
+	node int32
 }
 
 // BlockError tells which block of a [Network] returned an error.
@@ -112,6 +130,7 @@ func (n *Network) Add(b Block, at []int, scale []float64, absolute []bool) (int,
 	}
 	nb := netBlock{b: b, ports: ports, own: own, lo: n.nOwn, at: append([]int(nil), at...), scale: scale, abs: absolute}
 	nb.diff, _ = b.(Differentiable)
+	nb.direct, _ = b.(CompactJacobian)
 	nb.timed, _ = b.(TimeDependent)
 	n.blocks = append(n.blocks, nb)
 	n.nOwn += own
@@ -189,6 +208,20 @@ func (n *Network) Configure(c Configuration) error {
 	n.isHidden = make([]bool, n.nodes)
 	n.fixed = make([]bool, n.nodes)
 	n.mass = make([]float64, n.n)
+	n.scale, n.relative = make([]float64, n.n), make([]float64, n.n)
+	for k := range n.blocks {
+		b := &n.blocks[k]
+		copy(n.scale[b.lo:], b.scale)
+		for i, a := range b.abs {
+			if !a {
+				n.relative[b.lo+i] = 1
+			}
+		}
+	}
+	copy(n.scale[n.nOwn:], n.nodeSc)
+	for i := n.nOwn; i < n.n; i++ {
+		n.relative[i] = 1
+	}
 	n.nodeMass = n.mass[n.nOwn:]
 	for i, d := range c.Dead {
 		if d {
@@ -217,11 +250,15 @@ func (n *Network) Configure(c Configuration) error {
 			extras[t.Component] = append(extras[t.Component], extra{h.Row, t.Weight, t.Skip})
 		}
 	}
-	n.active = n.active[:0]
+	n.active, n.evals = n.active[:0], n.evals[:0]
 	n.frozen = n.frozen[:0]
 	n.matrix = BorderedMatrix{Border: n.nodes, BorderMass: n.nodeMass, BorderFixed: n.fixed}
 	n.algRow = make([]bool, n.n)
-	dense := make(map[string][]float64)
+	type shared struct {
+		jac  []float64
+		from []int32
+	}
+	dense := make(map[string]shared)
 	widest, widestPorts := 0, 0
 	portMass := make([]float64, 0, 16)
 	for k := range n.blocks {
@@ -305,12 +342,33 @@ func (n *Network) Configure(c Configuration) error {
 			}
 		}
 		nb.Values = make([]float64, len(nb.Pattern))
-		if dense[key] == nil {
-			dense[key] = make([]float64, w*w)
+		sh, ok := dense[key]
+		if !ok {
+			sh.jac = make([]float64, w*w)
+			for _, e := range nb.Pattern[:b.nDense] {
+				sh.from = append(sh.from, int32(e.Row*w+e.Col))
+			}
+			dense[key] = sh
 		}
-		b.jac = dense[key]
+		b.jac, b.from = sh.jac, sh.from
+		b.nPort = 0
+		for i, e := range nb.Pattern[:b.nDense] {
+			switch {
+			case e.Row >= b.ports || b.nPort < 0:
+			case b.nPort == i:
+				b.nPort++
+			default:
+				b.nPort = -1
+			}
+		}
 		b.mat = len(n.matrix.Blocks)
 		n.matrix.Blocks = append(n.matrix.Blocks, nb)
+		ev := evaluation{b: b.b, block: int32(k), lo: int32(b.lo), own: int32(b.own), ports: int32(b.ports), node: -1}
+		if b.ports == 2 && b.at[1] == b.at[0]+1 && len(b.rows) == 2 &&
+			b.rows[0] == (PortRow{0, b.at[0], 1}) && b.rows[1] == (PortRow{1, b.at[1], 1}) {
+			ev.node = int32(b.at[0])
+		}
+		n.evals = append(n.evals, ev)
 	}
 	for i := range n.nodes {
 		n.algRow[n.nOwn+i] = n.nodeMass[i] == 0
@@ -359,14 +417,25 @@ func (n *Network) Eval(dst []float64, t float64, y []float64) error {
 	for _, i := range n.frozen {
 		dst[i] = 0
 	}
-	for _, k := range n.active {
-		b := &n.blocks[k]
+	for i := range n.evals {
+		e := &n.evals[i]
+		lo, hi := e.lo, e.lo+e.own
+		if c := e.node; c >= 0 {
+			flow := n.flow[:2]
+			if err := e.b.Eval(flow, dst[lo:hi:hi], t, node[c:c+2:c+2], y[lo:hi:hi]); err != nil {
+				return &BlockError{int(e.block), err}
+			}
+			out[c] -= flow[0]
+			out[c+1] -= flow[1]
+			continue
+		}
+		b := &n.blocks[e.block]
 		v, flow := n.v[:b.ports], n.flow[:b.ports]
 		for i, c := range b.at {
 			v[i] = node[c]
 		}
-		if err := b.b.Eval(flow, dst[b.lo:b.lo+b.own], t, v, y[b.lo:b.lo+b.own]); err != nil {
-			return &BlockError{k, err}
+		if err := e.b.Eval(flow, dst[lo:hi:hi], t, v, y[lo:hi:hi]); err != nil {
+			return &BlockError{int(e.block), err}
 		}
 		for _, r := range b.rows {
 			out[r.Row] -= r.Weight * flow[r.Port]
@@ -444,22 +513,37 @@ func (n *Network) Linearise(t float64, y []float64) error {
 			v[i] = node[c]
 		}
 		own := y[b.lo : b.lo+b.own]
-		if b.diff != nil {
-			b.diff.Jacobian(b.jac, t, v, own)
-		} else if err := n.difference(b, t, v, own); err != nil {
-			return &BlockError{k, err}
-		}
 		// Values of W = alpha M - J: own rows with the minus sign; the node
 		// equations hold minus the flows, so port rows with plus.
 		m := &n.matrix.Blocks[b.mat]
-		w := b.ports + b.own
 		values := m.Values[:b.nDense]
-		for i, e := range m.Pattern[:b.nDense] {
-			j := b.jac[e.Row*w+e.Col]
-			if e.Row >= b.ports {
-				j = -j
+		switch {
+		case b.direct != nil:
+			b.direct.JacobianEntries(values, t, v, own)
+		case b.diff != nil:
+			b.diff.Jacobian(b.jac, t, v, own)
+		default:
+			if err := n.difference(b, t, v, own); err != nil {
+				return &BlockError{k, err}
 			}
-			values[i] = j
+		}
+		if b.direct == nil {
+			jac := b.jac
+			for i, k := range b.from {
+				values[i] = jac[k]
+			}
+		}
+		if b.nPort >= 0 {
+			rest := values[b.nPort:]
+			for i, x := range rest {
+				rest[i] = -x
+			}
+		} else {
+			for i, e := range m.Pattern[:b.nDense] {
+				if e.Row >= b.ports {
+					values[i] = -values[i]
+				}
+			}
 		}
 		for i := b.nDense; i < len(m.Values); i++ {
 			m.Values[i] = 0
@@ -572,44 +656,30 @@ func (n *Network) Pin(unknown int, stiffness float64) {
 
 // Norm implements [System]: blocks are the groups, and each node.
 func (n *Network) Norm(e, y0, y1 []float64, tol Tolerance) (norm float64, worst int) {
-	worst = -1
-	for _, k := range n.active {
-		b := &n.blocks[k]
-		if b.own == 0 {
-			continue
-		}
-		lo, hi := b.lo, b.lo+b.own
-		s, w := groupNorm(e[lo:hi], y0[lo:hi], y1[lo:hi], b.scale, b.abs, tol, 0, b.own)
-		if s > norm || s != s || worst < 0 {
-			norm, worst = s, lo+w
-			if s != s {
-				return norm, worst
-			}
+	lo, hi := -1, -1 // the worst group
+	group := func(i, j int) {
+		s := groupNorm(e[i:j], y0[i:j], y1[i:j], n.scale[i:j], n.relative[i:j], tol)
+		if !(s <= norm) || lo < 0 {
+			norm, lo, hi = s, i, j
 		}
 	}
-	for i := 0; i < n.nodes; i += n.width {
-		if n.fixed[i] {
-			continue
+	for i := range n.evals {
+		if v := &n.evals[i]; v.own > 0 {
+			group(int(v.lo), int(v.lo+v.own))
 		}
-		sum, largest, at := 0.0, -1.0, i
-		for c := i; c < i+n.width; c++ {
-			k := n.nOwn + c
-			q := e[k] / (tol.Abs*n.nodeSc[c] + tol.Rel*math.Max(math.Abs(y0[k]), math.Abs(y1[k])))
-			q *= q
-			sum += q
-			if q > largest {
-				largest, at = q, c
-			}
-		}
-		s := math.Sqrt(sum / float64(n.width))
-		if s > norm || s != s || worst < 0 {
-			norm, worst = s, n.nOwn+at
-			if s != s {
-				return norm, worst
-			}
+		if norm != norm {
+			break
 		}
 	}
-	return norm, worst
+	for i := 0; i < n.nodes && norm == norm; i += n.width {
+		if !n.fixed[i] {
+			group(n.nOwn+i, n.nOwn+i+n.width)
+		}
+	}
+	if lo < 0 {
+		return 0, -1
+	}
+	return norm, lo + worstEntry(e[lo:hi], y0[lo:hi], y1[lo:hi], n.scale[lo:hi], n.relative[lo:hi], tol)
 }
 
 // fastRate implements algebraic.

@@ -107,20 +107,21 @@ func (p *Problem) System() (System, error) {
 
 // flatSystem is the System of a Problem.
 type flatSystem struct {
-	p       *Problem
-	n       int
-	mass    []Element
-	algRow  []bool // n: empty mass row
-	w       *CSC   // alpha M - J
-	massAt  []int  // len mass: slot in w.X
-	jacAt   []int  // len pattern: slot in w.X
-	jac     []float64
-	lu      *SparseLU
-	scale   []float64
-	abs     []bool
-	nulls   []nullSpace
-	work    [6][]float64
-	central [3][]float64
+	p        *Problem
+	n        int
+	mass     []Element
+	algRow   []bool // n: empty mass row
+	w        *CSC   // alpha M - J
+	massAt   []int  // len mass: slot in w.X
+	jacAt    []int  // len pattern: slot in w.X
+	jac      []float64
+	lu       *SparseLU
+	scale    []float64
+	abs      []bool
+	relative []float64 // 1, or 0 where abs
+	nulls    []nullSpace
+	work     [6][]float64
+	central  [3][]float64
 }
 
 // nullSpace is the left and right null space of one connected part of M.
@@ -147,6 +148,13 @@ func newFlatSystem(p *Problem) (*flatSystem, error) {
 	}
 	if s.abs == nil {
 		s.abs = make([]bool, n)
+	}
+	for _, a := range s.abs {
+		r := 1.0
+		if a {
+			r = 0
+		}
+		s.relative = append(s.relative, r)
 	}
 	pattern := p.Pattern
 	if pattern == nil {
@@ -452,25 +460,35 @@ func (s *flatSystem) keepAlgebraic(d []float64) {
 }
 
 func (s *flatSystem) Norm(e, y0, y1 []float64, tol Tolerance) (float64, int) {
-	return groupNorm(e, y0, y1, s.scale, s.abs, tol, 0, s.n)
+	return groupNorm(e, y0, y1, s.scale, s.relative, tol), worstEntry(e, y0, y1, s.scale, s.relative, tol)
 }
 
-// groupNorm is the root mean square of the weighted entries lo <= i < hi, and
-// the index of the largest.
-func groupNorm(e, y0, y1, scale []float64, abs []bool, tol Tolerance, lo, hi int) (norm float64, worst int) {
-	sum, largest := 0.0, -1.0
-	worst = lo
-	for i := lo; i < hi; i++ {
-		w := tol.Abs * scale[i]
-		if !abs[i] {
-			w += tol.Rel * math.Max(math.Abs(y0[i]), math.Abs(y1[i]))
+// groupNorm is the root mean square of the weighted entries of e. Entries are
+// weighed by tol.Abs scale + tol.Rel relative max(|y0|, |y1|), with relative one,
+// or zero for those measured absolutely.
+func groupNorm(e, y0, y1, scale, relative []float64, tol Tolerance) float64 {
+	n := len(e)
+	y0, y1, scale, relative = y0[:n], y1[:n], scale[:n], relative[:n]
+	sum := 0.0
+	for i, x := range e {
+		q := x / (tol.Abs*scale[i] + tol.Rel*relative[i]*max(math.Abs(y0[i]), math.Abs(y1[i])))
+		sum += q * q
+	}
+	return math.Sqrt(sum / float64(n))
+}
+
+// worstEntry is the index of the largest entry, weighted as by groupNorm, or of
+// the first that is not a number.
+func worstEntry(e, y0, y1, scale, relative []float64, tol Tolerance) int {
+	worst, largest := 0, -1.0
+	for i, x := range e {
+		q := math.Abs(x / (tol.Abs*scale[i] + tol.Rel*relative[i]*max(math.Abs(y0[i]), math.Abs(y1[i]))))
+		if q != q {
+			return i
 		}
-		q := e[i] / w
-		q *= q
-		sum += q
-		if q > largest || q != q {
-			largest, worst = q, i
+		if q > largest {
+			worst, largest = i, q
 		}
 	}
-	return math.Sqrt(sum / float64(hi-lo)), worst
+	return worst
 }

@@ -469,10 +469,7 @@ func (r *rosenbrock) attempt(h float64) error {
 				return err
 			}
 			if r.diagonal {
-				acc := r.acc[:len(u)]
-				for k, v := range acc {
-					u[k] += v
-				}
+				addTo(u, r.acc)
 			} else {
 				r.sys.AddMass(u, 1, r.acc)
 			}
@@ -490,12 +487,22 @@ func (r *rosenbrock) attempt(h float64) error {
 		r.sys.Solve(u)
 		r.stats.Solves++
 	}
-	last := r.u[len(r.u)-1]
-	trial := r.trial[:len(last)]
-	for k, v := range last {
-		trial[k] += v // the argument of the last stage plus u_s
-	}
+	addTo(r.trial, r.u[len(r.u)-1]) // the argument of the last stage plus u_s
 	return nil
+}
+
+// addTo adds src to dst, both with room to a multiple of four values.
+func addTo(dst, src []float64) {
+	n := len(dst)
+	if useAVX && n > 0 {
+		_, _ = dst[:(n+3)&^3], src[:(n+3)&^3]
+		addAVX(&dst[0], &src[0], n)
+		return
+	}
+	src = src[:n]
+	for i, x := range src {
+		dst[i] += x
+	}
 }
 
 // combineTwo writes y + sum_j a[j] u[j] into dst and scale times sum_j c[j]
