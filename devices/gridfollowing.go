@@ -168,7 +168,7 @@ type followingLayout struct {
 var (
 	_ solvers.Block              = (*GridFollowing)(nil)
 	_ solvers.Differentiable     = (*GridFollowing)(nil)
-	_ solvers.CompactJacobian    = (*GridFollowing)(nil)
+	_ solvers.JacobianFiller     = (*GridFollowing)(nil)
 	_ solvers.TimeDependent      = (*GridFollowing)(nil)
 	_ facet.Described            = (*GridFollowing)(nil)
 	_ facet.Framed               = (*GridFollowing)(nil)
@@ -466,14 +466,15 @@ func (g *GridFollowing) Pattern() []solvers.Entry { return g.sparsity.entries }
 // Jacobian writes the exact Jacobian. At the kink of a limit or floor it is that
 // of the side on which the limit doesn't act.
 func (g *GridFollowing) Jacobian(jac []float64, t float64, v, x []float64) {
+	g.sparsity.begin(nil)
 	g.fill(g.orders(t), v, x)
 	g.sparsity.store(jac)
 }
 
-// JacobianEntries writes the entries of the Jacobian in the order of Pattern.
-func (g *GridFollowing) JacobianEntries(dst []float64, t float64, v, x []float64) {
+// FillJacobian is Jacobian, and writes zeros outside the pattern too.
+func (g *GridFollowing) FillJacobian(jac []float64, t float64, v, x []float64) {
+	g.sparsity.begin(jac)
 	g.fill(g.orders(t), v, x)
-	g.sparsity.collect(dst)
 }
 
 // followingSlopes are the slopes of what has limits or floors at one point.

@@ -205,7 +205,7 @@ type formingLayout struct {
 var (
 	_ solvers.Block              = (*GridForming)(nil)
 	_ solvers.Differentiable     = (*GridForming)(nil)
-	_ solvers.CompactJacobian    = (*GridForming)(nil)
+	_ solvers.JacobianFiller     = (*GridForming)(nil)
 	_ solvers.TimeDependent      = (*GridForming)(nil)
 	_ facet.Described            = (*GridForming)(nil)
 	_ facet.Framed               = (*GridForming)(nil)
@@ -564,14 +564,15 @@ func (g *GridForming) Pattern() []solvers.Entry { return g.sparsity.entries }
 // Jacobian writes the exact Jacobian. At the kink of a limit it is that of the
 // side that doesn't limit.
 func (g *GridForming) Jacobian(jac []float64, t float64, v, x []float64) {
+	g.sparsity.begin(nil)
 	g.fill(g.orders(t), v, x)
 	g.sparsity.store(jac)
 }
 
-// JacobianEntries writes the entries of the Jacobian in the order of Pattern.
-func (g *GridForming) JacobianEntries(dst []float64, t float64, v, x []float64) {
+// FillJacobian is Jacobian, and writes zeros outside the pattern too.
+func (g *GridForming) FillJacobian(jac []float64, t float64, v, x []float64) {
+	g.sparsity.begin(jac)
 	g.fill(g.orders(t), v, x)
-	g.sparsity.collect(dst)
 }
 
 // fill computes the Jacobian into the work matrix.

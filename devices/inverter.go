@@ -281,24 +281,34 @@ func block(w []float64, n, row, col int, z complex128) {
 	w[(row+1)*n+col], w[(row+1)*n+col+1] = imag(z), real(z)
 }
 
-// sparsity is the pattern of a local Jacobian: a kernel fills a dense
-// work matrix, and only the entries of the pattern are handed on.
+// sparsity is the pattern of a local Jacobian: a kernel fills a dense work
+// matrix, of which the entries of the pattern are handed on.
 type sparsity struct {
 	order   int
-	work    []float64 // order x order, row-major
+	own     []float64 // a work matrix, made when first needed
+	work    []float64 // the one in use: order x order, row-major
 	entries []solvers.Entry
-	index   []int // positions of entries in work
 }
 
 // newSparsity returns a sparsity without entries.
-func newSparsity(order int) *sparsity {
-	return &sparsity{order: order, work: make([]float64, order*order)}
+func newSparsity(order int) *sparsity { return &sparsity{order: order} }
+
+// begin makes work the matrix that is filled next; nil is one of its own.
+func (s *sparsity) begin(work []float64) {
+	if work == nil {
+		if s.own == nil {
+			s.own = make([]float64, s.order*s.order)
+		}
+		work = s.own
+	}
+	s.work = work[:s.order*s.order]
 }
 
 // find finds the entries that differ from zero for the given parameters: fill
 // computes the Jacobian at scattered point k into the work matrix. An entry that
 // is not structurally zero vanishes at all of them with probability zero.
 func (s *sparsity) find(fill func(k int)) {
+	s.begin(make([]float64, s.order*s.order))
 	seen := make([]bool, len(s.work))
 	for k := range patternPoints {
 		fill(k)
@@ -309,27 +319,18 @@ func (s *sparsity) find(fill func(k int)) {
 	for i, hit := range seen {
 		if hit {
 			s.entries = append(s.entries, solvers.Entry{Row: i / s.order, Col: i % s.order})
-			s.index = append(s.index, i)
 		}
 	}
+	s.work = nil
 }
 
 // store copies the entries of the pattern from the work matrix to jac.
 func (s *sparsity) store(jac []float64) {
 	w := s.work
 	jac = jac[:len(w)]
-	for _, k := range s.index {
+	for _, e := range s.entries {
+		k := e.Row*s.order + e.Col
 		jac[k] = w[k]
-	}
-}
-
-// collect copies the entries of the pattern from the work matrix to dst, in
-// their order.
-func (s *sparsity) collect(dst []float64) {
-	w := s.work
-	dst = dst[:len(s.index)]
-	for i, k := range s.index {
-		dst[i] = w[k]
 	}
 }
 

@@ -50,12 +50,12 @@ type Differentiable interface {
 	Jacobian(jac []float64, t float64, v, x []float64)
 }
 
-// CompactJacobian is the optional facet of a [Differentiable] block that can
-// write the entries of its pattern alone, which is faster.
-type CompactJacobian interface {
-	// JacobianEntries writes the entries of the Jacobian in the order of
-	// Pattern into dst, which has its length.
-	JacobianEntries(dst []float64, t float64, v, x []float64)
+// JacobianFiller is the optional facet of a [Differentiable] block that saves
+// work when it may write zeros outside its pattern.
+type JacobianFiller interface {
+	// FillJacobian is Jacobian, but may also write zeros to entries outside
+	// Pattern, which hold zero already.
+	FillJacobian(jac []float64, t float64, v, x []float64)
 }
 
 // TimeDependent is the optional facet of a [Block] that knows its explicit

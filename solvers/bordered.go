@@ -350,20 +350,17 @@ func (f *BorderedLU) loadLanes(g *laneGroup) {
 func (f *BorderedLU) Factor() error {
 	f.stats.Factorizations++
 	f.usesGen = false
-	clear(f.lu)
-	dissolve := -1
-	for i := range f.groups {
+	for i := 0; i < len(f.groups); {
 		g := &f.groups[i]
+		v := f.lu[g.at:][:lanes*g.prog.slots]
+		clear(v)
 		f.loadLanes(g)
-		if !g.prog.factorLanes(f.lu[g.at:][:lanes*g.prog.slots]) {
-			dissolve = i
-			break
+		if !g.prog.factorLanes(v) {
+			// Some block needs pivots of its own: its group goes on one by one.
+			f.dissolve(i)
+			continue
 		}
-	}
-	if dissolve >= 0 {
-		// Some block needs pivots of its own: its group goes on one by one.
-		f.dissolve(dissolve)
-		return f.Factor()
+		i++
 	}
 	for _, k := range f.single {
 		if f.prog[k] == nil {
@@ -372,6 +369,7 @@ func (f *BorderedLU) Factor() error {
 			}
 			continue
 		}
+		clear(f.lu[f.at[k]:][:f.prog[k].slots])
 		f.load(k)
 		if f.m.Blocks[k].Own == 0 {
 			continue

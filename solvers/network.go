@@ -43,7 +43,7 @@ type Network struct {
 type netBlock struct {
 	b      Block
 	diff   Differentiable
-	direct CompactJacobian
+	fill   JacobianFiller
 	timed  TimeDependent
 	ports  int
 	own    int
@@ -130,7 +130,7 @@ func (n *Network) Add(b Block, at []int, scale []float64, absolute []bool) (int,
 	}
 	nb := netBlock{b: b, ports: ports, own: own, lo: n.nOwn, at: append([]int(nil), at...), scale: scale, abs: absolute}
 	nb.diff, _ = b.(Differentiable)
-	nb.direct, _ = b.(CompactJacobian)
+	nb.fill, _ = b.(JacobianFiller)
 	nb.timed, _ = b.(TimeDependent)
 	n.blocks = append(n.blocks, nb)
 	n.nOwn += own
@@ -518,8 +518,8 @@ func (n *Network) Linearise(t float64, y []float64) error {
 		m := &n.matrix.Blocks[b.mat]
 		values := m.Values[:b.nDense]
 		switch {
-		case b.direct != nil:
-			b.direct.JacobianEntries(values, t, v, own)
+		case b.fill != nil:
+			b.fill.FillJacobian(b.jac, t, v, own)
 		case b.diff != nil:
 			b.diff.Jacobian(b.jac, t, v, own)
 		default:
@@ -527,20 +527,19 @@ func (n *Network) Linearise(t float64, y []float64) error {
 				return &BlockError{k, err}
 			}
 		}
-		if b.direct == nil {
-			jac := b.jac
-			for i, k := range b.from {
+		jac := b.jac
+		if b.nPort >= 0 {
+			for i, k := range b.from[:b.nPort] {
 				values[i] = jac[k]
 			}
-		}
-		if b.nPort >= 0 {
 			rest := values[b.nPort:]
-			for i, x := range rest {
-				rest[i] = -x
+			for i, k := range b.from[b.nPort:] {
+				rest[i] = -jac[k]
 			}
 		} else {
-			for i, e := range m.Pattern[:b.nDense] {
-				if e.Row >= b.ports {
+			for i, k := range b.from {
+				values[i] = jac[k]
+				if m.Pattern[i].Row >= b.ports {
 					values[i] = -values[i]
 				}
 			}
