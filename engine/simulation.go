@@ -482,16 +482,20 @@ func (m *Simulation) islandSpeed(is *island, t float64, y []float64) float64 {
 	return sum / weight
 }
 
+// frameStride is the number of steps from one look at the speeds of the sources
+// to the next: a look costs as much as a third of an evaluation.
+const frameStride = 4
+
 // followFrames turns an island's frame to the speed its sources have settled
 // at. The angle of the frame is continuous, so no unknown changes; only what
 // the equations call the frame's speed does.
 func (m *Simulation) followFrames() error {
-	if m.opt.FixedFrame {
+	if m.opt.FixedFrame || m.step.Stats().Steps%frameStride != 0 {
 		return nil
 	}
 	const (
 		worth   = 2e-5 // of nominal: 1 mHz at 50 Hz
-		settled = 0.02 // drift over the last step, relative to what is gained
+		settled = 0.02 // drift since the last look, relative to what is gained
 	)
 	n := len(m.topo.islands)
 	if len(m.lean.mean) != n {
