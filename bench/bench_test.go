@@ -8,6 +8,7 @@ import (
 	"testing"
 	"time"
 
+	"islet/cases"
 	"islet/engine"
 )
 
@@ -164,5 +165,19 @@ func TestMicrogrid(t *testing.T) {
 		if v := tr.Column(fmt.Sprintf("bus-%d.v", b))[last]; math.Abs(v-400) > 40 {
 			t.Errorf("bus %d ends at %g V", b, v)
 		}
+	}
+}
+
+// BenchmarkCaseLoading is a case file read, checked and built into a network, up
+// to the search for the operating point, which isn't in it.
+func BenchmarkCaseLoading(b *testing.B) {
+	for _, name := range []string{"starter", "harbour", "mesh-100", "mesh-1000"} {
+		b.Run(name, func(b *testing.B) {
+			for b.Loop() {
+				if _, err := cases.Open(name); err != nil {
+					b.Fatal(err)
+				}
+			}
+		})
 	}
 }

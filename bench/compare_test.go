@@ -4,17 +4,11 @@ package bench
 
 import (
 	"context"
-	"flag"
 	"os"
 	"testing"
 
 	"islet/bench/sundials"
 	"islet/solvers"
-)
-
-var (
-	full    = flag.Bool("full", false, "compare at full length, with repetitions")
-	csvPath = flag.String("csv", "", "write the raw data of the comparison to this file")
 )
 
 // reference is the setup of reference runs: IDA, so that our methods are not

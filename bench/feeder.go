@@ -17,7 +17,7 @@ import (
 //	grid - breaker - head - junction - mid (grid-forming, load)
 //	                            \---- end (grid-following, load)
 func FeederStudy() Study {
-	return Study{Name: "feeder", Until: 4, Start: startFeeder}
+	return Study{Name: "feeder", Until: 4, Start: startFeeder, Signal: "end.v"}
 }
 
 func startFeeder(o *engine.Options) (*engine.Simulation, error) {

@@ -8,8 +8,9 @@ import (
 // HarbourStudy is the shipped harbour case over its whole time.
 func HarbourStudy() Study {
 	return Study{
-		Name:  "harbour",
-		Until: 2.5,
+		Name:   "harbour",
+		Signal: "mainland.v",
+		Until:  2.5,
 		Start: func(o *engine.Options) (*engine.Simulation, error) {
 			c, err := cases.Open("harbour")
 			if err != nil {

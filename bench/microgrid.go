@@ -5,6 +5,7 @@ import (
 	"fmt"
 	"math"
 	"math/rand/v2"
+	"slices"
 
 	"islet/devices"
 	"islet/engine"
@@ -16,7 +17,18 @@ import (
 // 30 % followers at half their rating, buses in a square mesh of short cables,
 // and at every bus a parallel R-L load of about 60 % of what the bus can give.
 // Every device at full detail. The same number gives the same network.
-func Microgrid(inverters int) (*engine.System, error) {
+func Microgrid(inverters int) (*engine.System, error) { return microgrid(inverters, shipped) }
+
+// formers says which grid-forming inverters a microgrid has.
+type formers int
+
+const (
+	shipped   formers = iota // those of package devices
+	droopOnly                // of them, droop alone, and no current limit
+	plain                    // the same as a user writes them, see plainDroop
+)
+
+func microgrid(inverters int, which formers) (*engine.System, error) {
 	if inverters < 4 {
 		return nil, fmt.Errorf("bench: a microgrid of %d inverters, want at least 4", inverters)
 	}
@@ -41,9 +53,19 @@ func Microgrid(inverters int) (*engine.System, error) {
 		va := 20e3 + 30e3*rng.Float64()
 		if k%10 < 7 {
 			control := controls[(k/10*7+k%10)%len(controls)]
+			if which != shipped {
+				control = devices.DroopControl
+			}
 			p, err := devices.GridFormingNameplate{Power: va, Voltage: volts, Frequency: hertz, P: va / 2, Control: control}.Params()
-			var d *devices.GridForming
-			if err == nil {
+			if which != shipped {
+				p.IMax = math.Inf(1)
+			}
+			var d engine.Device
+			switch {
+			case err != nil:
+			case which == plain:
+				d = newPlainDroop(p)
+			default:
 				d, err = devices.NewGridForming(p)
 			}
 			capacity[b] += va
@@ -87,6 +109,33 @@ func Microgrid(inverters int) (*engine.System, error) {
 		return nil, err
 	}
 	return s, nil
+}
+
+// microgridSignals lists what a study of a microgrid records: at the buses of the
+// load steps and at others, ten in all if there are so many, the voltage, and
+// the power and current of an inverter.
+func microgridSignals(inverters int) []string {
+	n := (inverters + 3) / 4
+	var list []int
+	for k := 0; len(list) < min(10, n); k++ {
+		b := 7 * k % n
+		if k >= 4 {
+			b = (k*n/10 + 1) % n
+		}
+		for slices.Contains(list, b) {
+			b = (b + 1) % n
+		}
+		list = append(list, b)
+	}
+	var names []string
+	for _, b := range list {
+		kind := "former"
+		if b%10 >= 7 {
+			kind = "follower"
+		}
+		names = append(names, fmt.Sprintf("bus-%d.v", b), fmt.Sprintf("%s-%d.p", kind, b), fmt.Sprintf("%s-%d.i", kind, b))
+	}
+	return names
 }
 
 // microgridSteps schedules eight load steps, one every 1.8 s from 0.5 s on: a
