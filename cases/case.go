@@ -211,8 +211,8 @@ func (r DetailRule) selector(specs []deviceSpec, buses []busSpec) (func(i int) b
 	}, nil
 }
 
-// reach marks the buses at most hops lines, transformers or breakers away from
-// a bus, or from the buses of a device.
+// reach marks the buses at most hops lines, transformers, breakers or reduced
+// networks away from a bus, or from the buses of a device.
 func reach(specs []deviceSpec, buses []busSpec, name string, hops int) ([]bool, error) {
 	within := make([]bool, len(buses))
 	var front []int
@@ -238,10 +238,15 @@ func reach(specs []deviceSpec, buses []busSpec, name string, hops int) ([]bool, 
 		var next []int
 		for i := range specs {
 			at := specs[i].at
-			if len(at) != 2 || within[at[0]] == within[at[1]] {
-				continue
+			inside := 0
+			for _, b := range at {
+				if within[b] {
+					inside++
+				}
 			}
-			next = append(next, at...)
+			if inside > 0 && inside < len(at) {
+				next = append(next, at...)
+			}
 		}
 		for _, b := range next {
 			within[b] = true

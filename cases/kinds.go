@@ -28,8 +28,8 @@ type site struct {
 type kind struct {
 	name      string // as devices describe themselves
 	doc       string
-	terminals []string // keys of the buses: bus, or from and to
-	sameVolts bool     // both buses have one voltage
+	terminals []string // keys of the buses: bus, from and to, or buses for a list
+	sameVolts bool     // all its buses have one voltage
 	infos     []keyInfo
 	read      func(d *document, path []string, table map[string]any, skip []string) (part, *values)
 }
@@ -62,13 +62,17 @@ func makeKind[T any, P interface {
 var (
 	shunt  = []string{"bus"}
 	branch = []string{"from", "to"}
+	multi  = []string{"buses"} // any number of them, in a list
 )
+
+// many tells whether the kind's buses stand in a list.
+func (k *kind) many() bool { return k.terminals[0] == multi[0] }
 
 // kinds is the table of device kinds, in the order of the reference.
 func kinds() []*kind {
 	return []*kind{
 		gridKind(), formingKind(), followingKind(),
-		lineKind(), transformerKind(), breakerKind(),
+		lineKind(), transformerKind(), breakerKind(), reducedKind(),
 		loadKind(), seriesLoadKind(), capacitorKind(),
 		faultKind(), meterKind(),
 	}

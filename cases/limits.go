@@ -10,6 +10,7 @@ const (
 	MaxName    = 64   // bytes of a name
 	MaxString  = 4096 // bytes of any other string
 	MaxEntries = 100  // of a list, and of detail rules
+	MaxNumbers = 1000 // of a list of numbers, or of buses of a reduced network
 
 	maxKeys     = 200000 // keys and tables of a file
 	maxNesting  = 8      // parts of a key; arrays and inline tables within each other

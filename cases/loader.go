@@ -232,11 +232,19 @@ func (l *loader) devices() {
 // touch marks the buses that a device at fault names as used, so that they
 // aren't reported too.
 func (l *loader) touch(t map[string]any) {
-	for _, k := range []string{"bus", "from", "to"} {
-		if s, ok := t[k].(string); ok {
+	mark := func(v any) {
+		if s, ok := v.(string); ok {
 			if b, ok := l.busAt[s]; ok {
 				l.used[b] = true
 			}
+		}
+	}
+	for _, k := range []string{"bus", "from", "to"} {
+		mark(t[k])
+	}
+	if list, ok := t["buses"].([]any); ok {
+		for _, v := range list {
+			mark(v)
 		}
 	}
 }
@@ -245,14 +253,38 @@ func (l *loader) touch(t map[string]any) {
 func (l *loader) terminals(s *deviceSpec, p []string, t map[string]any) bool {
 	d := l.doc
 	good := true
-	for _, k := range s.kind.terminals {
-		key := []string{p[0], p[1], k}
+	keys, ends := s.kind.terminals, make([]any, 0, 2)
+	for _, k := range keys {
 		v, ok := t[k]
 		if !ok {
-			d.fault(p, "%s needs %s, the name of a bus", s.kind.what(), strings.Join(s.kind.terminals, " and "))
+			of := "the name of a bus"
+			if s.kind.many() {
+				of = "a list of the names of its buses"
+			}
+			d.fault(p, "%s needs %s, %s", s.kind.what(), strings.Join(keys, " and "), of)
 			good = false
 			break
 		}
+		ends = append(ends, v)
+	}
+	if s.kind.many() && good {
+		list, ok := ends[0].([]any)
+		switch {
+		case !ok:
+			d.fault([]string{p[0], p[1], keys[0]}, "%s; want a list of the names of its buses", typeName(ends[0]))
+			return false
+		case len(list) == 0:
+			d.fault([]string{p[0], p[1], keys[0]}, "no buses; want a list of the names of its buses")
+			return false
+		case len(list) > MaxNumbers:
+			d.fault([]string{p[0], p[1], keys[0]}, "%d entries; accepted are %d", len(list), MaxNumbers)
+			return false
+		}
+		ends = list
+	}
+	for i, v := range ends {
+		k := keys[min(i, len(keys)-1)]
+		key := []string{p[0], p[1], k}
 		name, ok := v.(string)
 		if !ok {
 			d.fault(key, "%s; want the name of a bus", typeName(v))
@@ -278,10 +310,16 @@ func (l *loader) terminals(s *deviceSpec, p []string, t map[string]any) bool {
 		l.used[b] = true
 		good = good && !l.badBus[name]
 	}
-	if good && len(s.at) == 2 {
-		a, b := l.c.buses[s.at[0]], l.c.buses[s.at[1]]
+	seen := make(map[int]bool)
+	for k := 0; good && k < len(s.at); k++ {
+		first, twice := s.at[0], seen[s.at[k]]
+		seen[s.at[k]] = true
+		a, b := l.c.buses[first], l.c.buses[s.at[k]]
 		switch {
-		case s.at[0] == s.at[1]:
+		case twice && s.kind.many():
+			d.fault(p, "bus %s is listed twice; want different ones", b.name)
+			good = false
+		case twice:
 			d.fault(p, "from and to are the same bus %s; want two", a.name)
 			good = false
 		case s.kind.sameVolts && math.Abs(a.volts-b.volts) > 1e-9*a.volts:
@@ -317,8 +355,10 @@ func (u union) find(i int) int {
 func (l *loader) feeding() {
 	u := newUnion(len(l.c.buses))
 	for _, s := range l.c.devices {
-		if s.kind.sameVolts && len(s.at) == 2 && s.at[0] >= 0 && s.at[1] >= 0 {
-			u[u.find(s.at[0])] = u.find(s.at[1])
+		for k := 1; s.kind.sameVolts && k < len(s.at); k++ {
+			if s.at[0] >= 0 && s.at[k] >= 0 {
+				u[u.find(s.at[0])] = u.find(s.at[k])
+			}
 		}
 	}
 	sum := make(map[int]float64)
@@ -361,8 +401,8 @@ func (l *loader) connections() {
 		}
 		_, former := l.built[i].(facet.Former)
 		sw, switched := l.built[i].(facet.Switchable)
-		if len(s.at) == 2 && (!switched || sw.Closed()) {
-			u[u.find(s.at[0])] = u.find(s.at[1])
+		for k := 1; k < len(s.at) && (!switched || sw.Closed()); k++ {
+			u[u.find(s.at[0])] = u.find(s.at[k])
 		}
 		if former {
 			source[s.at[0]] = true

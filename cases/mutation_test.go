@@ -58,6 +58,13 @@ from = "b"
 to = "c"
 open = true
 contact_resistance_mohm = 2
+[device.r]
+kind = "reduced network"
+buses = ["a", "b"]
+R_ohm = [0.1, 0.2]
+L_H = [1e-4, 3e-4]
+drive = [[1, -1], [0.5, 1]]
+rated_current_A = 200
 [device.inv-1]
 kind = "grid-forming inverter"
 bus = "b"

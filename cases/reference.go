@@ -61,7 +61,7 @@ func referenceSection(b *strings.Builder, section string) {
 		referenceTable(b, infosOf(busFields()))
 	case "device":
 		fmt.Fprintf(b, "[device.NAME]\n  kind          one of %s\n", strings.Join(kindNames(), ", "))
-		b.WriteString("  bus           the bus it is connected to, or\n  from, to      its two buses; for a transformer the high-voltage one is from\n")
+		b.WriteString("  bus           the bus it is connected to, or\n  from, to      its two buses; for a transformer the high-voltage one is from\n  buses         a list of them, for a reduced network\n")
 	case "event":
 		b.WriteString("[event.NAME]\nEvents at one time happen in the order in which they stand.\n")
 		referenceTable(b, infosOf(eventFields()))
@@ -86,7 +86,11 @@ func referenceKind(b *strings.Builder, k *kind) {
 	fmt.Fprintf(b, "kind = %q\n%s\n", k.name, k.doc)
 	var infos []keyInfo
 	for _, t := range k.terminals {
-		infos = append(infos, keyInfo{name: t, def: "required", doc: "the bus at this terminal", form: text})
+		info := keyInfo{name: t, def: "required", doc: "the bus at this terminal", form: text}
+		if k.many() {
+			info.doc, info.form = "the buses at its terminals, in order", texts
+		}
+		infos = append(infos, info)
 	}
 	referenceTable(b, append(infos, k.infos...))
 }

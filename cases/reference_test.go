@@ -18,6 +18,7 @@ var bases = map[string][]string{
 	"line":                    {"length_m = 100\nresistance_ohm_per_km = 0.2\nreactance_ohm_per_km = 0.1", "length_m = 100\nR_ohm = 1\nL_H = 1e-3"},
 	"transformer":             {"power_kVA = 10\nimpedance_percent = 4\nx_over_r = 3\nno_load_current_percent = 1\nno_load_loss_kW = 0.05", "power_kVA = 10\nimpedance_percent = 4\nx_over_r = 3"},
 	"breaker":                 {""},
+	"reduced network":         {"R_ohm = [1]\nL_H = [1e-3]\ndrive = [[1, -1]]"},
 	"load":                    {"power_kW = 10\nreactive_kvar = 3", "power_kW = 10", "reactive_kvar = -3"},
 	"series load":             {"power_kW = 10"},
 	"shunt capacitor":         {"reactive_kvar = 10"},
@@ -31,6 +32,8 @@ func one(kind, table string) (any, error) {
 	ends := "bus = \"a\""
 	if len(k.terminals) == 2 {
 		ends = "from = \"a\"\nto = \"b\""
+	} else if k.many() {
+		ends = "buses = [\"a\", \"b\"]"
 	}
 	src := "[study]\nuntil_s = 1\n[bus.a]\nvoltage_kV = 0.4\n[bus.b]\nvoltage_kV = 0.4\n" +
 		"[device.g]\nkind = \"grid\"\nbus = \"a\"\nshort_circuit_MVA = 1\n[device.l]\nkind = \"line\"\nfrom = \"a\"\nto = \"b\"\nR_ohm = 1\n" +

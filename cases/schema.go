@@ -31,10 +31,12 @@ const (
 	text
 	flag
 	texts
+	numbers
+	rows
 )
 
 func (f form) String() string {
-	return [...]string{"a number", "a string", "true or false", "a list of strings"}[f]
+	return [...]string{"a number", "a string", "true or false", "a list of strings", "a list of numbers", "a list of lists of numbers"}[f]
 }
 
 // accepted says in words what values pass.
@@ -62,7 +64,7 @@ func (k *keyInfo) accepted() string {
 
 // span is accepted in the short form of the reference.
 func (k *keyInfo) span() string {
-	if k.form != number || math.IsInf(k.max, 1) {
+	if k.form != number && k.form != numbers && k.form != rows || math.IsInf(k.max, 1) {
 		return k.accepted()
 	}
 	s := figure(k.min) + " to " + figure(k.max)
@@ -98,6 +100,7 @@ type field[T any] struct {
 	flag  func(*T, bool)
 	text  func(*T, string)
 	texts func(*T, []string)
+	rows  func(*T, [][]float64) // of a list of numbers: the only row
 }
 
 // values is what a table held.
@@ -149,6 +152,17 @@ func yes[T any](name string, set func(*T, bool), doc string) field[T] {
 
 func words[T any](name, def string, set func(*T, []string), doc string) field[T] {
 	return field[T]{keyInfo: keyInfo{name: name, def: def, doc: doc, form: texts}, texts: set}
+}
+
+// series sets up a field for a list of numbers, each within the bounds.
+func series[T any](name, unit, def string, min, max float64, set func(*T, []float64), doc string) field[T] {
+	return field[T]{keyInfo: keyInfo{name: name, unit: unit, def: def, doc: doc, form: numbers, min: min, max: max},
+		rows: func(d *T, r [][]float64) { set(d, r[0]) }}
+}
+
+// matrix sets up a field for a list of lists of numbers.
+func matrix[T any](name, unit, def string, min, max float64, set func(*T, [][]float64), doc string) field[T] {
+	return field[T]{keyInfo: keyInfo{name: name, unit: unit, def: def, doc: doc, form: rows, min: min, max: max}, rows: set}
 }
 
 // asTable returns a value as a table, or notes a fault.
@@ -292,8 +306,64 @@ func (f *field[T]) take(v *values, value any, dst *T) bool {
 			out = append(out, s)
 		}
 		f.texts(dst, out)
+	case numbers:
+		r, ok := f.takeRow(v, value)
+		if !ok {
+			return false
+		}
+		f.rows(dst, [][]float64{r})
+	case rows:
+		l, ok := value.([]any)
+		if !ok {
+			v.fault(f.name, "%s; want %s", typeName(value), f.form)
+			return false
+		}
+		if len(l) > MaxNumbers {
+			v.fault(f.name, "%d entries; accepted are %d", len(l), MaxNumbers)
+			return false
+		}
+		out := make([][]float64, 0, len(l))
+		for _, e := range l {
+			r, ok := f.takeRow(v, e)
+			if !ok {
+				return false
+			}
+			out = append(out, r)
+		}
+		f.rows(dst, out)
 	}
 	return true
+}
+
+// takeRow checks a list of numbers.
+func (f *field[T]) takeRow(v *values, value any) ([]float64, bool) {
+	l, ok := value.([]any)
+	if !ok {
+		v.fault(f.name, "%s; want %s", typeName(value), f.form)
+		return nil, false
+	}
+	if len(l) > MaxNumbers {
+		v.fault(f.name, "%d entries; accepted are %d", len(l), MaxNumbers)
+		return nil, false
+	}
+	out := make([]float64, 0, len(l))
+	for _, e := range l {
+		x, ok := toNumber(e)
+		if !ok {
+			v.fault(f.name, "holds %s; want %s", typeName(e), f.form)
+			return nil, false
+		}
+		if !((x > f.min || x == f.min && !f.open) && x <= f.max) {
+			open := ""
+			if f.open {
+				open = "> "
+			}
+			v.fault(f.name, "holds %v; accepted are %s%s to %s", x, open, figure(f.min), figure(f.max))
+			return nil, false
+		}
+		out = append(out, x)
+	}
+	return out, true
 }
 
 func toNumber(v any) (float64, bool) {
