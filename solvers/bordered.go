@@ -22,7 +22,11 @@ type BorderedMatrix struct {
 	// BorderFixed marks rows of the border that have a one on the diagonal
 	// in addition; nil means none.
 	BorderFixed []bool
-	Shift       float64
+	// Paired says that the rows and columns of the border come in pairs (the
+	// two components of a node), which Border then is even for. It is worth
+	// telling; it is no matter of right or wrong.
+	Paired bool
+	Shift  float64
 }
 
 // BorderedBlock is a block of a [BorderedMatrix].
@@ -63,9 +67,11 @@ type BorderedLU struct {
 	lu     []float64
 	mid    []float64 // of groups: own entries, then port entries, half-way through a solution
 	border *CSC
-	diagAt []int   // border row -> slot in border.X
-	slots  [][]int // block -> for each PortRow, for each port column: slot in border.X
-	blu    *SparseLU
+	diagAt []int     // border row -> slot in border.X
+	slots  [][]int   // block -> for each PortRow, for each port column: slot in border.X
+	pairs  *pairLU   // of the border, where it comes in pairs
+	blu    *SparseLU // of the border, made when first needed where there is pairs
+	paired bool      // the present factors are those of pairs
 	c, x   []float64 // local workspace
 
 	general *SparseLU // of the whole matrix, made when first needed
@@ -101,6 +107,7 @@ type BorderedStats struct {
 	Factorizations int
 	Repivoted      int // blocks that got new pivots
 	General        int // factorisations of the whole matrix by a SparseLU
+	Unpaired       int // factorisations of a paired border by a SparseLU
 	BorderNonzeros int // of the border matrix, before fill
 }
 
@@ -167,17 +174,32 @@ func NewBorderedLU(m *BorderedMatrix) (*BorderedLU, error) {
 			f.slots = append(f.slots, slot[:w])
 			slot = slot[w:]
 		}
-		var err error
-		if f.blu, err = NewSparseLU(f.border, LUOptions{}); err != nil {
-			var s *SingularError
-			if errors.As(err, &s) {
-				s.Column += f.n - m.Border
-			}
+		if m.Paired {
+			f.pairs = newPairLU(f.border)
+		} else if err := f.newBorderLU(); err != nil {
 			return nil, err
 		}
 		f.stats.BorderNonzeros = len(f.border.X)
 	}
 	return f, nil
+}
+
+// newBorderLU makes the scalar factorisation of the border.
+func (f *BorderedLU) newBorderLU() (err error) {
+	f.blu, err = NewSparseLU(f.border, LUOptions{})
+	return f.bordersColumn(err)
+}
+
+// bordersColumn counts the column of a singular border from the first unknown.
+func (f *BorderedLU) bordersColumn(err error) error {
+	if err == nil {
+		return nil
+	}
+	var s *SingularError
+	if errors.As(err, &s) {
+		return &SingularError{Column: f.n - f.m.Border + s.Column, Pivot: s.Pivot}
+	}
+	return err
 }
 
 // group puts blocks of one program together by fours, in their order, and gives
@@ -239,6 +261,9 @@ func (m *BorderedMatrix) check() error {
 	bad := func(format string, a ...any) { errs = append(errs, fmt.Errorf("solvers: "+format, a...)) }
 	if m.Border < 0 {
 		bad("border order is %d", m.Border)
+	}
+	if m.Paired && m.Border%2 != 0 {
+		bad("border order is %d, want an even one for pairs", m.Border)
 	}
 	if m.BorderMass != nil && len(m.BorderMass) != m.Border {
 		bad("BorderMass has %d entries, want %d", len(m.BorderMass), m.Border)
@@ -415,14 +440,18 @@ func (f *BorderedLU) Factor() error {
 			}
 		}
 	}
-	if err := f.blu.Factor(); err != nil {
-		var s *SingularError
-		if errors.As(err, &s) {
-			return &SingularError{Column: f.n - f.m.Border + s.Column, Pivot: s.Pivot}
+	if f.pairs != nil {
+		if f.paired = f.pairs.factor(); f.paired {
+			return nil
 		}
-		return err
+		f.stats.Unpaired++
+		if f.blu == nil {
+			if err := f.newBorderLU(); err != nil {
+				return err
+			}
+		}
 	}
-	return nil
+	return f.bordersColumn(f.blu.Factor())
 }
 
 // dissolve takes a group apart; its blocks get places of their own.
@@ -574,7 +603,11 @@ func (f *BorderedLU) Solve(b []float64) {
 		}
 	}
 	if f.m.Border > 0 {
-		f.blu.Solve(border)
+		if f.paired {
+			f.pairs.solve(border)
+		} else {
+			f.blu.Solve(border)
+		}
 	}
 	for i := range f.groups {
 		g := &f.groups[i]
@@ -640,7 +673,11 @@ func (f *BorderedLU) SolveTranspose(b []float64) {
 		}
 	}
 	if f.m.Border > 0 {
-		f.blu.SolveTranspose(border)
+		if f.paired {
+			f.pairs.solveTranspose(border)
+		} else {
+			f.blu.SolveTranspose(border)
+		}
 	}
 	for k := range f.m.Blocks {
 		blk := &f.m.Blocks[k]

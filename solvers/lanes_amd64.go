@@ -41,3 +41,8 @@ func combineTwoAVX(dst, acc, y, scale *float64, n int, ac *float64, u *[]float64
 //
 //go:noescape
 func addAVX(dst, src *float64, n int)
+
+// pairUpdateAVX is pairUpdateGo; n > 0.
+//
+//go:noescape
+func pairUpdateAVX(work *float64, w *[4]float64, col *int32, u *float64, n int)

@@ -373,3 +373,35 @@ four:
 	JG      four
 	VZEROUPPER
 	RET
+
+// func pairUpdateAVX(work *float64, w *[4]float64, col *int32, u *float64, n int)
+TEXT ·pairUpdateAVX(SB), NOSPLIT, $0-40
+	MOVQ        work+0(FP), R8
+	MOVQ        w+8(FP), R9
+	MOVQ        col+16(FP), DI
+	MOVQ        u+24(FP), SI
+	MOVQ        n+32(FP), CX
+	VMOVDDUP    (R9), X0
+	VMOVDDUP    16(R9), X1
+	VINSERTF128 $1, X1, Y0, Y0   // w0 w0 w2 w2
+	VMOVDDUP    8(R9), X1
+	VMOVDDUP    24(R9), X2
+	VINSERTF128 $1, X2, Y1, Y1   // w1 w1 w3 w3
+
+block:
+	MOVLQSX        (DI), AX
+	SHLQ           $5, AX
+	VBROADCASTF128 (SI), Y2      // u0 u1 u0 u1
+	VBROADCASTF128 16(SI), Y3    // u2 u3 u2 u3
+	VMULPD         Y2, Y0, Y2
+	VMULPD         Y3, Y1, Y3
+	VMOVUPD        (R8)(AX*1), Y4
+	VSUBPD         Y2, Y4, Y4
+	VSUBPD         Y3, Y4, Y4
+	VMOVUPD        Y4, (R8)(AX*1)
+	ADDQ           $4, DI
+	ADDQ           $32, SI
+	DECQ           CX
+	JNZ            block
+	VZEROUPPER
+	RET

@@ -12,3 +12,4 @@ func interleaveAVX(*float64, int, *float64, *float64, *float64, *float64)       
 func separateAVX(*float64, *float64, *float64, *float64, int, *float64)         { panic("no AVX") }
 func combineTwoAVX(_, _, _, _ *float64, _ int, _ *float64, _ *[]float64, _ int) { panic("no AVX") }
 func addAVX(_, _ *float64, _ int)                                               { panic("no AVX") }
+func pairUpdateAVX(*float64, *[4]float64, *int32, *float64, int)                { panic("no AVX") }

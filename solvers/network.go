@@ -252,7 +252,7 @@ func (n *Network) Configure(c Configuration) error {
 	}
 	n.active, n.evals = n.active[:0], n.evals[:0]
 	n.frozen = n.frozen[:0]
-	n.matrix = BorderedMatrix{Border: n.nodes, BorderMass: n.nodeMass, BorderFixed: n.fixed}
+	n.matrix = BorderedMatrix{Border: n.nodes, BorderMass: n.nodeMass, BorderFixed: n.fixed, Paired: n.width == 2}
 	n.algRow = make([]bool, n.n)
 	type shared struct {
 		jac  []float64
