@@ -48,6 +48,8 @@ type call struct {
 	settings list
 	repeat   int
 	windows  string
+
+	shrink shrinkOptions
 }
 
 // list is a flag that may be given several times.
@@ -150,8 +152,8 @@ func (c *call) exit(err error) int {
 	return exitFailed
 }
 
-// openCase reads the case named on the command line, with overrides.
-func (c *call) openCase() (*cases.Case, error) {
+// overrides reads --set options.
+func (c *call) overrides() ([]cases.Override, error) {
 	var ov []cases.Override
 	for _, s := range c.sets {
 		p, v, ok := strings.Cut(s, "=")
@@ -159,6 +161,15 @@ func (c *call) openCase() (*cases.Case, error) {
 			return nil, fmt.Errorf("%w: --set %q: want PATH=VALUE", errUsage, s)
 		}
 		ov = append(ov, cases.Override{Path: strings.TrimSpace(p), Value: strings.TrimSpace(v)})
+	}
+	return ov, nil
+}
+
+// openCase reads the case named on the command line, with overrides.
+func (c *call) openCase() (*cases.Case, error) {
+	ov, err := c.overrides()
+	if err != nil {
+		return nil, err
 	}
 	k, err := cases.Open(c.args[0], ov...)
 	if err != nil {

@@ -1,0 +1,266 @@
+package main
+
+import (
+	"context"
+	"errors"
+	"fmt"
+	"io"
+	"os"
+	"path/filepath"
+	"strings"
+
+	"islet/cases"
+	"islet/engine"
+	"islet/engine/compare"
+)
+
+// shrinkOptions are the options of islet shrink.
+type shrinkOptions struct {
+	keep           list
+	loads          bool
+	plainBranches  bool
+	noConfirmation bool
+}
+
+func shrinkFlags(c *call) {
+	c.fs.Var(&c.sets, "set", "`PATH=VALUE`: override a value of the case first; may be repeated")
+	c.fs.Var(&c.shrink.keep, "keep", "`BUS,...`: buses to keep, all others go if they can; may be repeated (default: every bus goes that can)")
+	c.fs.BoolVar(&c.shrink.loads, "loads-as-impedances", false, "take loads of resistance and inductance into the reduced network, so that their buses can go")
+	c.fs.BoolVar(&c.shrink.plainBranches, "plain-branches", false, "write plain lines that are right at the nominal frequency, in place of the exact form; the error is shown")
+	c.fs.StringVar(&c.out, "out", "", "write the reduced case to `FILE`; - for standard output without the report")
+	c.fs.BoolVar(&c.shrink.noConfirmation, "no-run", false, "don't run both cases to compare them")
+	c.fs.Float64Var(&c.until, "until", 0, "end of the runs compared, `s` (default: the case's)")
+	c.fs.Float64Var(&c.tolerance, "tolerance", 0, "accuracy asked of the waveforms compared, relative to their range (default: the case's, or 1e-6)")
+	c.fs.BoolVar(&c.quiet, "quiet", false, "no progress")
+	c.fs.BoolVar(&c.verbose, "verbose", false, "tell more on standard error")
+}
+
+func cmdShrink(ctx context.Context, c *call) error {
+	full, err := c.openCase()
+	if err != nil {
+		return err
+	}
+	if c.until < 0 {
+		return fmt.Errorf("%w: --until %g: want a positive time", errUsage, c.until)
+	}
+	name, source, err := cases.ReadSource(c.args[0])
+	if err != nil {
+		return fmt.Errorf("%w: %w", errInput, err)
+	}
+	ov, err := c.overrides()
+	if err != nil {
+		return err
+	}
+	o := cases.ShrinkOptions{LoadsAsImpedances: c.shrink.loads, PlainBranches: c.shrink.plainBranches}
+	for _, k := range c.shrink.keep {
+		for _, b := range strings.Split(k, ",") {
+			if b = strings.TrimSpace(b); b != "" {
+				o.Keep = append(o.Keep, b)
+			}
+		}
+	}
+	if len(c.shrink.keep) > 0 && len(o.Keep) == 0 {
+		return fmt.Errorf("%w: --keep %q: want names of buses with commas between them", errUsage, c.shrink.keep.String())
+	}
+	s, err := cases.Shrink(name, source, o, ov...)
+	if err != nil {
+		return fmt.Errorf("%w: %w", errInput, err)
+	}
+	if c.out == "-" {
+		_, err := c.stdout.Write(s.Source)
+		return err
+	}
+	fmt.Fprintf(c.stdout, "%s: %s\n\n", full.Name, full.Title)
+	reportShrunk(c.stdout, s, o)
+	if len(s.Groups) == 0 {
+		if c.out != "" {
+			fmt.Fprintf(c.stdout, "\nnothing to write to %s\n", c.out)
+		}
+		return nil
+	}
+	if !c.shrink.noConfirmation {
+		if err := confirmShrunk(ctx, c, full, s, o); err != nil {
+			return err
+		}
+	}
+	if c.out == "" {
+		fmt.Fprintf(c.stdout, "\nNot written; --out FILE writes the reduced case.\n")
+		return nil
+	}
+	if err := os.MkdirAll(filepath.Dir(c.out), 0o777); err != nil {
+		return err
+	}
+	if err := os.WriteFile(c.out, s.Source, 0o666); err != nil {
+		return err
+	}
+	fmt.Fprintf(c.stdout, "\nwritten to %s; islet run %s runs it\n", c.out, c.out)
+	return nil
+}
+
+// reportShrunk prints what was taken out, what stands for it, and why buses stay.
+func reportShrunk(w io.Writer, s *cases.Shrunk, o cases.ShrinkOptions) {
+	if len(s.Groups) == 0 {
+		fmt.Fprintf(w, "No bus can go; all %d stay.\n", s.Buses[0])
+	} else {
+		fmt.Fprintf(w, "%-10s %8s %8s\n", "", "before", "after")
+		for _, r := range []struct {
+			name string
+			n    [2]int
+		}{{"buses", s.Buses}, {"devices", s.Devices}, {"unknowns", s.Unknowns}} {
+			fmt.Fprintf(w, "%-10s %8d %8d\n", r.name, r.n[0], r.n[1])
+		}
+	}
+	for _, g := range s.Groups {
+		fmt.Fprintf(w, "\ntaken out  %s\n", wrap(g.Removed, 11))
+		fmt.Fprintf(w, "  with     %s\n", wrap(g.Absorbed, 11))
+		fmt.Fprintf(w, "  between  %s\n", wrap(g.Kept, 11))
+		switch {
+		case len(g.Became) == 0:
+			fmt.Fprintf(w, "  now      nothing: a dead end, in which no current flows\n")
+			continue
+		case g.Kind == "reduced network":
+			fmt.Fprintf(w, "  now      %s, %d RL circuits driven by combinations of the voltages\n", g.Became[0], len(g.Rates))
+		default:
+			kind := g.Kind
+			if len(g.Became) > 1 && !strings.HasSuffix(kind, "s") {
+				kind += "s"
+			}
+			fmt.Fprintf(w, "  now      %s (%s)\n", wrap(g.Became, 11), kind)
+		}
+		if len(g.Rates) > 0 {
+			fmt.Fprintf(w, "  decays   %s 1/s%s\n", rates(g.Rates), map[bool]string{true: ", one ratio R/L throughout"}[g.Uniform])
+		}
+		switch {
+		case g.Plain:
+			fmt.Fprintf(w, "  error    of the admittance of plain branches:")
+			for i, d := range g.Deviations {
+				if i > 0 {
+					fmt.Fprint(w, ",")
+				}
+				fmt.Fprintf(w, " %s at %g Hz", percent(d.Relative), d.Frequency)
+			}
+			fmt.Fprintln(w)
+		case g.PlainFault != "":
+			fmt.Fprintf(w, "  exact    after all, plain branches won't do: %s\n", g.PlainFault)
+		default:
+			fmt.Fprintf(w, "  error    none: exact at all frequencies and in transients\n")
+		}
+	}
+	if len(s.Stay) > 0 {
+		fmt.Fprintf(w, "\n%-20s why it stays\n", "bus")
+	}
+	draws := false
+	for _, b := range s.Stay {
+		why := strings.Join(b.Reasons, "; ")
+		if const3 := 3; len(b.Reasons) > const3 {
+			why = fmt.Sprintf("%s; and %d more", strings.Join(b.Reasons[:const3], "; "), len(b.Reasons)-const3)
+		}
+		if b.Asked {
+			why = "asked for"
+		}
+		for _, r := range b.Reasons {
+			draws = draws || !b.Asked && strings.HasSuffix(r, "draws current")
+		}
+		fmt.Fprintf(w, "%-20s %s\n", b.Bus, why)
+	}
+	if draws && !o.LoadsAsImpedances {
+		fmt.Fprintf(w, "Loads can be taken in with --loads-as-impedances.\n")
+	}
+	for _, n := range s.Notes {
+		fmt.Fprintf(w, "note: %s\n", n)
+	}
+}
+
+// wrap lists names in lines of moderate length, further ones indented.
+func wrap(names []string, indent int) string {
+	var b strings.Builder
+	width := 0
+	for i, n := range names {
+		if i > 0 {
+			b.WriteByte(',')
+			if width+len(n) > 90 {
+				b.WriteString("\n" + strings.Repeat(" ", indent))
+				width = 0
+			} else {
+				b.WriteByte(' ')
+			}
+		}
+		b.WriteString(n)
+		width += len(n) + 2
+	}
+	return b.String()
+}
+
+// rates lists rates of decay, or their range if there are many.
+func rates(r []float64) string {
+	if len(r) > 6 {
+		return fmt.Sprintf("%.4g to %.4g", r[0], r[len(r)-1])
+	}
+	out := make([]string, len(r))
+	for i, x := range r {
+		out[i] = fmt.Sprintf("%.4g", x)
+	}
+	return strings.Join(out, ", ")
+}
+
+// percent writes a ratio for people.
+func percent(x float64) string {
+	if x < 1e-9 {
+		return "0 %"
+	}
+	return fmt.Sprintf("%.2g %%", 100*x)
+}
+
+// confirmShrunk runs both cases and prints by how much waveforms deviate that both
+// have.
+func confirmShrunk(ctx context.Context, c *call, full *cases.Case, s *cases.Shrunk, o cases.ShrinkOptions) error {
+	small, err := cases.Parse(full.Name+"-reduced.toml", s.Source)
+	if err != nil {
+		return err
+	}
+	eo := engine.Options{Tolerance: c.tolerance}
+	setting := func(name string, k *cases.Case) compare.Setting {
+		return compare.Setting{Name: name, Start: func(o *engine.Options) (*engine.Simulation, error) { return k.Start(o) }}
+	}
+	co := compare.Options{Until: full.Until, Repetitions: 1, Engine: eo, Channels: nil}
+	if c.until > 0 {
+		co.Until = c.until
+	}
+	hook, clear := c.progress()
+	if hook != nil {
+		co.Progress = func(name string, run, of int) { hook(float64(run-1), float64(of)) }
+	}
+	r, err := compare.Run(ctx, []compare.Setting{setting("full", full), setting("reduced", small)}, co)
+	clear()
+	if err != nil {
+		return startError(err)
+	}
+	a, b := r.Results[0], r.Results[1]
+	fmt.Fprintf(c.stdout, "\nboth run to %g s: %d against %d unknowns, %d against %d steps, %s against %s (%.2f times as fast)\n",
+		co.Until, a.Unknowns, b.Unknowns, a.Steps, b.Steps, roundTime(a.Time), roundTime(b.Time), b.Speedup)
+	if b.Failure != "" {
+		return errors.New("the reduced case fails: " + b.Failure)
+	}
+	fmt.Fprintf(c.stdout, "largest deviation of the waveforms at what stays, %% of each one's range\n")
+	for _, g := range b.Groups {
+		var worst *compare.Channel
+		at := compare.Early
+		for w, ch := range g.Worst {
+			if ch != nil && (worst == nil || ch.Windows[w].Relative() > worst.Windows[at].Relative()) {
+				worst, at = ch, compare.Window(w)
+			}
+		}
+		if worst == nil || g.Name == "other" {
+			continue
+		}
+		d := worst.Windows[at]
+		fmt.Fprintf(c.stdout, "  %-10s %-9s %s at %g s (%.3g of %.4g %s)\n", g.Name, percent(d.Relative()), worst.Name, d.At, d.Max, d.Range, worst.Unit)
+	}
+	for _, ch := range b.Changes {
+		fmt.Fprintf(c.stdout, "VERDICT CHANGED: %s\n", ch)
+	}
+	if len(b.Changes) > 0 || o.PlainBranches {
+		fmt.Fprintln(c.stdout, "Results support, and never replace, local codes, utility requirements and a licensed engineer's judgement.")
+	}
+	return nil
+}
