@@ -97,6 +97,9 @@ func cmdShrink(ctx context.Context, c *call) error {
 	return nil
 }
 
+// shownReasons is how many of a bus's reasons to stay are printed.
+const shownReasons = 3
+
 // reportShrunk prints what was taken out, what stands for it, and why buses stay.
 func reportShrunk(w io.Writer, s *cases.Shrunk, o cases.ShrinkOptions) {
 	if len(s.Groups) == 0 {
@@ -152,19 +155,21 @@ func reportShrunk(w io.Writer, s *cases.Shrunk, o cases.ShrinkOptions) {
 	draws := false
 	for _, b := range s.Stay {
 		why := strings.Join(b.Reasons, "; ")
-		if const3 := 3; len(b.Reasons) > const3 {
-			why = fmt.Sprintf("%s; and %d more", strings.Join(b.Reasons[:const3], "; "), len(b.Reasons)-const3)
+		if n := len(b.Reasons); n > shownReasons {
+			why = fmt.Sprintf("%s; and %d more", strings.Join(b.Reasons[:shownReasons], "; "), n-shownReasons)
 		}
 		if b.Asked {
 			why = "asked for"
 		}
+		alone := len(b.Reasons) > 0 && !b.Asked
 		for _, r := range b.Reasons {
-			draws = draws || !b.Asked && strings.HasSuffix(r, "draws current")
+			alone = alone && strings.HasSuffix(r, "draws current")
 		}
+		draws = draws || alone
 		fmt.Fprintf(w, "%-20s %s\n", b.Bus, why)
 	}
 	if draws && !o.LoadsAsImpedances {
-		fmt.Fprintf(w, "Loads can be taken in with --loads-as-impedances.\n")
+		fmt.Fprintf(w, "Where loads are the only reason, --loads-as-impedances takes them in.\n")
 	}
 	for _, n := range s.Notes {
 		fmt.Fprintf(w, "note: %s\n", n)
@@ -211,6 +216,26 @@ func percent(x float64) string {
 	return fmt.Sprintf("%.2g %%", 100*x)
 }
 
+// watched lists what the two cases are compared by: voltage and frequency of the
+// buses that stay, and what their sources give. Channels of loads with capacitors
+// are no measure: they leave out the current that a change of the frame's speed
+// moves.
+func watched(full, small *cases.Case) []string {
+	var out []string
+	for _, b := range small.BusNames() {
+		out = append(out, b+".v", b+".frequency")
+	}
+	for _, d := range small.DeviceNames() {
+		switch small.Kind(d) {
+		case "grid", "grid-forming inverter", "grid-following inverter":
+			if full.Kind(d) == small.Kind(d) {
+				out = append(out, d+".p", d+".q", d+".i")
+			}
+		}
+	}
+	return out
+}
+
 // confirmShrunk runs both cases and prints by how much waveforms deviate that both
 // have.
 func confirmShrunk(ctx context.Context, c *call, full *cases.Case, s *cases.Shrunk, o cases.ShrinkOptions) error {
@@ -222,7 +247,7 @@ func confirmShrunk(ctx context.Context, c *call, full *cases.Case, s *cases.Shru
 	setting := func(name string, k *cases.Case) compare.Setting {
 		return compare.Setting{Name: name, Start: func(o *engine.Options) (*engine.Simulation, error) { return k.Start(o) }}
 	}
-	co := compare.Options{Until: full.Until, Repetitions: 1, Engine: eo, Channels: nil}
+	co := compare.Options{Until: full.Until, Repetitions: 3, Engine: eo, Channels: watched(full, small)}
 	if c.until > 0 {
 		co.Until = c.until
 	}
@@ -241,7 +266,7 @@ func confirmShrunk(ctx context.Context, c *call, full *cases.Case, s *cases.Shru
 	if b.Failure != "" {
 		return errors.New("the reduced case fails: " + b.Failure)
 	}
-	fmt.Fprintf(c.stdout, "largest deviation of the waveforms at what stays, %% of each one's range\n")
+	fmt.Fprintf(c.stdout, "largest deviation at the buses and sources that stay, %% of each waveform's range\n")
 	for _, g := range b.Groups {
 		var worst *compare.Channel
 		at := compare.Early
@@ -250,11 +275,11 @@ func confirmShrunk(ctx context.Context, c *call, full *cases.Case, s *cases.Shru
 				worst, at = ch, compare.Window(w)
 			}
 		}
-		if worst == nil || g.Name == "other" {
+		if worst == nil || worst.Windows[at].Range == 0 {
 			continue
 		}
 		d := worst.Windows[at]
-		fmt.Fprintf(c.stdout, "  %-10s %-9s %s at %g s (%.3g of %.4g %s)\n", g.Name, percent(d.Relative()), worst.Name, d.At, d.Max, d.Range, worst.Unit)
+		fmt.Fprintf(c.stdout, "  %-10s %-10s %s at %.4g s (%.3g of %.4g %s)\n", g.Name, percent(d.Relative()), worst.Name, d.At, d.Max, d.Range, worst.Unit)
 	}
 	for _, ch := range b.Changes {
 		fmt.Fprintf(c.stdout, "VERDICT CHANGED: %s\n", ch)
