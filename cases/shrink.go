@@ -505,13 +505,13 @@ func (s *shrinker) standIn(g *Group, r *reduction.Reduced, branches []reduction.
 			switch {
 			case br.To == reduction.Ground && br.L == 0:
 				begin(name, "load")
-				fmt.Fprintf(&b, "bus = %q\nR_ohm = %s\n", g.Kept[br.From], exactly(br.R))
+				fmt.Fprintf(&b, "bus = %q\nR_ohm = %s\n", g.Kept[br.From], digits(br.R))
 			case br.To == reduction.Ground:
 				begin(name, "series load")
-				fmt.Fprintf(&b, "bus = %q\nR_ohm = %s\nL_H = %s\n", g.Kept[br.From], exactly(br.R), exactly(br.L))
+				fmt.Fprintf(&b, "bus = %q\nR_ohm = %s\nL_H = %s\n", g.Kept[br.From], digits(br.R), digits(br.L))
 			default:
 				begin(name, "line")
-				fmt.Fprintf(&b, "from = %q\nto = %q\nR_ohm = %s\nL_H = %s\nrated_current_A = %s\n", g.Kept[br.From], g.Kept[br.To], exactly(br.R), exactly(br.L), exactly(rated))
+				fmt.Fprintf(&b, "from = %q\nto = %q\nR_ohm = %s\nL_H = %s\nrated_current_A = %s\n", g.Kept[br.From], g.Kept[br.To], digits(br.R), digits(br.L), digits(rated))
 			}
 			if level != "" && br.L > 0 {
 				s.rules = append(s.rules, DetailRule{name, level})
@@ -535,21 +535,21 @@ func (s *shrinker) standIn(g *Group, r *reduction.Reduced, branches []reduction.
 	}
 	name := s.name(fmt.Sprintf("reduced-%d", number))
 	begin(name, "reduced network")
-	fmt.Fprintf(&b, "buses = %s\nR_ohm = %s\nL_H = %s\ndrive = [\n", quotes(g.Kept), exactlyAll(p.R), exactlyAll(p.L))
+	fmt.Fprintf(&b, "buses = %s\nR_ohm = %s\nL_H = %s\ndrive = [\n", quotes(g.Kept), digitsAll(p.R), digitsAll(p.L))
 	for _, d := range p.Drive {
-		fmt.Fprintf(&b, "  %s,\n", exactlyAll(d))
+		fmt.Fprintf(&b, "  %s,\n", digitsAll(d))
 	}
-	fmt.Fprintf(&b, "]\nrated_current_A = %s\n", exactly(rated))
+	fmt.Fprintf(&b, "]\nrated_current_A = %s\n", digits(rated))
 	s.rules = append(s.rules, DetailRule{name, level})
 	for k, br := range r.Resistive {
 		b.WriteByte('\n')
 		name := s.name(fmt.Sprintf("reduced-%d-resistive-%d", number, k+1))
 		if br.To == reduction.Ground {
 			begin(name, "load")
-			fmt.Fprintf(&b, "bus = %q\nR_ohm = %s\n", g.Kept[br.From], exactly(br.R))
+			fmt.Fprintf(&b, "bus = %q\nR_ohm = %s\n", g.Kept[br.From], digits(br.R))
 		} else {
 			begin(name, "line")
-			fmt.Fprintf(&b, "from = %q\nto = %q\nR_ohm = %s\nL_H = 0\nrated_current_A = %s\n", g.Kept[br.From], g.Kept[br.To], exactly(br.R), exactly(rated))
+			fmt.Fprintf(&b, "from = %q\nto = %q\nR_ohm = %s\nL_H = 0\nrated_current_A = %s\n", g.Kept[br.From], g.Kept[br.To], digits(br.R), digits(rated))
 		}
 	}
 	b.WriteByte('\n')

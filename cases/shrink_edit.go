@@ -246,13 +246,14 @@ func quotes(list []string) string {
 	return "[" + strings.Join(out, ", ") + "]"
 }
 
-// exactly writes a number so that it is read back as the same.
-func exactly(x float64) string { return strconv.FormatFloat(x, 'g', -1, 64) }
+// digits writes a number to fifteen digits: what is beyond is rounding of the
+// reduction.
+func digits(x float64) string { return strconv.FormatFloat(x, 'g', 15, 64) }
 
-func exactlyAll(x []float64) string {
+func digitsAll(x []float64) string {
 	out := make([]string, len(x))
 	for i, v := range x {
-		out[i] = exactly(v)
+		out[i] = digits(v)
 	}
 	return "[" + strings.Join(out, ", ") + "]"
 }
