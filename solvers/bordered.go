@@ -3,7 +3,6 @@ package solvers
 import (
 	"errors"
 	"fmt"
-	"math"
 	"slices"
 )
 
@@ -27,9 +26,6 @@ type BorderedMatrix struct {
 	// two components of a node), which Border then is even for. It is worth
 	// telling; it is no matter of right or wrong.
 	Paired bool
-	// Window groups blocks: only blocks of the same Window consecutive ones
-	// are eliminated together. 0 means any.
-	Window int
 	Shift  float64
 }
 
@@ -83,10 +79,7 @@ type BorderedLU struct {
 	genAt   []int
 	usesGen bool
 	stats   BorderedStats
-
-	nextGroup, nextSingle int // of a right-hand side being eliminated
-
-	est []float64 // workspace of the condition estimate
+	est     []float64 // workspace of the condition estimate
 }
 
 // laneGroup is a group of blocks of one pattern whose values are interleaved.
@@ -95,7 +88,6 @@ type BorderedLU struct {
 type laneGroup struct {
 	prog   *elimination
 	count  int // different blocks
-	window int
 	blocks [lanes]int
 	own    [lanes]int // each block's first own unknown
 	at     int        // first value in lu
@@ -192,14 +184,6 @@ func NewBorderedLU(m *BorderedMatrix) (*BorderedLU, error) {
 	return f, nil
 }
 
-// windowOf is the window a block lies in.
-func (f *BorderedLU) windowOf(k int) int {
-	if f.m.Window == 0 {
-		return 0
-	}
-	return k / f.m.Window
-}
-
 // newBorderLU makes the scalar factorisation of the border.
 func (f *BorderedLU) newBorderLU() (err error) {
 	f.blu, err = NewSparseLU(f.border, LUOptions{})
@@ -222,12 +206,7 @@ func (f *BorderedLU) bordersColumn(err error) error {
 // every block its place in lu. It returns the length of lu.
 func (f *BorderedLU) group() (total int) {
 	open := make(map[*elimination]int) // 1 + group with a lane left
-	window := 0
 	for k, e := range f.prog {
-		if w := f.windowOf(k); w != window {
-			clear(open)
-			window = w
-		}
 		if e == nil || e.own == 0 {
 			f.single = append(f.single, k)
 			continue
@@ -235,7 +214,7 @@ func (f *BorderedLU) group() (total int) {
 		i := open[e] - 1
 		if i < 0 {
 			i = len(f.groups)
-			f.groups = append(f.groups, laneGroup{prog: e, window: window, blocks: [lanes]int{k, k, k, k}})
+			f.groups = append(f.groups, laneGroup{prog: e, blocks: [lanes]int{k, k, k, k}})
 		}
 		g := &f.groups[i]
 		g.blocks[g.count] = k
@@ -593,43 +572,9 @@ func (f *BorderedLU) Solve(b []float64) {
 		f.general.Solve(b)
 		return
 	}
-	f.begin()
 	border := b[f.n-f.m.Border:]
-	for !f.done() {
-		f.forward(b, border)
-	}
-	f.finish(b)
-}
-
-// begin starts the elimination of a right-hand side, window by window.
-func (f *BorderedLU) begin() { f.nextGroup, f.nextSingle = 0, 0 }
-
-// done tells whether all blocks are eliminated.
-func (f *BorderedLU) done() bool {
-	return f.nextGroup == len(f.groups) && f.nextSingle == len(f.single)
-}
-
-// forward eliminates the own unknowns of the next window with blocks left and
-// adds to border what they pass on. It returns the window.
-func (f *BorderedLU) forward(b, border []float64) {
-	window := math.MaxInt
-	if f.nextGroup < len(f.groups) {
-		window = f.groups[f.nextGroup].window
-	}
-	if f.nextSingle < len(f.single) {
-		window = min(window, f.windowOf(f.single[f.nextSingle]))
-	}
-	f.forwardWindow(window, b, border)
-}
-
-// forwardWindow is forward for a window that is the next, or holds no block that
-// has anything to eliminate.
-func (f *BorderedLU) forwardWindow(window int, b, border []float64) {
-	for ; f.nextGroup < len(f.groups); f.nextGroup++ {
-		g := &f.groups[f.nextGroup]
-		if g.window != window {
-			break
-		}
+	for i := range f.groups {
+		g := &f.groups[i]
 		no := g.prog.own
 		c := f.mid[g.mid:][:(no+g.prog.ports)*lanes]
 		interleave(c, no, b[g.own[0]:], b[g.own[1]:], b[g.own[2]:], b[g.own[3]:])
@@ -639,11 +584,7 @@ func (f *BorderedLU) forwardWindow(window int, b, border []float64) {
 			border[r.row] += r.weight * c[r.from]
 		}
 	}
-	for ; f.nextSingle < len(f.single); f.nextSingle++ {
-		k := f.single[f.nextSingle]
-		if f.windowOf(k) != window {
-			break
-		}
+	for _, k := range f.single {
 		blk := &f.m.Blocks[k]
 		no := blk.Own
 		if no == 0 {
@@ -661,11 +602,6 @@ func (f *BorderedLU) forwardWindow(window int, b, border []float64) {
 			border[r.Row] += r.Weight * ports[r.Port]
 		}
 	}
-}
-
-// finish solves for the border and then for the own unknowns.
-func (f *BorderedLU) finish(b []float64) {
-	border := b[f.n-f.m.Border:]
 	if f.m.Border > 0 {
 		if f.paired {
 			f.pairs.solve(border)

@@ -31,13 +31,13 @@ func interleaveAVX(dst *float64, n int, a0, a1, a2, a3 *float64)
 //go:noescape
 func separateAVX(a0, a1, a2, a3 *float64, n int, src *float64)
 
-// combineTwoAVX is combineTwoGo for the components from, ..., from+n-1, n a
-// positive multiple of four. ac holds a[0], c[0], a[1], ..., u the k vectors.
+// combineTwoAVX is combineTwoGo; n is rounded up to a multiple of four, and the
+// vectors must reach that far. ac holds a[0], c[0], a[1], ..., u the k vectors.
 //
 //go:noescape
-func combineTwoAVX(dst, acc, y, scale *float64, from, n int, ac *float64, u *[]float64, k int)
+func combineTwoAVX(dst, acc, y, scale *float64, n int, ac *float64, u *[]float64, k int)
 
-// addAVX adds src to dst, n a positive multiple of four.
+// addAVX adds src to dst; n and the vectors as for combineTwoAVX, n > 0.
 //
 //go:noescape
 func addAVX(dst, src *float64, n int)

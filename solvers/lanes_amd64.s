@@ -315,17 +315,16 @@ done:
 	VZEROUPPER
 	RET
 
-// func combineTwoAVX(dst, acc, y, scale *float64, from, n int, ac *float64, u *[]float64, k int)
-TEXT ·combineTwoAVX(SB), NOSPLIT, $0-72
+// func combineTwoAVX(dst, acc, y, scale *float64, n int, ac *float64, u *[]float64, k int)
+TEXT ·combineTwoAVX(SB), NOSPLIT, $0-64
 	MOVQ dst+0(FP), DI
 	MOVQ acc+8(FP), SI
 	MOVQ y+16(FP), R8
-	MOVQ from+32(FP), BX
-	MOVQ n+40(FP), CX
-	MOVQ ac+48(FP), R10
-	MOVQ u+56(FP), R12
-	MOVQ k+64(FP), R11
-	SHLQ $3, BX                  // byte offset into the vectors
+	MOVQ n+32(FP), CX
+	MOVQ ac+40(FP), R10
+	MOVQ u+48(FP), R12
+	MOVQ k+56(FP), R11
+	XORQ BX, BX                  // byte offset into the vectors
 
 four:
 	VMOVUPD (R8)(BX*1), Y0

@@ -28,9 +28,6 @@ type Network struct {
 	nodeMass []float64 // its part of the nodes
 	active   []int     // indices of blocks that are on
 	evals    []evaluation
-	parts    []part
-	nodeRate []float64
-	passed   []float64 // what eliminated blocks pass on to the nodes
 	matrix   BorderedMatrix
 	lu       *BorderedLU
 	algRow   []bool
@@ -61,18 +58,6 @@ type netBlock struct {
 	nDense int       // number of pattern entries that come from the Jacobian
 	from   []int32   // their places in jac, shared by blocks of one pattern
 	nPort  int       // those before it lie in port rows, the rest in own rows; -1 if mixed
-}
-
-// window is the number of blocks that SolveStage takes at a time: so many that
-// the groups of four in which they are eliminated are mostly full, so few that
-// their vectors fit the cache.
-const window = 256
-
-// part is a window of blocks.
-type part struct {
-	lo, hi int // own unknowns
-	evals  int // end in evals
-	frozen int // end in frozen
 }
 
 // evaluation is what Eval needs of a block that is on, packed.
@@ -265,10 +250,9 @@ func (n *Network) Configure(c Configuration) error {
 			extras[t.Component] = append(extras[t.Component], extra{h.Row, t.Weight, t.Skip})
 		}
 	}
-	n.active, n.evals, n.parts = n.active[:0], n.evals[:0], n.parts[:0]
-	n.nodeRate, n.passed = make([]float64, n.nodes), make([]float64, n.nodes)
+	n.active, n.evals = n.active[:0], n.evals[:0]
 	n.frozen = n.frozen[:0]
-	n.matrix = BorderedMatrix{Border: n.nodes, BorderMass: n.nodeMass, BorderFixed: n.fixed, Paired: n.width == 2, Window: window}
+	n.matrix = BorderedMatrix{Border: n.nodes, BorderMass: n.nodeMass, BorderFixed: n.fixed, Paired: n.width == 2}
 	n.algRow = make([]bool, n.n)
 	type shared struct {
 		jac  []float64
@@ -278,12 +262,7 @@ func (n *Network) Configure(c Configuration) error {
 	widest, widestPorts := 0, 0
 	portMass := make([]float64, 0, 16)
 	for k := range n.blocks {
-		if k%window == 0 {
-			n.parts = append(n.parts, part{lo: n.blocks[k].lo})
-		}
-		p := &n.parts[len(n.parts)-1]
 		b := &n.blocks[k]
-		p.hi = b.lo + b.own
 		b.off = c.Off != nil && c.Off[k]
 		widest = max(widest, b.ports+b.own)
 		widestPorts = max(widestPorts, b.ports)
@@ -300,7 +279,6 @@ func (n *Network) Configure(c Configuration) error {
 			nb.Values = make([]float64, b.own)
 			b.mat = len(n.matrix.Blocks)
 			n.matrix.Blocks = append(n.matrix.Blocks, nb)
-			p.evals, p.frozen = len(n.evals), len(n.frozen)
 			continue
 		}
 		n.active = append(n.active, k)
@@ -391,7 +369,6 @@ func (n *Network) Configure(c Configuration) error {
 			ev.node = int32(b.at[0])
 		}
 		n.evals = append(n.evals, ev)
-		p.evals, p.frozen = len(n.evals), len(n.frozen)
 	}
 	for i := range n.nodes {
 		n.algRow[n.nOwn+i] = n.nodeMass[i] == 0
@@ -440,22 +417,8 @@ func (n *Network) Eval(dst []float64, t float64, y []float64) error {
 	for _, i := range n.frozen {
 		dst[i] = 0
 	}
-	if err := n.evalBlocks(n.evals, dst, out, t, node, y); err != nil {
-		return err
-	}
-	for i, f := range n.fixed {
-		if f {
-			out[i] = -node[i]
-		}
-	}
-	return nil
-}
-
-// evalBlocks evaluates blocks: own rates into dst, flows off the nodes' rates
-// out.
-func (n *Network) evalBlocks(evals []evaluation, dst, out []float64, t float64, node, y []float64) error {
-	for i := range evals {
-		e := &evals[i]
+	for i := range n.evals {
+		e := &n.evals[i]
 		lo, hi := e.lo, e.lo+e.own
 		if c := e.node; c >= 0 {
 			flow := n.flow[:2]
@@ -478,48 +441,11 @@ func (n *Network) evalBlocks(evals []evaluation, dst, out []float64, t float64, 
 			out[r.Row] -= r.Weight * flow[r.Port]
 		}
 	}
-	return nil
-}
-
-// SolveStage implements [StagedSystem].
-func (n *Network) SolveStage(b []float64, t float64, y []float64, stage Stage) error {
-	if n.lu.usesGen {
-		stage.Argument(0, n.n)
-		if err := n.Eval(b, t, y); err != nil {
-			return err
-		}
-		stage.Complete(0, n.n)
-		n.lu.Solve(b)
-		return nil
-	}
-	stage.Argument(n.nOwn, n.n)
-	node, rate, passed := y[n.nOwn:n.n], n.nodeRate, n.passed
-	clear(rate)
-	clear(passed)
-	n.lu.begin()
-	evals, frozen := 0, 0
-	for w := range n.parts {
-		p := &n.parts[w]
-		stage.Argument(p.lo, p.hi)
-		for _, i := range n.frozen[frozen:p.frozen] {
-			b[i] = 0
-		}
-		if err := n.evalBlocks(n.evals[evals:p.evals], b, rate, t, node, y); err != nil {
-			return err
-		}
-		evals, frozen = p.evals, p.frozen
-		stage.Complete(p.lo, p.hi)
-		n.lu.forwardWindow(w, b, passed)
-	}
 	for i, f := range n.fixed {
 		if f {
-			rate[i] = -node[i]
+			out[i] = -node[i]
 		}
 	}
-	copy(b[n.nOwn:], rate)
-	stage.Complete(n.nOwn, n.n)
-	addTo(b[n.nOwn:n.n], passed)
-	n.lu.finish(b)
 	return nil
 }
 

@@ -45,7 +45,8 @@ func (m *rosenbrockTable) NewStepper(s System, o Options) (Stepper, error) {
 	}
 	n := s.Dim()
 	r := &rosenbrock{sys: s, tab: m, tol: o.tolerance(), opt: o, n: n, hidden: s.Hidden()}
-	vec := func() []float64 { return make([]float64, n) }
+	// Vectors reach to a multiple of four values, as combineTwo wants it.
+	vec := func() []float64 { return make([]float64, n, (n+3)&^3) }
 	r.y, r.prev, r.trial, r.f0, r.ft, r.acc = vec(), vec(), vec(), vec(), vec(), vec()
 	r.mass = vec()
 	r.pairs = make([]float64, 2*len(m.c))
@@ -98,21 +99,15 @@ type rosenbrock struct {
 	n      int
 	hidden []int
 
-	t, tPrev float64
-	y, prev  []float64 // end and start of the last step
-	trial    []float64 // stage argument, then the candidate
-	f0, ft   []float64 // f and df/dt at the start of the step
-	acc      []float64
-	u        [][]float64 // stage increments
-	k        [][]float64 // dense output coefficients
-	mass     []float64   // its diagonal, where the system has one; else ones
-	diagonal bool
-	staged   StagedSystem // nil if the system isn't
-
-	// The stage being computed.
-	stage     int
-	from      []float64 // what its argument starts from
-	hd        float64   // h d_i
+	t, tPrev  float64
+	y, prev   []float64 // end and start of the last step
+	trial     []float64 // stage argument, then the candidate
+	f0, ft    []float64 // f and df/dt at the start of the step
+	acc       []float64
+	u         [][]float64 // stage increments
+	k         [][]float64 // dense output coefficients
+	mass      []float64   // its diagonal, where the system has one; else ones
+	diagonal  bool
 	pairs     []float64 // coefficients of a stage, see combineTwo
 	haveFt    bool
 	midValue  []float64 // weights of the stages at mid-step
@@ -168,7 +163,6 @@ func (r *rosenbrock) connect() {
 	d, ok := r.sys.(DiagonalMass)
 	if r.diagonal = ok; ok {
 		d.MassDiagonal(r.mass)
-		r.staged, _ = r.sys.(StagedSystem)
 		return
 	}
 	for i := range r.mass {
@@ -452,115 +446,88 @@ func (r *rosenbrock) attempt(h float64) error {
 	}
 	hInv := 1 / h
 	for i, u := range r.u {
-		r.stage, r.hd = i, h*tab.d[i]
-		r.stats.Solves++
 		if i == 0 {
 			copy(u, r.f0)
-			r.addTime(0, r.n)
-			r.sys.Solve(u)
-			continue
-		}
-		// What the stages before add: M times a sum, over h. In a last stage
-		// the argument is that of the stage before, which trial still holds,
-		// plus its increment.
-		for j, c := range tab.cc[i] {
-			r.pairs[2*j], r.pairs[2*j+1] = tab.a[i][j], hInv*c
-		}
-		r.from = r.y
-		if r.adds[i] {
-			r.from = r.trial
-			for j := range i {
-				r.pairs[2*j] = 0
+		} else {
+			// What the stages before add: M times a sum, over h. In a last
+			// stage the argument is that of the stage before, which trial
+			// still holds, plus its increment.
+			for j, c := range tab.cc[i] {
+				r.pairs[2*j], r.pairs[2*j+1] = tab.a[i][j], hInv*c
 			}
-			r.pairs[2*i-2] = 1
-		}
-		r.stats.Evals++
-		at := r.t + tab.c[i]*h
-		if r.staged != nil {
-			if err := r.staged.SolveStage(u, at, r.trial, r); err != nil {
+			from := r.y
+			if r.adds[i] {
+				from = r.trial
+				for j := range i {
+					r.pairs[2*j] = 0
+				}
+				r.pairs[2*i-2] = 1
+			}
+			combineTwo(r.trial, r.acc, from, r.mass, r.pairs[:2*i], r.u[:i])
+			r.stats.Evals++
+			if err := r.sys.Eval(u, r.t+tab.c[i]*h, r.trial); err != nil {
 				return err
 			}
-			continue
+			if r.diagonal {
+				addTo(u, r.acc)
+			} else {
+				r.sys.AddMass(u, 1, r.acc)
+			}
+			for _, k := range r.hidden {
+				u[k] = 0
+			}
 		}
-		r.Argument(0, r.n)
-		if err := r.sys.Eval(u, at, r.trial); err != nil {
-			return err
+		if r.haveFt && tab.d[i] != 0 {
+			hd := h * tab.d[i]
+			ft := r.ft[:len(u)]
+			for k := range u {
+				u[k] += hd * ft[k]
+			}
 		}
-		r.Complete(0, r.n)
 		r.sys.Solve(u)
+		r.stats.Solves++
 	}
 	addTo(r.trial, r.u[len(r.u)-1]) // the argument of the last stage plus u_s
 	return nil
 }
 
-// Argument implements [Stage].
-func (r *rosenbrock) Argument(lo, hi int) {
-	i := r.stage
-	combineTwo(r.trial, r.acc, r.from, r.mass, r.pairs[:2*i], r.u[:i], lo, hi)
-}
-
-// Complete implements [Stage].
-func (r *rosenbrock) Complete(lo, hi int) {
-	u := r.u[r.stage]
-	if r.diagonal {
-		addTo(u[lo:hi], r.acc[lo:hi])
-	} else {
-		r.sys.AddMass(u, 1, r.acc) // a system that isn't diagonal isn't staged
-	}
-	for _, k := range r.hidden {
-		if lo <= k && k < hi {
-			u[k] = 0
-		}
-	}
-	r.addTime(lo, hi)
-}
-
-// addTime adds the explicit time derivative to the stage at hand.
-func (r *rosenbrock) addTime(lo, hi int) {
-	if !r.haveFt || r.hd == 0 {
-		return
-	}
-	u, ft := r.u[r.stage][lo:hi], r.ft[lo:hi]
-	for k, x := range ft {
-		u[k] += r.hd * x
-	}
-}
-
-// addTo adds src to dst.
+// addTo adds src to dst, both with room to a multiple of four values.
 func addTo(dst, src []float64) {
 	n := len(dst)
-	src = src[:n]
-	done := 0
-	if useAVX && n >= 4 {
-		done = n &^ 3
-		addAVX(&dst[0], &src[0], done)
+	if useAVX && n > 0 {
+		_, _ = dst[:(n+3)&^3], src[:(n+3)&^3]
+		addAVX(&dst[0], &src[0], n)
+		return
 	}
-	for i := done; i < n; i++ {
-		dst[i] += src[i]
+	src = src[:n]
+	for i, x := range src {
+		dst[i] += x
 	}
 }
 
 // combineTwo writes y + sum_j a[j] u[j] into dst and scale times sum_j c[j]
-// u[j] into acc, reading every u once, for the components lo <= i < hi. ac holds
-// a[0], c[0], a[1], ...
-func combineTwo(dst, acc, y, scale, ac []float64, u [][]float64, lo, hi int) {
-	_, _, _, _, _ = dst[lo:hi], acc[lo:hi], y[lo:hi], scale[lo:hi], ac[:2*len(u)]
-	if useAVX && hi-lo >= 4 && len(u) > 0 {
-		for _, v := range u {
-			_ = v[lo:hi]
-		}
-		n := (hi - lo) &^ 3
-		combineTwoAVX(&dst[0], &acc[0], &y[0], &scale[0], lo, n, &ac[0], &u[0], len(u))
-		lo += n
-	}
-	combineTwoGo(dst, acc, y, scale, ac, u, lo, hi)
-}
-
-func combineTwoGo(dst, acc, y, scale, ac []float64, u [][]float64, lo, hi int) {
-	if lo == hi {
+// u[j] into acc, reading every u once. ac holds a[0], c[0], a[1], ...; all
+// vectors reach to a multiple of four values.
+func combineTwo(dst, acc, y, scale, ac []float64, u [][]float64) {
+	n := len(dst)
+	if n == 0 {
 		return
 	}
-	dst, acc, y, scale = dst[lo:hi], acc[lo:hi], y[lo:hi], scale[lo:hi]
+	if useAVX {
+		full := (n + 3) &^ 3
+		for _, v := range u {
+			_ = v[:full]
+		}
+		_, _, _, _ = dst[:full], acc[:full], y[:full], scale[:full]
+		combineTwoAVX(&dst[0], &acc[0], &y[0], &scale[0], n, &ac[0], &u[0], len(u))
+		return
+	}
+	combineTwoGo(dst, acc, y, scale, ac, u)
+}
+
+func combineTwoGo(dst, acc, y, scale, ac []float64, u [][]float64) {
+	n := len(dst)
+	acc, y, scale = acc[:n], y[:n], scale[:n]
 	if &dst[0] != &y[0] {
 		copy(dst, y)
 	}
@@ -568,7 +535,7 @@ func combineTwoGo(dst, acc, y, scale, ac []float64, u [][]float64, lo, hi int) {
 	j := 0
 	for ; j+2 <= len(u); j += 2 {
 		a0, c0, a1, c1 := ac[2*j], ac[2*j+1], ac[2*j+2], ac[2*j+3]
-		u0, u1 := u[j][lo:hi], u[j+1][lo:hi]
+		u0, u1 := u[j][:n], u[j+1][:n]
 		for i, x := range u0 {
 			x1 := u1[i]
 			dst[i] = dst[i] + a0*x + a1*x1
@@ -576,7 +543,7 @@ func combineTwoGo(dst, acc, y, scale, ac []float64, u [][]float64, lo, hi int) {
 		}
 	}
 	if j < len(u) {
-		a0, c0, u0 := ac[2*j], ac[2*j+1], u[j][lo:hi]
+		a0, c0, u0 := ac[2*j], ac[2*j+1], u[j][:n]
 		for i, x := range u0 {
 			dst[i] += a0 * x
 			acc[i] += c0 * x

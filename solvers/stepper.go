@@ -64,26 +64,6 @@ type System interface {
 	Norm(e, y0, y1 []float64, tol Tolerance) (norm float64, worst int)
 }
 
-// StagedSystem is the facet of a [System] with DiagonalMass that evaluates and
-// solves in one, part by part, so that a part's values are still in the cache
-// when they are needed again.
-type StagedSystem interface {
-	DiagonalMass
-
-	// SolveStage makes b the solution of W b = r with the matrix factored last,
-	// where r is f(t, y) as stage completes it.
-	SolveStage(b []float64, t float64, y []float64, stage Stage) error
-}
-
-// Stage is what a method does to the ranges lo <= i < hi of unknowns, each once,
-// while a [StagedSystem] works on them.
-type Stage interface {
-	// Argument readies that range of y.
-	Argument(lo, hi int)
-	// Complete adds to that range of b, which holds f.
-	Complete(lo, hi int)
-}
-
 // DiagonalMass is the facet of a [System] whose M is diagonal, for methods that
 // add M x in passing.
 type DiagonalMass interface {
