@@ -9,7 +9,7 @@ import (
 )
 
 // ReducedNetworkParams are RL circuits between the terminals of a reduced network,
-// one phase.
+// one phase, referred to one voltage level.
 type ReducedNetworkParams struct {
 	// R and L are the resistance (ohm, >= 0) and inductance (H, > 0) of each
 	// circuit.
@@ -21,6 +21,10 @@ type ReducedNetworkParams struct {
 	// voltage at all of them, and no other way, no circuit may be driven, unless
 	// paths to ground hold every terminal.
 	Drive [][]float64
+	// Ratio is the voltage of each terminal with no current flowing, over that of
+	// the side to which R and L are referred: ratios and phase shifts of
+	// transformers within. Nil means 1 throughout.
+	Ratio []complex128
 	// RatedCurrent is the base of the currents' error norm, A rms, > 0.
 	RatedCurrent float64
 }
@@ -58,6 +62,12 @@ func (p ReducedNetworkParams) check(f *faults) {
 		for j, x := range row {
 			f.finite(fmt.Sprintf("Drive[%d][%d]", k, j), x, "")
 		}
+	}
+	if p.Ratio != nil && len(p.Ratio) != m {
+		f.add("Ratio for %d terminals and Drive for %d: want as many", len(p.Ratio), m)
+	}
+	for j, r := range p.Ratio {
+		f.positive(fmt.Sprintf("|Ratio[%d]|", j), abs(r), "")
 	}
 	f.positive("RatedCurrent", p.RatedCurrent, "A rms")
 	if len(f.errs) == 0 {
@@ -147,10 +157,10 @@ func (p ReducedNetworkParams) free() *freedom {
 // is decoupled RL circuits, each driven by a combination of the terminal voltages,
 // in the network frame:
 //
-//	L_k dw_k/dt = sum_j b_kj v_j - (R_k + j omega_f L_k) w_k
-//	flow_j = sum_k b_kj w_k
+//	L_k dw_k/dt = sum_j b_kj v_j/rho_j - (R_k + j omega_f L_k) w_k
+//	flow_j = sum_k b_kj w_k/rho_j*
 //
-// with w (A peak) and b = Drive. A circuit is no branch: its drive may take in all
+// with w (A peak, on the side referred to), b = Drive and rho = Ratio. A circuit is no branch: its drive may take in all
 // terminals. The quasi-steady level has no unknowns: w_k = b_k v / (R_k + j
 // omega_f L_k), which is the phasor Kron reduction at the frame's speed. See
 // islet/engine/reduction for how a network is brought into this form, and what it
@@ -164,13 +174,16 @@ type ReducedNetwork struct {
 	levels
 	p         ReducedNetworkParams
 	terminals int
-	drive     []float64 // circuits x terminals, row-major
-	grounded  bool      // paths to ground hold the terminals
-	base      float64   // A peak
+	drive     []float64    // circuits x terminals, row-major
+	turned    []complex128 // b_kj/rho_j, circuits x terminals; nil if all rho are 1
+	grounded  bool         // paths to ground hold the terminals
+	base      float64      // A peak
 	frame     float64
 	y         []complex128 // circuits: 1/(R + j omega_f L)
 	nodal     []complex128 // terminals x terminals, at the quasi-steady level: sum b b^T y
 	shorted   bool         // some circuit has no impedance at the frame's speed
+	open      []complex128 // terminal voltages with all terminals but openAt open
+	openAt    int
 }
 
 // NewReducedNetwork returns a reduced network at level [Full]. The error joins all
@@ -190,14 +203,45 @@ func NewReducedNetwork(p ReducedNetworkParams) (*ReducedNetwork, error) {
 	for k := range p.R {
 		n.p.Drive = append(n.p.Drive, n.drive[k*m:(k+1)*m:(k+1)*m])
 	}
+	for j, r := range p.Ratio {
+		if r == 1 {
+			continue
+		}
+		if n.turned == nil {
+			n.p.Ratio = append([]complex128(nil), p.Ratio...)
+			n.turned = make([]complex128, len(n.drive))
+			for k, b := range n.drive {
+				n.turned[k] = complex(b, 0)
+			}
+		}
+		for k := range p.R {
+			n.turned[k*m+j] /= r
+		}
+	}
 	n.y = make([]complex128, len(p.R))
 	n.nodal = make([]complex128, m*m)
 	n.SetFrame(0)
 	return n, nil
 }
 
-// Params returns the parameters. The slices are the device's own: don't change
-// them.
+// weight returns b_kj/rho_j.
+func (n *ReducedNetwork) weight(k, j int) complex128 {
+	if n.turned != nil {
+		return n.turned[k*n.terminals+j]
+	}
+	return complex(n.drive[k*n.terminals+j], 0)
+}
+
+// ratio returns rho_j.
+func (n *ReducedNetwork) ratio(j int) complex128 {
+	if n.p.Ratio == nil {
+		return 1
+	}
+	return n.p.Ratio[j]
+}
+
+// Params returns the parameters, with Ratio nil if all are 1. The slices are the
+// device's own: don't change them.
 func (n *ReducedNetwork) Params() ReducedNetworkParams { return n.p }
 
 // Dims returns two port components for each terminal and the unknowns w_1.d, w_1.q
@@ -220,7 +264,7 @@ func (n *ReducedNetwork) Mass(port, own []float64) {
 // SetFrame sets the speed of the network frame, rad/s.
 func (n *ReducedNetwork) SetFrame(speed float64) {
 	n.frame = speed
-	n.shorted = false
+	n.shorted, n.openAt = false, -1
 	m := n.terminals
 	clear(n.nodal)
 	for k, r := range n.p.R {
@@ -230,10 +274,9 @@ func (n *ReducedNetwork) SetFrame(speed float64) {
 		if !n.quasi {
 			continue
 		}
-		row := n.drive[k*m : (k+1)*m]
-		for i, x := range row {
-			for j, z := range row {
-				n.nodal[i*m+j] += times(x*z, y)
+		for i := range m {
+			for j := range m {
+				n.nodal[i*m+j] += conj(n.weight(k, i)) * y * n.weight(k, j)
 			}
 		}
 	}
@@ -257,9 +300,23 @@ func (n *ReducedNetwork) Eval(flow, rate []float64, t float64, v, x []float64) e
 		return nil
 	}
 	frame := n.frame
-	drive := n.drive
 	ind := n.p.L[:len(n.p.R)]
 	flow, v = flow[:2*m], v[:2*m]
+	if n.turned != nil {
+		for k, r := range n.p.R {
+			w := pair(x, 2*k)
+			u := jtimes(-frame*ind[k], w) - times(r, w)
+			for j, b := range n.turned[k*m:][:m] {
+				u += b * pair(v, 2*j)
+				i := conj(b) * w
+				flow[2*j] += real(i)
+				flow[2*j+1] += imag(i)
+			}
+			setPair(rate, 2*k, u)
+		}
+		return nil
+	}
+	drive := n.drive
 	for k, r := range n.p.R {
 		row := drive[k*m:][:m]
 		d, q := x[2*k], x[2*k+1]
@@ -293,7 +350,11 @@ func (n *ReducedNetwork) Pattern() []solvers.Entry {
 		own := 2 * (m + k)
 		list = append(list, entryBlocks([2]int{own, own})...)
 		for j, b := range n.p.Drive[k] {
-			if b != 0 {
+			switch {
+			case b == 0:
+			case n.turned != nil:
+				list = append(list, entryBlocks([2]int{2 * j, own}, [2]int{own, 2 * j})...)
+			default:
 				list = append(list, entryDiagonals([2]int{2 * j, own}, [2]int{own, 2 * j})...)
 			}
 		}
@@ -316,7 +377,12 @@ func (n *ReducedNetwork) Jacobian(jac []float64, t float64, v, x []float64) {
 	for k, r := range n.p.R {
 		own := 2 * (m + k)
 		for j, b := range n.p.Drive[k] {
-			if b != 0 {
+			switch {
+			case b == 0:
+			case n.turned != nil:
+				block(jac, order, 2*j, own, conj(n.weight(k, j)))
+				block(jac, order, own, 2*j, n.weight(k, j))
+			default:
 				diagonal(jac, order, 2*j, own, b)
 				diagonal(jac, order, own, 2*j, b)
 			}
@@ -336,7 +402,7 @@ func (n *ReducedNetwork) Describe() facet.Description {
 	case n.quasi:
 		flow = facet.FlowNone
 		for j := 1; j < n.terminals; j++ {
-			d.Ties = append(d.Ties, facet.Tie{A: 0, B: j, Ratio: 1})
+			d.Ties = append(d.Ties, facet.Tie{A: 0, B: j, Ratio: n.ratio(0) / n.ratio(j)})
 		}
 	}
 	for j := range n.terminals {
@@ -354,8 +420,8 @@ func (n *ReducedNetwork) Describe() facet.Description {
 // driving returns the voltage that drives circuit k.
 func (n *ReducedNetwork) driving(k int, v []float64) complex128 {
 	var sum complex128
-	for j, b := range n.p.Drive[k] {
-		sum += times(b, pair(v, 2*j))
+	for j := range n.terminals {
+		sum += n.weight(k, j) * pair(v, 2*j)
 	}
 	return sum
 }
@@ -402,8 +468,8 @@ func (n *ReducedNetwork) Measure(dst []float64, t float64, v, x []float64) {
 	for j := range n.terminals {
 		var i complex128
 		for k := range n.p.R {
-			if b := n.p.Drive[k][j]; b != 0 {
-				i += times(b, n.current(k, v, x))
+			if n.p.Drive[k][j] != 0 {
+				i += conj(n.weight(k, j)) * n.current(k, v, x)
 			}
 		}
 		s := power(pair(v, 2*j), i)
@@ -424,6 +490,55 @@ func (n *ReducedNetwork) Energy(t float64, v, x []float64) facet.Energy {
 		}
 	}
 	return e
+}
+
+// OpenRatio returns the voltage of terminal to over that of terminal from with
+// nothing connected to any but from, at the frame's speed: the ratio of the
+// transformers between them, less what loads within draw.
+func (n *ReducedNetwork) OpenRatio(from, to int) complex128 {
+	if !n.grounded || n.shorted {
+		return n.ratio(to) / n.ratio(from)
+	}
+	if n.openAt != from {
+		n.openFrom(from)
+	}
+	return n.open[to]
+}
+
+// openFrom solves for the terminal voltages with 1 V at terminal from and no
+// current at the others, by Gaussian elimination in place.
+func (n *ReducedNetwork) openFrom(from int) {
+	m := n.terminals
+	a := make([]complex128, m*m)
+	for k, y := range n.y {
+		for i := range m {
+			for j := range m {
+				a[i*m+j] += conj(n.weight(k, i)) * y * n.weight(k, j)
+			}
+		}
+	}
+	v := make([]complex128, m)
+	for j := range m {
+		a[from*m+j] = 0
+	}
+	a[from*m+from], v[from] = 1, 1
+	// Diagonal pivots do for an admittance matrix.
+	for k := range m {
+		for i := k + 1; i < m; i++ {
+			f := a[i*m+k] / a[k*m+k]
+			for j := k; j < m; j++ {
+				a[i*m+j] -= f * a[k*m+j]
+			}
+			v[i] -= f * v[k]
+		}
+	}
+	for k := m - 1; k >= 0; k-- {
+		for j := k + 1; j < m; j++ {
+			v[k] -= a[k*m+j] * v[j]
+		}
+		v[k] /= a[k*m+k]
+	}
+	n.open, n.openAt = v, from
 }
 
 // WithDetail returns the network at another level.

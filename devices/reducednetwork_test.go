@@ -42,12 +42,19 @@ func TestReducedNetworkConforms(t *testing.T) {
 		"load":       {R: []float64{5, 8}, L: []float64{1e-3, 30e-3}, Drive: [][]float64{{1}, {0.4}}, RatedCurrent: 100},
 		"grounded": {R: []float64{0.3, 5, 9}, L: []float64{1e-3, 20e-3, 2e-3}, Drive: [][]float64{{1, -1, 0}, {0.2, 1, 0.5}, {0, 0.3, 1}},
 			RatedCurrent: 100},
+		"transformers": {R: []float64{0.3, 0.5, 9}, L: []float64{1e-3, 2e-3, 2e-3}, Drive: [][]float64{{1, -1, 0}, {0.2, -1, 0.8}, {0.1, -0.1, 0}},
+			Ratio: []complex128{1, 0.5i, complex(0.6, 0.8)}, RatedCurrent: 100},
+		"grounded transformers": {R: []float64{0.3, 0.5, 9}, L: []float64{1e-3, 2e-3, 2e-3}, Drive: [][]float64{{1, -1, 0}, {0.2, -1, 0.8}, {0.1, 0.1, 1}},
+			Ratio: []complex128{1, 0.5i, complex(0.6, 0.8)}, RatedCurrent: 100},
 		"lossless": {R: []float64{0, 0}, L: []float64{1e-3, 2e-3}, Drive: [][]float64{{1, -1, 0}, {0, 1, -1}}, RatedCurrent: 100},
 	} {
 		t.Run(name, func(t *testing.T) {
 			volts := make([]float64, p.terminals())
 			for k := range volts {
 				volts[k] = peak
+				if p.Ratio != nil {
+					volts[k] *= abs(p.Ratio[k])
+				}
 			}
 			conform(t, func() (*ReducedNetwork, error) { return NewReducedNetwork(p) }, devicetest.Options{Voltages: volts})
 		})
@@ -77,6 +84,37 @@ func TestReducedNetworkIsALine(t *testing.T) {
 	}
 	if line.Energy(0, v, x) != net.Energy(0, v, x) {
 		t.Errorf("energy %+v, the line has %+v", net.Energy(0, v, x), line.Energy(0, v, x))
+	}
+}
+
+// With one circuit and its ratio a reduced network is a transformer without a
+// magnetising branch.
+func TestReducedNetworkIsATransformer(t *testing.T) {
+	const frame = 2 * math.Pi * 50
+	r := distribution
+	r.NoLoadCurrent, r.NoLoadLoss = 0, 0
+	p := must(r.Params())
+	w := must(NewTransformer(p))
+	net := must(NewReducedNetwork(ReducedNetworkParams{R: []float64{p.R}, L: []float64{p.L}, Drive: [][]float64{{1, -1}},
+		Ratio: []complex128{1 / w.OpenRatio(0, 1), 1}, RatedCurrent: 100}))
+	w.SetFrame(frame)
+	net.SetFrame(frame)
+	v, x := []float64{16000, 200, 290, -10}, []float64{120, -70}
+	f1, f2, r1, r2 := make([]float64, 4), make([]float64, 4), make([]float64, 2), make([]float64, 2)
+	if err := w.Eval(f1, r1, 0, v, x); err != nil {
+		t.Fatal(err)
+	}
+	if err := net.Eval(f2, r2, 0, v, x); err != nil {
+		t.Fatal(err)
+	}
+	for k := range f1 {
+		near(t, fmt.Sprintf("flow %d", k), f2[k], f1[k], 1e-14)
+	}
+	for k := range r1 {
+		near(t, fmt.Sprintf("rate %d", k), r2[k], r1[k], 1e-13)
+	}
+	if d := abs(net.OpenRatio(0, 1) - w.OpenRatio(0, 1)); d > 1e-15 {
+		t.Errorf("open ratio %v, the transformer's is %v", net.OpenRatio(0, 1), w.OpenRatio(0, 1))
 	}
 }
 
@@ -128,6 +166,8 @@ func TestReducedNetworkFaults(t *testing.T) {
 	wantFaults(t, err, "no circuits")
 	_, err = NewReducedNetwork(ReducedNetworkParams{R: []float64{1}, L: []float64{1}, Drive: [][]float64{{}}, RatedCurrent: 1})
 	wantFaults(t, err, "no columns")
+	_, err = NewReducedNetwork(ReducedNetworkParams{R: []float64{1}, L: []float64{1}, Drive: [][]float64{{1, -1}}, Ratio: []complex128{0}, RatedCurrent: 1})
+	wantFaults(t, err, "Ratio for 1 terminals", "|Ratio[0]| = 0")
 	for _, drive := range [][]float64{{1, -1, 0}, {1, -0.5, -0.5}, {0, 0, 0}} {
 		_, err = NewReducedNetwork(ReducedNetworkParams{R: []float64{1}, L: []float64{1}, Drive: [][]float64{drive}, RatedCurrent: 1})
 		wantFaults(t, err, "tie all terminals together")

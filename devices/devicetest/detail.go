@@ -171,7 +171,11 @@ func checkOpenRatio(t reporter, s *subject) {
 				continue
 			}
 			v := s.steadyVoltages()
-			put(v[2*to:], ratio.OpenRatio(from, to)*get(v[2*from:]))
+			for other := range terminals { // more than two: all are open but from
+				if other != from {
+					put(v[2*other:], ratio.OpenRatio(from, other)*get(v[2*from:]))
+				}
+			}
 			x, f, err := s.steady(v)
 			if err != nil {
 				t.Errorf("OpenRatio(%d, %d): no steady state: %v", from, to, err)
