@@ -29,7 +29,7 @@ type kind struct {
 	name      string // as devices describe themselves
 	doc       string
 	terminals []string // keys of the buses: bus, from and to, or buses for a list
-	sameVolts bool     // all its buses have one voltage
+	sameVolts bool     // both buses have one voltage
 	infos     []keyInfo
 	read      func(d *document, path []string, table map[string]any, skip []string) (part, *values)
 }

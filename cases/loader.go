@@ -355,9 +355,13 @@ func (u union) find(i int) int {
 func (l *loader) feeding() {
 	u := newUnion(len(l.c.buses))
 	for _, s := range l.c.devices {
-		for k := 1; s.kind.sameVolts && k < len(s.at); k++ {
-			if s.at[0] >= 0 && s.at[k] >= 0 {
-				u[u.find(s.at[0])] = u.find(s.at[k])
+		for k, b := range s.at {
+			for _, a := range s.at[:k] {
+				// A reduced network may span several voltages.
+				if a >= 0 && b >= 0 && (s.kind.sameVolts || s.kind.many() && l.c.buses[a].volts == l.c.buses[b].volts) {
+					u[u.find(a)] = u.find(b)
+					break
+				}
 			}
 		}
 	}

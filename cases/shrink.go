@@ -3,6 +3,8 @@ package cases
 import (
 	"errors"
 	"fmt"
+	"math"
+	"math/cmplx"
 	"path"
 	"sort"
 	"strings"
@@ -80,10 +82,10 @@ func (s *Shrunk) Removed() []string {
 }
 
 // Shrink takes buses without injection out of a case: connected groups of buses
-// at which nothing but lines (and, if asked, loads) of resistance and inductance
-// meet are replaced by what they are from the buses around them. Two buses around
-// a group are joined by lines, one alone gets series loads; more get a reduced
-// network, or plain lines if asked. All but plain lines is exact: the waveforms
+// at which nothing but lines and transformers (and, if asked, loads) of resistance
+// and inductance meet are replaced by what they are from the buses around them. Two
+// buses of one voltage around a group are joined by lines, one alone gets series
+// loads; more get a reduced network, or plain lines if asked. All but plain lines is exact: the waveforms
 // at the buses that stay are the same, as is the energy ledger.
 //
 // A bus stays that has anything else, a line with shunt capacitance, or is named by
@@ -181,10 +183,18 @@ func (s *shrinker) prepare() error {
 	return nil
 }
 
-// branches are what a line or load is in a network of RL branches, in which its
-// terminals are nodes 0 and 1; nil if it is something else. wanting says what it
-// would take.
-func (s *shrinker) branches(i int) (b []reduction.Branch, wanting string) {
+// element is a branch of a device, between its terminals 0 and 1 or to ground.
+type element struct {
+	reduction.Branch
+	side int // the terminal to whose voltage R and L are referred
+}
+
+// branches are what a line, transformer or load is in a network of RL branches; nil
+// if it is something else. wanting says why.
+func (s *shrinker) branches(i int) (b []element, wanting string) {
+	branch := func(from, to, side int, r, l float64) {
+		b = append(b, element{reduction.Branch{From: from, To: to, R: r, L: l}, side})
+	}
 	spec := &s.c.devices[i]
 	switch d := s.built[i].(type) {
 	case *devices.Line:
@@ -192,7 +202,18 @@ func (s *shrinker) branches(i int) (b []reduction.Branch, wanting string) {
 		if p.C > 0 {
 			return nil, fmt.Sprintf("%s has shunt capacitance", spec.name)
 		}
-		return []reduction.Branch{{From: 0, To: 1, R: p.R, L: p.L}}, ""
+		branch(0, 1, 0, p.R, p.L)
+		return b, ""
+	case *devices.Transformer:
+		p := d.Params()
+		branch(0, 1, 1, p.R, p.L)
+		if p.CoreR > 0 {
+			branch(0, reduction.Ground, 0, p.CoreR, 0)
+		}
+		if p.MagnetisingL > 0 {
+			branch(0, reduction.Ground, 0, p.MagnetisingR, p.MagnetisingL)
+		}
+		return b, ""
 	case *devices.Load:
 		p := d.Params()
 		switch {
@@ -202,10 +223,10 @@ func (s *shrinker) branches(i int) (b []reduction.Branch, wanting string) {
 			return nil, fmt.Sprintf("%s has a capacitor", spec.name)
 		}
 		if p.R > 0 {
-			b = append(b, reduction.Branch{From: 0, To: reduction.Ground, R: p.R})
+			branch(0, reduction.Ground, 0, p.R, 0)
 		}
 		if p.L > 0 {
-			b = append(b, reduction.Branch{From: 0, To: reduction.Ground, R: p.RL, L: p.L})
+			branch(0, reduction.Ground, 0, p.RL, p.L)
 		}
 		return b, ""
 	case *devices.SeriesLoad:
@@ -213,7 +234,8 @@ func (s *shrinker) branches(i int) (b []reduction.Branch, wanting string) {
 			return nil, fmt.Sprintf("%s draws current", spec.name)
 		}
 		p := d.Params()
-		return []reduction.Branch{{From: 0, To: reduction.Ground, R: p.R, L: p.L}}, ""
+		branch(0, reduction.Ground, 0, p.R, p.L)
+		return b, ""
 	}
 	return nil, fmt.Sprintf("%s is %s", spec.name, spec.kind.what())
 }
@@ -284,121 +306,242 @@ func (s *shrinker) groups() {
 	}
 }
 
-// group takes out one connected group of buses, or says why not. touching counts
-// the devices at each bus.
-func (s *shrinker) group(buses []int, touching []int) (wanting string) {
+// cluster is a connected group of buses on its way out.
+type cluster struct {
+	buses, kept []int
+	absorbed    []int // devices
+	node        map[int]int
+	// ratio is the voltage of each bus with no current flowing over that of the
+	// first kept one; all is referred to that.
+	ratio  map[int]complex128
+	net    reduction.Network
+	keep   []int   // nodes of kept
+	level  string  // of detail
+	what   string  // lines, transformers and loads
+	rating float64 // of the transformers, VA
+}
+
+// surround finds what a group of buses absorbs, or says why it can't go.
+func (s *shrinker) surround(buses []int) (k *cluster, wanting string) {
 	c := s.c
-	node := make(map[int]int) // bus -> node, the removed ones first
+	k = &cluster{buses: buses, node: make(map[int]int), ratio: make(map[int]complex128)}
 	for _, b := range buses {
-		node[b] = len(node)
+		k.node[b] = len(k.node)
 	}
 	inside := len(buses)
-	var kept, absorbed []int
-	var g Group
-	net := reduction.Network{}
-	level, loads := "", false
-	rated := 0.0
+	var lines, transformers, loads bool
 	for i, spec := range c.devices {
 		touches := false
 		for _, b := range spec.at {
-			n, ok := node[b]
+			n, ok := k.node[b]
 			touches = touches || ok && n < inside
 		}
 		if !touches {
 			continue
 		}
-		absorbed = append(absorbed, i)
-		g.Absorbed = append(g.Absorbed, spec.name)
+		k.absorbed = append(k.absorbed, i)
 		for _, b := range spec.at {
-			if _, ok := node[b]; !ok {
-				node[b] = len(node)
-				kept = append(kept, b)
+			if _, ok := k.node[b]; !ok {
+				k.node[b] = len(k.node)
+				k.kept = append(k.kept, b)
 			}
 		}
-		branches, _ := s.branches(i)
-		for _, br := range branches {
-			if at := s.detail(i); br.L > 0 && level != at {
-				if level != "" {
-					return fmt.Sprintf("what meets there is at different levels of detail (%s is %s)", spec.name, at)
-				}
-				level = at
-			}
-			br.From = node[spec.at[br.From]]
-			if br.To != reduction.Ground {
-				br.To = node[spec.at[br.To]]
-			}
-			net.Branches = append(net.Branches, br)
-		}
-		if line, ok := s.built[i].(*devices.Line); ok {
-			rated = max(rated, line.Params().RatedCurrent)
-		} else {
+		switch d := s.built[i].(type) {
+		case *devices.Line:
+			lines = true
+		case *devices.Transformer:
+			transformers = true
+			k.rating += d.Params().VA
+		default:
 			loads = true
 		}
 	}
-	if len(kept) == 0 {
-		return "nothing of its part of the network would be left"
+	if len(k.kept) == 0 {
+		return nil, "nothing of its part of the network would be left"
 	}
-	sort.Ints(kept)
-	var keep []int
-	for _, b := range kept {
-		keep = append(keep, node[b])
-		g.Kept = append(g.Kept, c.buses[b].name)
+	sort.Ints(k.kept)
+	for _, b := range k.kept {
+		k.keep = append(k.keep, k.node[b])
 	}
-	for _, b := range buses {
+	var kinds []string
+	for _, w := range []struct {
+		there bool
+		name  string
+	}{{lines, "lines"}, {transformers, "transformers"}, {loads, "loads"}} {
+		if w.there {
+			kinds = append(kinds, w.name)
+		}
+	}
+	k.what = strings.Join(kinds, ", ")
+	if n := len(kinds); n > 1 {
+		k.what = strings.Join(kinds[:n-1], ", ") + " and " + kinds[n-1]
+	}
+	if wanting := s.refer(k); wanting != "" {
+		return nil, wanting
+	}
+	k.net.Nodes = len(k.node)
+	for _, i := range k.absorbed {
+		spec := &c.devices[i]
+		elements, _ := s.branches(i)
+		for _, e := range elements {
+			if at := s.detail(i); e.L > 0 && k.level != at {
+				if k.level != "" {
+					return nil, fmt.Sprintf("what meets there is at different levels of detail (%s is %s)", spec.name, at)
+				}
+				k.level = at
+			}
+			// Power is the same on either side: i = i_referred / ratio*, so
+			// that impedances are divided by |ratio|^2.
+			r := cmplx.Abs(k.ratio[spec.at[e.side]])
+			b := reduction.Branch{From: k.node[spec.at[e.From]], To: reduction.Ground, R: e.R / (r * r), L: e.L / (r * r)}
+			if e.To != reduction.Ground {
+				b.To = k.node[spec.at[e.To]]
+			}
+			k.net.Branches = append(k.net.Branches, b)
+		}
+	}
+	return k, ""
+}
+
+// refer finds the ratios of the buses, or says that transformers in a loop don't
+// agree.
+func (s *shrinker) refer(k *cluster) (wanting string) {
+	k.ratio[k.kept[0]] = 1
+	for changed := true; changed; {
+		changed = false
+		for _, i := range k.absorbed {
+			at := s.c.devices[i].at
+			if len(at) != 2 {
+				continue
+			}
+			rho := complex128(1)
+			if t, ok := s.built[i].(*devices.Transformer); ok {
+				rho = t.OpenRatio(0, 1)
+			}
+			from, isFrom := k.ratio[at[0]]
+			to, isTo := k.ratio[at[1]]
+			switch {
+			case isFrom && !isTo:
+				k.ratio[at[1]], changed = from*rho, true
+			case isTo && !isFrom:
+				k.ratio[at[0]], changed = to/rho, true
+			case isFrom && cmplx.Abs(from*rho-to) > 1e-9*cmplx.Abs(to):
+				return fmt.Sprintf("ratios or phase shifts of transformers around a loop with %s don't agree", s.c.devices[i].name)
+			}
+		}
+	}
+	return ""
+}
+
+// sides are the ratios of the kept buses, nil if all are 1.
+func (k *cluster) sides() []complex128 {
+	out := make([]complex128, len(k.kept))
+	turned := false
+	for j, b := range k.kept {
+		out[j] = k.ratio[b]
+		if cmplx.Abs(out[j]-1) < 1e-12 {
+			out[j] = 1
+		}
+		turned = turned || out[j] != 1
+	}
+	if !turned {
+		return nil
+	}
+	return out
+}
+
+// local refers branches between kept buses to their own voltage, or reports that
+// some lie between different ones.
+func local(branches []reduction.Branch, sides []complex128) ([]reduction.Branch, bool) {
+	if sides == nil {
+		return branches, true
+	}
+	out := make([]reduction.Branch, len(branches))
+	for i, b := range branches {
+		if b.To != reduction.Ground && cmplx.Abs(sides[b.From]-sides[b.To]) > 1e-12*cmplx.Abs(sides[b.To]) {
+			return nil, false
+		}
+		r := cmplx.Abs(sides[b.From])
+		b.R, b.L = b.R*r*r, b.L*r*r
+		out[i] = b
+	}
+	return out, true
+}
+
+// group takes out one connected group of buses, or says why not. touching counts
+// the devices at each bus.
+func (s *shrinker) group(buses []int, touching []int) (wanting string) {
+	c := s.c
+	k, wanting := s.surround(buses)
+	if wanting != "" {
+		return wanting
+	}
+	var g Group
+	for _, b := range k.buses {
 		g.Removed = append(g.Removed, c.buses[b].name)
 	}
-	net.Nodes = len(node)
-	r, err := reduction.Reduce(net, keep)
+	for _, b := range k.kept {
+		g.Kept = append(g.Kept, c.buses[b].name)
+	}
+	for _, i := range k.absorbed {
+		g.Absorbed = append(g.Absorbed, c.devices[i].name)
+	}
+	r, err := reduction.Reduce(k.net, k.keep)
 	if err != nil {
 		return strings.TrimPrefix(err.Error(), "reduction: ")
 	}
 	for _, ci := range r.Circuits {
 		g.Rates = append(g.Rates, ci.Rate())
 	}
-	_, err = net.Ratio()
+	_, err = k.net.Ratio()
 	g.Uniform = err == nil
 	branches, plainly := asBranches(r)
-	if s.o.PlainBranches && (!plainly || len(branches) > 1 && len(keep) == 2) {
-		b, dev, err := reduction.PlainBranches(net, keep, c.Frequency)
+	if plainly {
+		branches, plainly = local(branches, k.sides())
+	}
+	if s.o.PlainBranches && (!plainly || len(branches) > 1 && len(k.keep) == 2) {
+		b, dev, err := reduction.PlainBranches(k.net, k.keep, c.Frequency)
 		if err != nil {
 			g.PlainFault = s.plainFault(err, g.Kept)
+		} else if own, ok := local(b.Branches, k.sides()); !ok {
+			g.PlainFault = "buses of different voltage are around it"
 		} else {
-			branches, plainly, g.Plain, g.Deviations = b.Branches, true, true, dev
+			branches, plainly, g.Plain, g.Deviations = own, true, true, dev
 		}
 	}
 	// Would a bus be left with nothing?
 	if plainly && len(branches) == 0 {
 		left := append([]int(nil), touching...)
-		for _, i := range absorbed {
+		for _, i := range k.absorbed {
 			for _, b := range c.devices[i].at {
 				left[b]--
 			}
 		}
-		for _, b := range kept {
+		for _, b := range k.kept {
 			if left[b] == 0 {
 				return fmt.Sprintf("%s would be left without a device", c.buses[b].name)
 			}
 		}
 	}
-	text, err := s.standIn(&g, r, branches, plainly, rated, level, loads)
+	text, err := s.standIn(&g, k, r, branches, plainly)
 	if err != nil {
 		return err.Error()
 	}
-	for _, b := range buses {
+	for _, b := range k.buses {
 		s.goneBus[b] = true
 	}
-	for _, i := range absorbed {
+	for _, i := range k.absorbed {
 		s.goneDevice[i] = true
 		for _, b := range c.devices[i].at {
 			touching[b]--
 		}
 	}
-	for _, b := range kept {
+	for _, b := range k.kept {
 		if text != "" {
 			touching[b]++
 		}
 	}
-	s.text[absorbed[0]] = text
+	s.text[k.absorbed[0]] = text
 	s.out.Groups = append(s.out.Groups, g)
 	return ""
 }
@@ -471,17 +614,14 @@ func (s *shrinker) name(base string) string {
 }
 
 // standIn writes the devices that stand for a group.
-func (s *shrinker) standIn(g *Group, r *reduction.Reduced, branches []reduction.Branch, plainly bool, rated float64, level string, loads bool) (string, error) {
+func (s *shrinker) standIn(g *Group, k *cluster, r *reduction.Reduced, branches []reduction.Branch, plainly bool) (string, error) {
 	var b strings.Builder
-	what := "lines"
-	if loads {
-		what = "lines and loads"
-	}
 	how := "exactly, in transients too"
 	if g.Plain {
 		how = fmt.Sprintf("as to phasors at %g Hz; transients deviate", s.c.Frequency)
 	}
-	fmt.Fprintf(&b, "# In place of %s %s, without %s: the same from outside %s.\n", what, wrapNames(g.Absorbed), wrapNames(g.Removed), how)
+	b.WriteString(comment(fmt.Sprintf("In place of %s %s, without %s: the same from outside %s.",
+		k.what, strings.Join(g.Absorbed, ", "), strings.Join(g.Removed, ", "), how)))
 	number := len(s.out.Groups) + 1
 	begin := func(name, kind string) {
 		g.Became = append(g.Became, name)
@@ -493,13 +633,13 @@ func (s *shrinker) standIn(g *Group, r *reduction.Reduced, branches []reduction.
 		fmt.Fprintf(&b, "[device.%s]\nkind = %q\n", name, kind)
 	}
 	if plainly {
-		for k, br := range branches {
+		for n, br := range branches {
 			name := fmt.Sprintf("reduced-%d", number)
 			if len(branches) > 1 {
-				name = fmt.Sprintf("reduced-%d-%d", number, k+1)
+				name = fmt.Sprintf("reduced-%d-%d", number, n+1)
 			}
 			name = s.name(name)
-			if k > 0 {
+			if n > 0 {
 				b.WriteByte('\n')
 			}
 			switch {
@@ -511,10 +651,10 @@ func (s *shrinker) standIn(g *Group, r *reduction.Reduced, branches []reduction.
 				fmt.Fprintf(&b, "bus = %q\nR_ohm = %s\nL_H = %s\n", g.Kept[br.From], digits(br.R), digits(br.L))
 			default:
 				begin(name, "line")
-				fmt.Fprintf(&b, "from = %q\nto = %q\nR_ohm = %s\nL_H = %s\nrated_current_A = %s\n", g.Kept[br.From], g.Kept[br.To], digits(br.R), digits(br.L), digits(rated))
+				fmt.Fprintf(&b, "from = %q\nto = %q\nR_ohm = %s\nL_H = %s\nrated_current_A = %s\n", g.Kept[br.From], g.Kept[br.To], digits(br.R), digits(br.L), digits(k.ratedCurrent(br.From, s)))
 			}
-			if level != "" && br.L > 0 {
-				s.rules = append(s.rules, DetailRule{name, level})
+			if k.level != "" && br.L > 0 {
+				s.rules = append(s.rules, DetailRule{name, k.level})
 			}
 		}
 		if len(branches) == 0 {
@@ -523,7 +663,9 @@ func (s *shrinker) standIn(g *Group, r *reduction.Reduced, branches []reduction.
 		b.WriteByte('\n')
 		return b.String(), nil
 	}
-	p := devices.ReducedNetworkParams{RatedCurrent: rated}
+	rated := k.ratedCurrent(0, s)
+	sides := k.sides()
+	p := devices.ReducedNetworkParams{RatedCurrent: rated, Ratio: sides}
 	for _, c := range r.Circuits {
 		p.R, p.L, p.Drive = append(p.R, c.R), append(p.L, c.L), append(p.Drive, c.Drive)
 	}
@@ -539,41 +681,76 @@ func (s *shrinker) standIn(g *Group, r *reduction.Reduced, branches []reduction.
 	for _, d := range p.Drive {
 		fmt.Fprintf(&b, "  %s,\n", digitsAll(d))
 	}
-	fmt.Fprintf(&b, "]\nrated_current_A = %s\n", digits(rated))
-	s.rules = append(s.rules, DetailRule{name, level})
-	for k, br := range r.Resistive {
+	b.WriteString("]\n")
+	if sides != nil {
+		ratio, shift := make([]float64, len(sides)), make([]float64, len(sides))
+		for j, x := range sides {
+			ratio[j], shift[j] = cmplx.Abs(x), cmplx.Phase(x)*180/math.Pi
+			if d := math.Round(shift[j]); math.Abs(shift[j]-d) < 1e-9 {
+				shift[j] = d + 0 // no minus sign of zero
+			}
+		}
+		fmt.Fprintf(&b, "ratio = %s\nshift_deg = %s\n", digitsAll(ratio), digitsAll(shift))
+	}
+	if k.rating > 0 {
+		fmt.Fprintf(&b, "power_kVA = %s\n", digits(k.rating/1e3))
+	}
+	fmt.Fprintf(&b, "rated_current_A = %s\n", digits(rated))
+	s.rules = append(s.rules, DetailRule{name, k.level})
+	resistive, ok := local(r.Resistive, sides)
+	if !ok {
+		return "", errors.New("lines without inductance tie the buses around it together")
+	}
+	for n, br := range resistive {
 		b.WriteByte('\n')
-		name := s.name(fmt.Sprintf("reduced-%d-resistive-%d", number, k+1))
+		name := s.name(fmt.Sprintf("reduced-%d-resistive-%d", number, n+1))
 		if br.To == reduction.Ground {
 			begin(name, "load")
 			fmt.Fprintf(&b, "bus = %q\nR_ohm = %s\n", g.Kept[br.From], digits(br.R))
 		} else {
 			begin(name, "line")
-			fmt.Fprintf(&b, "from = %q\nto = %q\nR_ohm = %s\nL_H = 0\nrated_current_A = %s\n", g.Kept[br.From], g.Kept[br.To], digits(br.R), digits(rated))
+			fmt.Fprintf(&b, "from = %q\nto = %q\nR_ohm = %s\nL_H = 0\nrated_current_A = %s\n", g.Kept[br.From], g.Kept[br.To], digits(br.R), digits(k.ratedCurrent(br.From, s)))
 		}
 	}
 	b.WriteByte('\n')
 	return b.String(), nil
 }
 
-// wrapNames lists names in a comment, in lines of moderate length.
-func wrapNames(names []string) string {
+// ratedCurrent is what currents at a kept bus are measured by, A rms: the largest
+// rating of the lines taken out, at their voltage, or of the transformers.
+func (k *cluster) ratedCurrent(j int, s *shrinker) float64 {
+	volts := s.c.buses[k.kept[j]].volts
+	power := 0.0
+	for _, i := range k.absorbed {
+		switch d := s.built[i].(type) {
+		case *devices.Line:
+			power = max(power, d.Params().RatedCurrent*s.c.buses[s.c.devices[i].at[0]].volts)
+		case *devices.Transformer:
+			power = max(power, devices.RatedAmperes(d.Params().VA, 1))
+		}
+	}
+	return power / volts
+}
+
+// comment writes a text as lines of comment.
+func comment(text string) string {
+	const widest = 100
 	var b strings.Builder
 	width := 0
-	for i, n := range names {
-		if i > 0 {
-			b.WriteString(",")
-			if width > 70 {
-				b.WriteString("\n# ")
-				width = 0
-			} else {
-				b.WriteString(" ")
-			}
+	for i, word := range strings.Fields(text) {
+		switch {
+		case i == 0:
+			b.WriteString("# ")
+		case width+len(word) > widest:
+			b.WriteString("\n# ")
+			width = 0
+		default:
+			b.WriteByte(' ')
 		}
-		b.WriteString(n)
-		width += len(n) + 2
+		b.WriteString(word)
+		width += len(word) + 1
 	}
-	return b.String()
+	return b.String() + "\n"
 }
 
 // write makes the reduced case's text, and counts.

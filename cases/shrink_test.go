@@ -263,7 +263,7 @@ func TestShrunkText(t *testing.T) {
 	text := string(s.Source)
 	for _, want := range []string{
 		"# Made of the case c by islet shrink: 1 of 4 buses taken out.\n# A study of ours.\n[study]",
-		"# legs\n\n# In place of lines leg-north, leg-south, leg-east, without joint: the same from outside exactly, in transients too.\n[device.reduced-1]",
+		"# legs\n\n# In place of lines leg-north, leg-south, leg-east, without joint: the same from outside exactly, in\n# transients too.\n[device.reduced-1]",
 		"rated_current_A = 150\n",
 		"buses = [\"north\", \"south\", \"east\"]",
 		"[event.shop-opens]\nat_s = 0.1\naction = \"set\"\ndevice = \"shop\"\n",
@@ -554,6 +554,133 @@ func TestShrinkResistances(t *testing.T) {
 		t.Errorf("no load of 20.1 ohm:\n%s", s.Source)
 	}
 	sameWaveforms(t, "heater", []byte(src), s.Source, 1e-5)
+}
+
+// stationCase is a ring of three stations at 11 kV, each with a transformer to a
+// board, one of them magnetised, and a feeder at one.
+const stationCase = `[study]
+until_s = 0.3
+sample_ms = 0.5
+[bus.supply]
+voltage_kV = 11
+[bus.one]
+voltage_kV = 11
+[bus.two]
+voltage_kV = 11
+[bus.board-one]
+voltage_kV = 0.4
+[bus.board-two]
+voltage_kV = 0.4
+[bus.shed]
+voltage_kV = 0.4
+[device.grid]
+kind = "grid"
+bus = "supply"
+short_circuit_MVA = 60
+x_over_r = 4
+[device.ring-1]
+kind = "line"
+from = "supply"
+to = "one"
+R_ohm = 0.4
+L_H = 1e-3
+[device.ring-2]
+kind = "line"
+from = "one"
+to = "two"
+R_ohm = 0.5
+L_H = 0.8e-3
+[device.ring-3]
+kind = "line"
+from = "two"
+to = "supply"
+R_ohm = 0.2
+L_H = 1.5e-3
+[device.transformer-one]
+kind = "transformer"
+from = "one"
+to = "board-one"
+power_kVA = 250
+vector_group = "Dyn11"
+impedance_percent = 4
+x_over_r = 3
+no_load_current_percent = 1
+no_load_loss_kW = 0.5
+[device.transformer-two]
+kind = "transformer"
+from = "two"
+to = "board-two"
+power_kVA = 400
+vector_group = "Dyn11"
+impedance_percent = 4
+x_over_r = 3
+lv_kV = 0.41
+[device.cable]
+kind = "line"
+from = "board-two"
+to = "shed"
+R_ohm = 0.02
+L_H = 2e-5
+[device.battery]
+kind = "grid-forming inverter"
+bus = "board-one"
+power_kVA = 100
+p_kW = 20
+[device.shop]
+kind = "load"
+bus = "shed"
+power_kW = 60
+reactive_kvar = 20
+[event.shop-opens]
+at_s = 0.1
+action = "set"
+device = "shop"
+setpoint = "p"
+value_kW = 100
+`
+
+// Transformers are taken out with their stations: ratios, phase shifts and no-load
+// currents stay.
+func TestShrunkStationsRunTheSame(t *testing.T) {
+	s := shrink(t, stationCase, ShrinkOptions{})
+	if got := strings.Join(s.Removed(), " "); got != "one two board-two" {
+		t.Fatalf("taken out: %s; %+v", got, s.Stay)
+	}
+	text := string(s.Source)
+	for _, want := range []string{"shift_deg = [0, 30, 30]\n", "power_kVA = 650\n", "ratio = [1, 0.0363636363636364, 0.0372727272727273]"} {
+		if !strings.Contains(text, want) {
+			t.Errorf("text lacks %q:\n%s", want, text)
+		}
+	}
+	sameWaveforms(t, "stations", []byte(stationCase), s.Source, 1e-5)
+	// The same with a load that can be taken in, and with other buses kept.
+	calm := stationCase[:strings.Index(stationCase, "[event.")] + "[event.grid]\nat_s = 0.1\naction = \"set\"\ndevice = \"grid\"\nsetpoint = \"voltage\"\nvalue_kV = 10.5\n"
+	for _, o := range []ShrinkOptions{{}, {Keep: []string{"supply", "board-two"}, LoadsAsImpedances: true}, {LoadsAsImpedances: true, PlainBranches: true}} {
+		s := shrink(t, calm, o)
+		if len(s.Removed()) < 3 {
+			t.Errorf("%+v: taken out %v", o, s.Removed())
+		}
+		if o.PlainBranches && (s.Groups[0].Plain || s.Groups[0].PlainFault == "") {
+			t.Errorf("%+v", s.Groups[0])
+		}
+		sameWaveforms(t, fmt.Sprintf("%+v", o), []byte(calm), s.Source, 1e-5)
+	}
+	quasi := stationCase + "[detail]\n\"kind:line\" = \"quasi-steady\"\n\"kind:transformer\" = \"quasi-steady\"\n"
+	sameWaveforms(t, "quasi-steady", []byte(quasi), shrink(t, quasi, ShrinkOptions{}).Source, 1e-5)
+	// Transformers in a loop that don't agree hold what they are part of.
+	odd := strings.Replace(stationCase, "[device.cable]", "[device.tie]\nkind = \"line\"\nfrom = \"board-one\"\nto = \"board-two\"\nR_ohm = 0.1\nL_H = 1e-4\n[device.cable]", 1)
+	told := false
+	for _, b := range shrink(t, odd, ShrinkOptions{}).Stay {
+		told = told || b.Bus == "one" && strings.Contains(strings.Join(b.Reasons, " "), "don't agree")
+	}
+	if !told {
+		t.Error("transformers in a loop that don't agree aren't told")
+	}
+	// A lone board behind a transformer, loads taken in, is loads at the station.
+	s = shrink(t, calm, ShrinkOptions{LoadsAsImpedances: true})
+	if len(s.Groups) != 1 || s.Groups[0].Kind != "reduced network" {
+		t.Errorf("%+v", s.Groups)
+	}
 }
 
 // A table written in another form is said to be in the way.
