@@ -802,7 +802,7 @@ func (s *shrinker) write(name string, source []byte) error {
 	}
 	small, err := Parse(name, text)
 	if err != nil {
-		return fmt.Errorf("cases: the reduced case is at fault: %w", err)
+		return fmt.Errorf("cases: the case written out would be at fault: %w", err)
 	}
 	out.Source = text
 	out.Buses = [2]int{len(c.buses), len(small.buses)}
@@ -923,7 +923,7 @@ func (s *shrinker) remains(device string) bool {
 func (s *shrinker) pinLevels(name string, text []byte) ([]byte, error) {
 	small, err := Parse(name, text)
 	if err != nil {
-		return nil, fmt.Errorf("cases: the reduced case is at fault: %w", err)
+		return nil, fmt.Errorf("cases: the case written out would be at fault: %w", err)
 	}
 	want := make(map[string]string)
 	for i := range s.c.devices {

@@ -1,6 +1,7 @@
 package main
 
 import (
+	"bytes"
 	"context"
 	"errors"
 	"fmt"
@@ -62,24 +63,33 @@ func cmdShrink(ctx context.Context, c *call) error {
 	if len(c.shrink.keep) > 0 && len(o.Keep) == 0 {
 		return fmt.Errorf("%w: --keep %q: want names of buses with commas between them", errUsage, c.shrink.keep.String())
 	}
+	// A step takes a case's text and gives that of a smaller case, so that one can
+	// follow another. The first writes the overrides into it.
+	var report bytes.Buffer
+	fmt.Fprintf(&report, "%s: %s\n\n", full.Name, full.Title)
+	smaller := false
 	s, err := cases.Shrink(name, source, o, ov...)
 	if err != nil {
 		return fmt.Errorf("%w: %w", errInput, err)
 	}
+	source = s.Source
+	smaller = smaller || len(s.Groups) > 0
+	reportShrunk(&report, s, o)
 	if c.out == "-" {
-		_, err := c.stdout.Write(s.Source)
+		_, err := c.stdout.Write(source)
 		return err
 	}
-	fmt.Fprintf(c.stdout, "%s: %s\n\n", full.Name, full.Title)
-	reportShrunk(c.stdout, s, o)
-	if len(s.Groups) == 0 {
+	if _, err := report.WriteTo(c.stdout); err != nil {
+		return err
+	}
+	if !smaller {
 		if c.out != "" {
 			fmt.Fprintf(c.stdout, "\nnothing to write to %s\n", c.out)
 		}
 		return nil
 	}
 	if !c.shrink.noConfirmation {
-		if err := confirmShrunk(ctx, c, full, s, o); err != nil {
+		if err := confirmShrunk(ctx, c, full, source, o.PlainBranches); err != nil {
 			return err
 		}
 	}
@@ -90,7 +100,7 @@ func cmdShrink(ctx context.Context, c *call) error {
 	if err := os.MkdirAll(filepath.Dir(c.out), 0o777); err != nil {
 		return err
 	}
-	if err := os.WriteFile(c.out, s.Source, 0o666); err != nil {
+	if err := os.WriteFile(c.out, source, 0o666); err != nil {
 		return err
 	}
 	fmt.Fprintf(c.stdout, "\nwritten to %s; islet run %s runs it\n", c.out, c.out)
@@ -237,9 +247,10 @@ func watched(full, small *cases.Case) []string {
 }
 
 // confirmShrunk runs both cases and prints by how much waveforms deviate that both
-// have.
-func confirmShrunk(ctx context.Context, c *call, full *cases.Case, s *cases.Shrunk, o cases.ShrinkOptions) error {
-	small, err := cases.Parse(full.Name+"-reduced.toml", s.Source)
+// have. source is the smaller one's text; approximate tells that it isn't meant to be
+// the same.
+func confirmShrunk(ctx context.Context, c *call, full *cases.Case, source []byte, approximate bool) error {
+	small, err := cases.Parse(full.Name+"-reduced.toml", source)
 	if err != nil {
 		return err
 	}
@@ -284,7 +295,7 @@ func confirmShrunk(ctx context.Context, c *call, full *cases.Case, s *cases.Shru
 	for _, ch := range b.Changes {
 		fmt.Fprintf(c.stdout, "VERDICT CHANGED: %s\n", ch)
 	}
-	if len(b.Changes) > 0 || o.PlainBranches {
+	if len(b.Changes) > 0 || approximate {
 		fmt.Fprintln(c.stdout, "Results support, and never replace, local codes, utility requirements and a licensed engineer's judgement.")
 	}
 	return nil
