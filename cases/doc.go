@@ -23,6 +23,11 @@
 // inverters' and transformers' ratings and of what grids are rated at, over
 // sqrt(3) V. It is the base of the current's error norm.
 //
+// # Smaller cases
+//
+// [Shrink] takes buses without injection out of a case's text and puts reduced
+// networks in their place, exactly or, if asked, by plain lines.
+//
 // # Errors
 //
 // A file is read strictly: unknown keys and names (with the nearest known one),
