@@ -781,14 +781,8 @@ func (s *shrinker) write(name string, source []byte) error {
 		e.prepend(fmt.Sprintf("# Made of the case %s by islet shrink: %d of %d buses taken out.\n", baseName(name), len(out.Removed()), len(c.buses)))
 	}
 	s.record(e)
-	// What rules of detail would mean now, without those that mean nothing.
-	var rules []DetailRule
 	for _, r := range c.Rules {
-		if s.ruleStands(r) {
-			rules = append(rules, r)
-			continue
-		}
-		if len(out.Groups) > 0 {
+		if len(out.Groups) > 0 && !s.ruleStands(r) {
 			e.unset("detail", r.Pattern)
 			out.Notes = append(out.Notes, fmt.Sprintf("the rule of detail %q = %q means no device any more and is left out", r.Pattern, r.Level))
 		}

@@ -279,8 +279,3 @@ func (e *sourceEdit) appendTo(line string, key ...string) {
 	}
 	e.changes = append(e.changes, splice{to, to, line})
 }
-
-// wrapNames lists names within a comment, in lines of moderate length.
-func wrapNames(names []string) string {
-	return strings.TrimSuffix(strings.TrimPrefix(comment(strings.Join(names, ", ")), "# "), "\n")
-}
