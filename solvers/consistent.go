@@ -87,6 +87,14 @@ func initialise(s algebraic, t float64, y []float64, work [][]float64) error {
 			s.Solve(dNext)
 			s.keepAlgebraic(dNext)
 			next, _ := s.Norm(dNext, trial, trial, unit)
+			if next <= done {
+				// The next correction by the same matrix is nothing: linear
+				// equations end here.
+				for i := range y {
+					y[i] = trial[i] + dNext[i]
+				}
+				return nil
+			}
 			if next <= (1-damping/4)*size {
 				break
 			}
