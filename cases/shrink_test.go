@@ -556,6 +556,43 @@ func TestShrinkResistances(t *testing.T) {
 	sameWaveforms(t, "heater", []byte(src), s.Source, 1e-5)
 }
 
+// A path without inductance between buses that stay, beside circuits that tie them
+// too, becomes a line of its own.
+func TestShrinkResistiveBesideCircuits(t *testing.T) {
+	src := strings.NewReplacer(
+		"R_ohm = 0.5e-1 # mixed\nL_H = 0.1e-3", "R_ohm = 0.05\nL_H = 0",
+		"R_ohm = 0.02\nL_H = 0.2e-3", "R_ohm = 0.02\nL_H = 0",
+		"[event.shop-opens]", `[bus.second]
+voltage_kV = 0.4
+[device.second-north]
+kind = "line"
+from = "north"
+to = "second"
+R_ohm = 0.03
+L_H = 1e-4
+[device.second-south]
+kind = "line"
+from = "south"
+to = "second"
+R_ohm = 0.05
+L_H = 1e-4
+[device.second-joint]
+kind = "line"
+from = "joint"
+to = "second"
+R_ohm = 0.02
+L_H = 3e-4
+[event.shop-opens]`).Replace(starCase)
+	s := shrink(t, src, ShrinkOptions{})
+	if got := strings.Join(s.Removed(), " "); got != "joint second" {
+		t.Fatalf("taken out: %s; %+v", got, s.Stay)
+	}
+	if text := string(s.Source); !strings.Contains(text, "[device.reduced-1-resistive-1]\nkind = \"line\"\nfrom = \"north\"\nto = \"south\"\nR_ohm = 0.07\n") {
+		t.Errorf("no line of 0.07 ohm:\n%s", text)
+	}
+	sameWaveforms(t, "resistive path", []byte(src), s.Source, 1e-5)
+}
+
 // stationCase is a ring of three stations at 11 kV, each with a transformer to a
 // board, one of them magnetised, and a feeder at one.
 const stationCase = `[study]

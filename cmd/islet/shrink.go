@@ -254,7 +254,9 @@ func confirmShrunk(ctx context.Context, c *call, full *cases.Case, source []byte
 	if err != nil {
 		return err
 	}
-	eo := engine.Options{Tolerance: c.tolerance}
+	// When frames are turned to a new speed depends on the steps, and what is
+	// quasi-steady takes its reactance at the frame's speed.
+	eo := engine.Options{Tolerance: c.tolerance, FixedFrame: len(full.Rules) > 0}
 	setting := func(name string, k *cases.Case) compare.Setting {
 		return compare.Setting{Name: name, Start: func(o *engine.Options) (*engine.Simulation, error) { return k.Start(o) }}
 	}

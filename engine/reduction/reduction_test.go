@@ -121,6 +121,58 @@ func TestStarDelta(t *testing.T) {
 	}
 }
 
+// The star-mesh transformation of any number of legs: Y_ij = y_i y_j / (sum of y),
+// A. Rosen, A new network theorem, J. IEE 62, 1924 (from memory); and the modes of a
+// star are the roots of sum 1/(R_k + s L_k) = 0, one between each two neighbouring
+// R_k/L_k.
+func TestStarMesh(t *testing.T) {
+	rng := rand.New(rand.NewPCG(13, 14))
+	for range 20 {
+		legs := 3 + rng.IntN(6)
+		r, l, ratio := make([]float64, legs), make([]float64, legs), make([]float64, legs)
+		for k := range r {
+			r[k], l[k] = math.Exp(rng.NormFloat64()), 1e-3*math.Exp(rng.NormFloat64())
+			ratio[k] = r[k] / l[k]
+		}
+		sort.Float64s(ratio)
+		n, keep := star(r, l)
+		red, err := Reduce(n, keep)
+		if err != nil {
+			t.Fatal(err)
+		}
+		for _, s := range []complex128{0, complex(0, 100*math.Pi), complex(-20, 3000)} {
+			sum, y := complex(0, 0), make([]complex128, legs)
+			for k := range y {
+				y[k] = 1 / (complex(r[k], 0) + s*complex(l[k], 0))
+				sum += y[k]
+			}
+			got := red.Admittance(s)
+			for i := range legs {
+				for j := range i {
+					want := -y[i] * y[j] / sum
+					nearC(t, fmt.Sprintf("s = %v: Y[%d][%d]/Y", s, i, j), got.At(i, j)/want, 1, 1e-9)
+				}
+			}
+		}
+		if len(red.Circuits) != legs-1 {
+			t.Errorf("%d circuits of %d legs", len(red.Circuits), legs)
+			continue
+		}
+		for k, c := range red.Circuits {
+			if rate := c.Rate(); !(rate > ratio[k] && rate < ratio[k+1]) {
+				t.Errorf("rate %g isn't between %g and %g", rate, ratio[k], ratio[k+1])
+			}
+			sum, size := 0.0, 0.0
+			for j := range r {
+				x := 1 / (r[j] - c.Rate()*l[j])
+				sum += x
+				size = math.Max(size, math.Abs(x))
+			}
+			near(t, "sum 1/(R - rate L)", sum/size, 0, 1e-8)
+		}
+	}
+}
+
 // E2: S. Y. Caliskan, P. Tabuada, Automatica 50(10), 2014. Star L = (1, 2, 0.5) mH
 // with R/L = 100 1/s: mesh L12 = 7, L13 = 1.75, L23 = 3.5 mH, R = 100 L.
 func TestUniform(t *testing.T) {
