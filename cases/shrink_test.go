@@ -737,3 +737,61 @@ func TestReadSource(t *testing.T) {
 		t.Errorf("error %v", err)
 	}
 }
+
+// Whatever line a case lacks or repeats: if it is a case, so is what is left of it.
+func TestShrinkMutated(t *testing.T) {
+	lines := strings.Split(strings.TrimRight(everything+starCase[strings.Index(starCase, "[bus.north]"):], "\n"), "\n")
+	shrunk := 0
+	for i := range lines {
+		variants := [][]string{nil, {lines[i], "# a comment"}, {"", lines[i], ""}}
+		if i%8 != 0 {
+			variants = variants[:1]
+		}
+		for _, now := range variants {
+			src := strings.Join(append(append(append([]string(nil), lines[:i]...), now...), lines[i+1:]...), "\n")
+			if _, err := Parse("m", []byte(src)); err != nil {
+				continue
+			}
+			for _, o := range []ShrinkOptions{{}, {LoadsAsImpedances: true, PlainBranches: true}} {
+				s, err := Shrink("m", []byte(src), o)
+				if err != nil {
+					t.Errorf("line %d %q as %q: %v", i+1, lines[i], now, err)
+					continue
+				}
+				shrunk += len(s.Groups)
+			}
+		}
+	}
+	if shrunk < 50 {
+		t.Errorf("only %d groups taken out: the mutations miss their aim", shrunk)
+	}
+}
+
+// The buses of the benchmark feeder at which nothing but cables meet go.
+func ExampleShrink() {
+	name, source, err := ReadSource("cigre-lv")
+	if err != nil {
+		fmt.Println(err)
+		return
+	}
+	s, err := Shrink(name, source, ShrinkOptions{Keep: []string{"R9"}})
+	if err != nil {
+		fmt.Println(err)
+		return
+	}
+	fmt.Printf("%d of %d buses, %d of %d unknowns\n", s.Buses[1], s.Buses[0], s.Unknowns[1], s.Unknowns[0])
+	for _, g := range s.Groups {
+		fmt.Println(g.Kind, "between", g.Kept)
+	}
+	c, err := Parse("reduced", s.Source)
+	if err != nil {
+		fmt.Println(err)
+		return
+	}
+	fmt.Println(c.Kind("reduced-1"))
+	// Output:
+	// 10 of 20 buses, 136 of 176 unknowns
+	// reduced network between [R2 R9 R11 R15 R16]
+	// line between [R9 R18]
+	// reduced network
+}
