@@ -4,6 +4,7 @@ import (
 	"errors"
 	"fmt"
 	"math"
+	"regexp"
 	"strings"
 
 	"islet/devices"
@@ -47,6 +48,9 @@ type ApartDevice struct {
 	Device string
 	Why    string
 }
+
+// inParallel is how devices says which of several inverters differ.
+var inParallel = regexp.MustCompile(`^(devices: )?inverters 1 and \d+ in parallel (have )?`)
 
 // maxAggregateTolerance bounds AggregateOptions.Tolerance: beyond it, a mean means
 // little.
@@ -171,7 +175,7 @@ func (a *aggregator) find() {
 				}
 				more, err := g.with(i, a.built[i], a.tolerance)
 				if err != nil {
-					last = fmt.Errorf("with %s, %s", c.devices[first].name, plain(errors.New(strings.TrimPrefix(err.Error(), "devices: "))))
+					last = fmt.Errorf("beside %s: %s", c.devices[first].name, inParallel.ReplaceAllString(plain(err), ""))
 					continue
 				}
 				bundles[k], placed = more, true

@@ -178,7 +178,7 @@ func ParallelForming(list []GridFormingParams) (GridFormingParams, Spread, error
 			continue
 		}
 		first := list[0]
-		if a, b := fmt.Sprintf("%T", first.Primary), fmt.Sprintf("%T", p.Primary); a != b {
+		if a, b := controlOf(first.Primary), controlOf(p.Primary); a != b {
 			errs = append(errs, fmt.Errorf("devices: inverters 1 and %d in parallel have primary controls %s and %s", i+1, a, b))
 		}
 		if a, b := first.Priority.named(), p.Priority.named(); a != b {
@@ -194,6 +194,17 @@ func ParallelForming(list []GridFormingParams) (GridFormingParams, Spread, error
 	}
 	sum, spread, err := parallel(parts, formingPowers())
 	return sum.together(), spread, err
+}
+
+// controlOf names a primary control.
+func controlOf(c PrimaryControl) ControlKind {
+	switch c.(type) {
+	case VirtualMachine:
+		return VirtualMachineControl
+	case Oscillator:
+		return OscillatorControl
+	}
+	return DroopControl
 }
 
 // ParallelFollowing is [ParallelForming] for grid-following inverters.

@@ -21,6 +21,8 @@ type shrinkOptions struct {
 	loads          bool
 	plainBranches  bool
 	noConfirmation bool
+	aggregate      bool
+	spread         float64 // %
 }
 
 func shrinkFlags(c *call) {
@@ -28,6 +30,8 @@ func shrinkFlags(c *call) {
 	c.fs.Var(&c.shrink.keep, "keep", "`BUS,...`: buses to keep, all others go if they can; may be repeated (default: every bus goes that can)")
 	c.fs.BoolVar(&c.shrink.loads, "loads-as-impedances", false, "take loads of resistance and inductance into the reduced network, so that their buses can go")
 	c.fs.BoolVar(&c.shrink.plainBranches, "plain-branches", false, "write plain lines that are right at the nominal frequency, in place of the exact form; the error is shown")
+	c.fs.BoolVar(&c.shrink.aggregate, "aggregate", false, "first put inverters in parallel that are the same per unit of their ratings together, one a bus")
+	c.fs.Float64Var(&c.shrink.spread, "aggregate-tolerance", 0, "with --aggregate, accept parameters that deviate by so many `%` from the mean per unit; the error is measured (default: none)")
 	c.fs.StringVar(&c.out, "out", "", "write the reduced case to `FILE`; - for standard output without the report")
 	c.fs.BoolVar(&c.shrink.noConfirmation, "no-run", false, "don't run both cases to compare them")
 	c.fs.Float64Var(&c.until, "until", 0, "end of the runs compared, `s` (default: the case's)")
@@ -67,7 +71,19 @@ func cmdShrink(ctx context.Context, c *call) error {
 	// follow another. The first writes the overrides into it.
 	var report bytes.Buffer
 	fmt.Fprintf(&report, "%s: %s\n\n", full.Name, full.Title)
-	smaller := false
+	smaller, approximate := false, o.PlainBranches
+	if c.shrink.spread != 0 && !c.shrink.aggregate {
+		return fmt.Errorf("%w: --aggregate-tolerance %g goes with --aggregate", errUsage, c.shrink.spread)
+	}
+	if c.shrink.aggregate {
+		a, err := cases.Aggregate(name, source, cases.AggregateOptions{Tolerance: c.shrink.spread / 100}, ov...)
+		if err != nil {
+			return fmt.Errorf("%w: %w", errInput, err)
+		}
+		source, ov = a.Source, nil
+		smaller, approximate = len(a.Sums) > 0, approximate || c.shrink.spread > 0
+		reportAggregated(&report, a)
+	}
 	s, err := cases.Shrink(name, source, o, ov...)
 	if err != nil {
 		return fmt.Errorf("%w: %w", errInput, err)
@@ -89,7 +105,7 @@ func cmdShrink(ctx context.Context, c *call) error {
 		return nil
 	}
 	if !c.shrink.noConfirmation {
-		if err := confirmShrunk(ctx, c, full, source, o.PlainBranches); err != nil {
+		if err := confirmShrunk(ctx, c, full, source, approximate); err != nil {
 			return err
 		}
 	}
@@ -105,6 +121,42 @@ func cmdShrink(ctx context.Context, c *call) error {
 	}
 	fmt.Fprintf(c.stdout, "\nwritten to %s; islet run %s runs it\n", c.out, c.out)
 	return nil
+}
+
+// shownApart is how many inverters that stay apart are printed.
+const shownApart = 12
+
+// reportAggregated prints which inverters went together.
+func reportAggregated(w io.Writer, a *cases.Aggregated) {
+	if len(a.Sums) == 0 {
+		fmt.Fprintf(w, "No inverters go together.\n")
+	} else {
+		fmt.Fprintf(w, "%-10s %8s %8s\n", "", "before", "after")
+		fmt.Fprintf(w, "%-10s %8d %8d\n", "devices", a.Devices[0], a.Devices[1])
+		fmt.Fprintf(w, "%-10s %8d %8d\n", "unknowns", a.Unknowns[0], a.Unknowns[1])
+		fmt.Fprintf(w, "\n%-24s %-12s %10s  %-34s %s\n", "inverter", "bus", "kVA", "deviation of parameters, per unit", "in place of")
+	}
+	for _, s := range a.Sums {
+		spread := "none: exact"
+		if s.Spread.Largest > 1e-9 {
+			spread = fmt.Sprintf("%s, %s", percent(s.Spread.Largest), s.Spread.Parameter)
+		}
+		fmt.Fprintf(w, "%-24s %-12s %10.4g  %-34s %s\n", s.Name, s.Bus, s.Rating/1e3, spread, wrap(s.Of, 86))
+	}
+	for k, d := range a.Apart {
+		if k == 0 {
+			fmt.Fprintf(w, "\n%-24s why it stays apart\n", "inverter")
+		}
+		if k == shownApart && len(a.Apart) > shownApart+1 {
+			fmt.Fprintf(w, "and %d more\n", len(a.Apart)-k)
+			break
+		}
+		fmt.Fprintf(w, "%-24s %s\n", d.Device, d.Why)
+	}
+	for _, n := range a.Notes {
+		fmt.Fprintf(w, "note: %s\n", n)
+	}
+	fmt.Fprintln(w)
 }
 
 // shownReasons is how many of a bus's reasons to stay are printed.

@@ -92,3 +92,24 @@ func TestShrinkWrongUse(t *testing.T) {
 		}
 	}
 }
+
+func TestShrinkAggregate(t *testing.T) {
+	file := filepath.Join(t.TempDir(), "sums.toml")
+	code, out, err := islet("shrink", "mesh-10", "--aggregate", "--aggregate-tolerance", "5", "--until", "0.6", "--out", file)
+	for _, w := range []string{
+		"devices          15       12\n", "former-3-x2", "none: exact", "former-0                 event former-down acts on former-0",
+		"138 against 100 unknowns", "licensed engineer", "written to " + file,
+	} {
+		if code != exitOK || !strings.Contains(out, w) {
+			t.Errorf("code %d, report lacks %q:\n%s%s", code, w, out, err)
+		}
+	}
+	if code, out, err := islet("run", file, "--until", "0.1"); code != exitOK {
+		t.Errorf("code %d\n%s%s", code, out, err)
+	}
+	for _, o := range [][]string{{"--aggregate-tolerance", "5"}, {"--aggregate", "--aggregate-tolerance", "-1"}, {"--aggregate", "--aggregate-tolerance", "80"}} {
+		if code, out, _ := islet(append([]string{"shrink", "mesh-10"}, o...)...); code == exitOK {
+			t.Errorf("%v is taken:\n%s", o, out)
+		}
+	}
+}
