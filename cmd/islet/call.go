@@ -48,8 +48,10 @@ type call struct {
 	settings list
 	repeat   int
 	windows  string
+	noModes  bool
 
 	shrink shrinkOptions
+	modes  modesOptions
 }
 
 // list is a flag that may be given several times.

@@ -96,8 +96,11 @@ func (rep *Report) WriteText(w io.Writer) error {
 			damping, tau = fmt.Sprintf("%.2f %%", 100*m.Damping), seconds(m.TimeConstant)
 		}
 		who := join(rep.Participants(m, 3, 0.01), 3)
-		if k := m.kind(); k != "" {
+		switch k := m.kind(); {
+		case k != "" && who != "":
 			who = k + "; " + who
+		case k != "":
+			who = k
 		}
 		p.printf("%5d %28s %10s %9s %11s  %-30s %s\n", m.Number, value, hz, damping, tau, join(m.ByDynamics, 2), who)
 	}

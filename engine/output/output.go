@@ -133,55 +133,58 @@ func finite(v reflect.Value, at string) error {
 // pictures of [Plots] as SVG into dir, which is made if need be, and returns
 // the files' names. Each file appears whole or not at all.
 func WriteAll(dir string, sim *engine.Simulation, summary any, plots bool) ([]string, error) {
-	files := []file{
+	files := []File{
 		{"waveforms.csv", func(w io.Writer) error { return WriteCSV(w, sim.Trace()) }},
 		{"summary.json", func(w io.Writer) error { return WriteJSON(w, summary) }},
 	}
 	if plots {
 		for _, p := range Plots(sim) {
-			files = append(files, file{p.Name + ".svg", p.WriteSVG})
+			files = append(files, File{p.Name + ".svg", p.WriteSVG})
 		}
 	}
-	return writeFiles(dir, files)
+	return WriteFiles(dir, files)
 }
 
 // WriteComparison writes comparison.txt, comparison.csv and comparison.json
 // and, if plots is set, overlays of the channels that differ most, into dir.
 func WriteComparison(dir string, c *compare.Comparison, plots bool) ([]string, error) {
-	files := []file{
+	files := []File{
 		{"comparison.txt", c.WriteText},
 		{"comparison.csv", c.WriteCSV},
 		{"comparison.json", c.WriteJSON},
 	}
 	if plots {
 		for _, p := range Overlays(c) {
-			files = append(files, file{p.Name + ".svg", p.WriteSVG})
+			files = append(files, File{p.Name + ".svg", p.WriteSVG})
 		}
 	}
-	return writeFiles(dir, files)
+	return WriteFiles(dir, files)
 }
 
-type file struct {
-	name  string
-	write func(w io.Writer) error
+// File is a file to be written: its name and what writes its content.
+type File struct {
+	Name  string
+	Write func(w io.Writer) error
 }
 
-func writeFiles(dir string, files []file) ([]string, error) {
+// WriteFiles writes files into dir, which is made if need be, and returns the names
+// of those written. Each appears whole or not at all.
+func WriteFiles(dir string, files []File) ([]string, error) {
 	if err := os.MkdirAll(dir, 0o777); err != nil {
 		return nil, fmt.Errorf("output: %w", err)
 	}
 	var names []string
 	for _, f := range files {
 		if err := writeFile(dir, f); err != nil {
-			return names, fmt.Errorf("output: %s: %w", f.name, err)
+			return names, fmt.Errorf("output: %s: %w", f.Name, err)
 		}
-		names = append(names, f.name)
+		names = append(names, f.Name)
 	}
 	return names, nil
 }
 
 // writeFile writes to a temporary file beside the target and renames it.
-func writeFile(dir string, f file) (err error) {
+func writeFile(dir string, f File) (err error) {
 	tmp, err := os.CreateTemp(dir, ".new-*")
 	if err != nil {
 		return err
@@ -192,7 +195,7 @@ func writeFile(dir string, f file) (err error) {
 			os.Remove(tmp.Name())
 		}
 	}()
-	if err = f.write(tmp); err != nil {
+	if err = f.Write(tmp); err != nil {
 		return err
 	}
 	if err = tmp.Chmod(0o666 &^ umask); err != nil {
@@ -201,7 +204,7 @@ func writeFile(dir string, f file) (err error) {
 	if err = tmp.Close(); err != nil {
 		return err
 	}
-	return os.Rename(tmp.Name(), filepath.Join(dir, f.name))
+	return os.Rename(tmp.Name(), filepath.Join(dir, f.Name))
 }
 
 // umask keeps group and others from writing: a temporary file is private, and
