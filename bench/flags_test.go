@@ -5,6 +5,5 @@ import "flag"
 var (
 	full    = flag.Bool("full", false, "compare at full length, with repetitions")
 	sizes   = flag.String("sizes", "", "numbers of inverters to compare at, with commas; empty: 10, or 10,100,1000,10000 with -full")
-	csvPath = flag.String("csv", "", "write the raw data of the comparison to this file")
 	plotDir = flag.String("plots", "", "draw the comparison into this folder")
 )

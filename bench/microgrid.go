@@ -5,7 +5,6 @@ import (
 	"fmt"
 	"math"
 	"math/rand/v2"
-	"slices"
 
 	"islet/devices"
 	"islet/engine"
@@ -109,33 +108,6 @@ func microgrid(inverters int, which formers) (*engine.System, error) {
 		return nil, err
 	}
 	return s, nil
-}
-
-// microgridSignals lists what a study of a microgrid records: at the buses of the
-// load steps and at others, ten in all if there are so many, the voltage, and
-// the power and current of an inverter.
-func microgridSignals(inverters int) []string {
-	n := (inverters + 3) / 4
-	var list []int
-	for k := 0; len(list) < min(10, n); k++ {
-		b := 7 * k % n
-		if k >= 4 {
-			b = (k*n/10 + 1) % n
-		}
-		for slices.Contains(list, b) {
-			b = (b + 1) % n
-		}
-		list = append(list, b)
-	}
-	var names []string
-	for _, b := range list {
-		kind := "former"
-		if b%10 >= 7 {
-			kind = "follower"
-		}
-		names = append(names, fmt.Sprintf("bus-%d.v", b), fmt.Sprintf("%s-%d.p", kind, b), fmt.Sprintf("%s-%d.i", kind, b))
-	}
-	return names
 }
 
 // microgridSteps schedules eight load steps, one every 1.8 s from 0.5 s on: a

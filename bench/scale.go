@@ -8,7 +8,6 @@ import (
 	"io"
 	"math"
 	"runtime"
-	"slices"
 	"strconv"
 	"time"
 
@@ -283,13 +282,4 @@ func WriteTargetsCSV(w io.Writer, setups []Setup, targets []Target) error {
 	}
 	c.Flush()
 	return c.Error()
-}
-
-// ladder lists tolerances from a to b, two a decade.
-func ladder(a, b float64) []float64 {
-	var l []float64
-	for e := math.Log10(a); e >= math.Log10(b)-1e-9; e -= 0.5 {
-		l = append(l, math.Pow(10, math.Round(2*e)/2))
-	}
-	return slices.Clip(l)
 }

@@ -4,7 +4,9 @@ package bench
 
 import (
 	"context"
+	"flag"
 	"fmt"
+	"math"
 	"os"
 	"os/exec"
 	"slices"
@@ -17,6 +19,9 @@ import (
 	"islet/engine"
 	"islet/solvers"
 )
+
+// csvPath is where raw data go.
+var csvPath = flag.String("csv", "", "write the raw data of the comparison to this file")
 
 // TestScale compares, at each size, this engine's default with IDA and KLU on
 // the same residual and Jacobian, at equal error, in turn; at up to 100
@@ -123,6 +128,42 @@ func TestScale(t *testing.T) {
 			t.Fatal(err)
 		}
 	}
+}
+
+// microgridSignals lists what a study of a microgrid records: at the buses of the
+// load steps and at others, ten in all if there are so many, the voltage, and
+// the power and current of an inverter.
+func microgridSignals(inverters int) []string {
+	n := (inverters + 3) / 4
+	var list []int
+	for k := 0; len(list) < min(10, n); k++ {
+		b := 7 * k % n
+		if k >= 4 {
+			b = (k*n/10 + 1) % n
+		}
+		for slices.Contains(list, b) {
+			b = (b + 1) % n
+		}
+		list = append(list, b)
+	}
+	var names []string
+	for _, b := range list {
+		kind := "former"
+		if b%10 >= 7 {
+			kind = "follower"
+		}
+		names = append(names, fmt.Sprintf("bus-%d.v", b), fmt.Sprintf("%s-%d.p", kind, b), fmt.Sprintf("%s-%d.i", kind, b))
+	}
+	return names
+}
+
+// ladder lists tolerances from a to b, two a decade.
+func ladder(a, b float64) []float64 {
+	var l []float64
+	for e := math.Log10(a); e >= math.Log10(b)-1e-9; e -= 0.5 {
+		l = append(l, math.Pow(10, math.Round(2*e)/2))
+	}
+	return slices.Clip(l)
 }
 
 // trapezoid runs the fixed-step trapezoidal rule at 20 us, tells its error and
