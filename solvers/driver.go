@@ -1,10 +1,11 @@
 package solvers
 
 import (
+	"cmp"
 	"context"
 	"fmt"
 	"math"
-	"sort"
+	"slices"
 )
 
 // Direction is the way a root function crosses zero.
@@ -178,7 +179,7 @@ func (d *Driver) Advance(tmax float64) ([]Hit, error) {
 	t0, t1 := d.st.Previous(), d.st.Time()
 	d.search(t0, t1, t1 == tmax)
 	// The earliest crossing that counts, and those that can't be told from it.
-	sort.SliceStable(d.found, func(i, j int) bool { return d.found[i].t < d.found[j].t })
+	slices.SortStableFunc(d.found, func(a, b crossing) int { return cmp.Compare(a.t, b.t) })
 	together := math.Max(16*ulp(t1), 1e-11*(t1-t0))
 	d.hits = d.hits[:0]
 	var first crossing
