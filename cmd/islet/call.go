@@ -52,6 +52,7 @@ type call struct {
 
 	shrink shrinkOptions
 	modes  modesOptions
+	screen screenOptions
 }
 
 // list is a flag that may be given several times.

@@ -41,6 +41,7 @@ func commands() []command {
 		{"steady", "CASE", "find the operating point and print it", "islet steady harbour --csv > point.csv", cmdSteady, steadyFlags},
 		{"compare", "CASE", "run a case at several settings of detail and compare", "islet compare harbour --setting 'reduced: solar-*=primary only, *=full'", cmdCompare, compareFlags},
 		{"modes", "CASE", "find the modes of the linearised system: damping, who takes part, critical gains", "islet modes short-lines --vary device.inverter-1.m,device.inverter-2.m,device.inverter-3.m=5e-5:3e-4", cmdModes, modesFlags},
+		{"screen", "CASE", "tell whether the sources can run in step, at which frequency and sharing, with which margin", "islet screen starter --confirm 'primary only'", cmdScreen, screenFlags},
 		{"shrink", "CASE", "take out buses without injection, and write the case without them", "islet shrink cigre-lv --keep R1,R2,R15 --out small.toml", cmdShrink, shrinkFlags},
 		{"cases", "[NAME]", "list the shipped cases, or print one to copy", "islet cases starter > my-site.toml", cmdCases, nil},
 		{"keys", "[KIND]", "list the keys of a case file, or of one kind of device", "islet keys 'grid forming inverter'", cmdKeys, nil},

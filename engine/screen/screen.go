@@ -35,11 +35,13 @@ type Result struct {
 	// (sum D w* + sum P*) / sum D over all nodes.
 	Speed   float64
 	Sources []Source
-	// Tracked tells that every source gives its P*; NotTracked says why not.
+	// Tracked tells that every source gives its P*, one that holds its speed left
+	// out; NotTracked says why not.
 	Tracked    bool
 	NotTracked string
 	// Proportional tells that sources share what moves in proportion to rating:
-	// D over rating is one value. It needs all ratings.
+	// D over rating is one value, one that holds its speed left out. It needs all
+	// ratings.
 	Proportional bool
 
 	Tree bool // the network has no loop
@@ -197,6 +199,12 @@ func (r *Result) balance(n *Network) ([]float64, error) {
 			continue
 		}
 		s := Source{Node: *v, Given: p[i]}
+		if i == stiff {
+			// It has no reference to track, and no share.
+			s.Tracked = true
+			r.Sources = append(r.Sources, s)
+			continue
+		}
 		size := v.Rating
 		if size == 0 {
 			size = math.Max(largest, math.Abs(v.P))
@@ -208,7 +216,7 @@ func (r *Result) balance(n *Network) ([]float64, error) {
 			first = v
 		}
 		unequal = unequal || math.Abs(v.Speed-first.Speed) > 1e-9*math.Abs(first.Speed)
-		if v.Rating == 0 || math.IsInf(v.D, 1) {
+		if v.Rating == 0 {
 			r.Proportional = false
 			continue
 		}
@@ -226,7 +234,7 @@ func (r *Result) balance(n *Network) ([]float64, error) {
 		case unequal:
 			r.NotTracked = "the sources' nominal speeds differ"
 		case stiff >= 0:
-			r.NotTracked = fmt.Sprintf("%s holds another speed, or takes up the balance", n.Nodes[stiff].Name)
+			r.NotTracked = fmt.Sprintf("%s holds another speed than their nominal one", n.Nodes[stiff].Name)
 		case balance < 0:
 			r.NotTracked = fmt.Sprintf("the set powers fall short of what is drawn by %.6g W", -balance)
 		default:

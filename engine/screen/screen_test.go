@@ -117,6 +117,9 @@ func TestTwo(t *testing.T) {
 	near(t, "speed", r.Speed, 2, 0)
 	near(t, "power of a", r.Sources[0].Given, 2, 1e-14)
 	near(t, "power of b", r.Sources[1].Given, -2, 1e-14)
+	if r.Tracked || !strings.Contains(r.NotTracked, "b holds another speed") {
+		t.Errorf("%+v", r)
+	}
 }
 
 // A ring of equal oscillators with nothing to carry: no angle, and no end.
