@@ -17,12 +17,13 @@ import (
 	"islet/solvers"
 )
 
-// Until before or after events; not beyond the harbour's islanding, where the step
-// control decides by the last digits and the numbers of steps part.
+// The harbour's stiff contacts leave its step control to the last digits once it has
+// become an island: numbers of steps part by one or two, and waveforms with them.
 var perUnitCases = []struct {
-	name  string
-	until float64
-}{{"starter", 0.6}, {"harbour", 0.55}, {"droop3", 0.2}, {"cigre-lv", 0.3}, {"mesh-10", 1}}
+	name   string
+	until  float64
+	within float64 // of range
+}{{"starter", 0.6, 1e-9}, {"harbour", 0.75, 3e-6}, {"droop3", 0.2, 1e-9}, {"cigre-lv", 0.7, 1e-7}, {"mesh-10", 1, 1e-9}}
 
 // Every shipped case integrated per unit, by bases that are anything but round, and
 // in SI: the same steps, and the same waveforms to rounding. With powers of two for
@@ -47,12 +48,12 @@ func TestPerUnitTrajectories(t *testing.T) {
 		si, a := run(solvers.Rodas5P)
 		rng := rand.New(rand.NewPCG(5, 7))
 		pu, b := run(perunit.Method{Of: solvers.Rodas5P, Base: func(_ int, scale float64) float64 { return scale * math.Exp(3*rng.NormFloat64()) }})
-		if a.Steps != b.Steps || a.Evals != b.Evals {
+		if d := a.Steps - b.Steps; d*d > 4 || c.name != "harbour" && (d != 0 || a.Evals != b.Evals) {
 			t.Errorf("%s: %d steps in SI, %d per unit", c.name, a.Steps, b.Steps)
 		}
 		d := Compare(pu, si, 5e-3, flatChannel)
 		t.Logf("%s: %d steps; per unit deviates by %.2g of range at most (%s)", c.name, a.Steps, d.Largest, d.Channel)
-		if d.Largest > 1e-7 || d.Channels < 5 {
+		if d.Largest > c.within || d.Channels < 5 {
 			t.Errorf("%s: per unit deviates by %.2g of range (%s), %d channels", c.name, d.Largest, d.Channel, d.Channels)
 		}
 		// Time in radians: first steps after events are chosen a little

@@ -1,0 +1,222 @@
+package cases
+
+import (
+	"math"
+
+	"islet/devices"
+	"islet/engine/perunit"
+)
+
+// Signal is a quantity that parameters and gains connect.
+type Signal struct {
+	Name string
+	Of   perunit.Dimension
+}
+
+// Signals of devices. Those of controllers have bases of their own, which are free.
+var (
+	sigVoltage = Signal{"voltage", perunit.Volt}
+	sigCurrent = Signal{"current", perunit.Ampere}
+	sigPower   = Signal{"power", perunit.Watt}
+	sigSpeed   = Signal{"speed", perunit.Speed}
+	sigVRef    = Signal{"v_ref", perunit.Volt}   // order of the primary control to the voltage loop
+	sigVErr    = Signal{"v_err", perunit.Volt}   // its control error
+	sigIRef    = Signal{"i_ref", perunit.Ampere} // its order to the current loop
+	sigIErr    = Signal{"i_err", perunit.Ampere} // that one's control error
+	sigVOrder  = Signal{"v_i", perunit.Volt}     // its order to the bridge
+	sigPLL     = Signal{"v_q", perunit.Volt}     // what the PLL steers to zero
+	sigOne     = Signal{"", perunit.One}
+)
+
+// ControlSignals names the signals whose bases are free.
+func ControlSignals() []string {
+	return []string{sigVRef.Name, sigVErr.Name, sigIRef.Name, sigIErr.Name, sigVOrder.Name, sigPLL.Name}
+}
+
+// Gain is a parameter of a device as what turns one signal into another.
+type Gain struct {
+	Key     string // of the case file; "" if it has none
+	Symbol  string
+	Meaning string
+	Value   float64 // SI
+	From    Signal
+	To      Signal
+	// Integrations is how often the signal is integrated on the way; negative for
+	// derivatives.
+	Integrations int
+}
+
+// Dimension is derived from the signals.
+func (g Gain) Dimension() perunit.Dimension {
+	return perunit.Gain(g.To.Of, g.From.Of, g.Integrations)
+}
+
+// Base is the SI value of 1 per unit: that of the signal it leads to over that of the
+// signal it comes from, and over the base of time for every integration. free holds
+// base values of signals that don't follow from b, by name.
+func (g Gain) Base(b perunit.Bases, free map[string]float64) float64 {
+	of := func(s Signal) float64 {
+		if x, ok := free[s.Name]; ok {
+			return x
+		}
+		return b.Of(s.Of)
+	}
+	return of(g.To) / of(g.From) / math.Pow(b.Time, float64(g.Integrations))
+}
+
+// PerUnitDevice is a device with its parameters as gains.
+type PerUnitDevice struct {
+	Name, Kind string
+	// Rating (VA) and Volts (V peak phase) are its own base values; 0 if it has
+	// none of its own.
+	Rating, Volts float64
+	Gains         []Gain
+}
+
+// Gains lists a case's devices with every parameter and gain in SI. Devices that the
+// list has no description of (a user's own) are left out.
+func (c *Case) Gains() ([]PerUnitDevice, error) {
+	var out []PerUnitDevice
+	for i := range c.devices {
+		spec := &c.devices[i]
+		dev, err := spec.build()
+		if err != nil {
+			return nil, err
+		}
+		volts := devices.PeakVolts(c.buses[spec.at[0]].volts)
+		p := PerUnitDevice{Name: spec.name, Kind: spec.kind.name, Volts: volts}
+		switch d := dev.(type) {
+		case *devices.GridForming:
+			q := d.Params()
+			p.Rating, p.Volts, p.Gains = q.Rating, q.V0, formingGains(q)
+		case *devices.GridFollowing:
+			q := d.Params()
+			p.Rating, p.Volts, p.Gains = q.Rating, q.V0, followingGains(q)
+		case *devices.Line:
+			q := d.Params()
+			p.Rating = 1.5 * volts * devices.PeakAmperes(q.RatedCurrent)
+			p.Gains = []Gain{
+				{"R_ohm", "R", "series resistance", q.R, sigCurrent, sigVoltage, 0},
+				{"L_H", "L", "series inductance", q.L, sigCurrent, sigVoltage, -1},
+				{"C_F", "C", "shunt capacitance", q.C, sigVoltage, sigCurrent, -1},
+			}
+		case *devices.Transformer:
+			q := d.Params()
+			// Referred to the low-voltage side, whose base is that bus's.
+			p.Rating, p.Volts = q.VA, devices.PeakVolts(q.LV)
+			high, low := c.buses[spec.at[0]].volts, c.buses[spec.at[1]].volts
+			p.Gains = []Gain{
+				{"R_ohm", "R", "series resistance, low-voltage side", q.R, sigCurrent, sigVoltage, 0},
+				{"L_H", "L", "series inductance, low-voltage side", q.L, sigCurrent, sigVoltage, -1},
+				{"", "ratio", "turns ratio over that of the buses' rated voltages: 1 with matching bases", q.HV / q.LV / (high / low), sigOne, sigOne, 0},
+			}
+		case *devices.Grid:
+			q := d.Params()
+			p.Rating, p.Volts = q.VA, devices.PeakVolts(q.Voltage)
+			p.Gains = []Gain{
+				{"R_ohm", "R", "resistance", q.R, sigCurrent, sigVoltage, 0},
+				{"L_H", "L", "inductance", q.L, sigCurrent, sigVoltage, -1},
+				{"", "E", "inner voltage", devices.PeakVolts(q.Voltage), sigOne, sigVoltage, 0},
+			}
+		case *devices.Load:
+			q := d.Params()
+			p.Gains = []Gain{
+				{"R_ohm", "R", "resistor", q.R, sigCurrent, sigVoltage, 0},
+				{"L_H", "L", "inductor", q.L, sigCurrent, sigVoltage, -1},
+				{"RL_ohm", "R_L", "its series resistance", q.RL, sigCurrent, sigVoltage, 0},
+				{"C_F", "C", "capacitor", q.C, sigVoltage, sigCurrent, -1},
+			}
+		case *devices.SeriesLoad:
+			q := d.Params()
+			p.Gains = []Gain{
+				{"R_ohm", "R", "resistance", q.R, sigCurrent, sigVoltage, 0},
+				{"L_H", "L", "inductance", q.L, sigCurrent, sigVoltage, -1},
+			}
+		default:
+			continue
+		}
+		out = append(out, p)
+	}
+	return out, nil
+}
+
+// filterGains lists a filter.
+func filterGains(f devices.LCL) []Gain {
+	out := []Gain{
+		{"Lf_H", "L_f", "converter-side inductance", f.Lf, sigCurrent, sigVoltage, -1},
+		{"Rf_ohm", "R_f", "its resistance", f.Rf, sigCurrent, sigVoltage, 0},
+	}
+	if f.Cf > 0 {
+		out = append(out,
+			Gain{"Cf_F", "C_f", "filter capacitance", f.Cf, sigVoltage, sigCurrent, -1},
+			Gain{"Lg_H", "L_g", "grid-side inductance", f.Lg, sigCurrent, sigVoltage, -1},
+			Gain{"Rg_ohm", "R_g", "its resistance", f.Rg, sigCurrent, sigVoltage, 0})
+	}
+	return out
+}
+
+func formingGains(q devices.GridFormingParams) []Gain {
+	out := []Gain{
+		{"", "S_r", "rating", q.Rating, sigOne, sigPower, 0},
+		{"", "P*", "set active power", q.P, sigOne, sigPower, 0},
+		{"", "Q*", "set reactive power", q.Q, sigOne, sigPower, 0},
+		{"V_0", "V_0", "voltage at no load", q.V0, sigOne, sigVRef, 0},
+		{"w_0", "w_0", "speed at no load", q.Omega0, sigOne, sigSpeed, 0},
+	}
+	switch c := q.Primary.(type) {
+	case devices.Droop:
+		out = append(out,
+			Gain{"m", "m", "frequency droop", c.M, sigPower, sigSpeed, 0},
+			Gain{"n", "n", "voltage droop", c.N, sigPower, sigVRef, 0},
+			Gain{"w_c", "w_c", "corner of the power filter", c.OmegaC, sigPower, sigPower, 1})
+	case devices.VirtualMachine:
+		out = append(out,
+			Gain{"H", "H", "inertia constant", c.H, sigPower, sigPower, -1},
+			Gain{"D", "D", "damping", c.D, sigSpeed, sigPower, 0},
+			Gain{"n", "n", "voltage droop", c.N, sigPower, sigVRef, 0},
+			Gain{"T_v", "T_v", "time constant of the voltage", c.Tv, sigVRef, sigVRef, -1})
+		if !math.IsInf(c.OmegaC, 1) {
+			out = append(out, Gain{"w_c", "w_c", "corner of the power filter", c.OmegaC, sigPower, sigPower, 1})
+		}
+	case devices.Oscillator:
+		out = append(out,
+			Gain{"eta", "eta", "speed of synchronisation", c.Eta, sigCurrent, sigVRef, 1},
+			Gain{"alpha", "alpha", "stiffness of the voltage", c.Alpha, sigVRef, sigCurrent, 0})
+	}
+	out = append(out,
+		Gain{"Rv_ohm", "R_v", "virtual resistance", q.Rv, sigCurrent, sigVRef, 0},
+		Gain{"Xv_ohm", "X_v", "virtual reactance", q.Xv, sigCurrent, sigVRef, 0},
+		Gain{"Kpv", "K_pv", "voltage loop, proportional", q.Kpv, sigVErr, sigIRef, 0},
+		Gain{"Kiv", "K_iv", "voltage loop, integral", q.Kiv, sigVErr, sigIRef, 1},
+		Gain{"F", "F", "feed-forward of the grid-side current", q.F, sigCurrent, sigIRef, 0},
+		Gain{"Kaw", "K_aw", "anti-windup", q.Kaw, sigIRef, sigVErr, 0},
+		Gain{"Kpc", "K_pc", "current loop, proportional", q.Kpc, sigIErr, sigVOrder, 0},
+		Gain{"Kic", "K_ic", "current loop, integral", q.Kic, sigIErr, sigVOrder, 1},
+		Gain{"I_max_A", "I_max", "largest current reference", q.IMax, sigOne, sigIRef, 0},
+	)
+	return append(out, filterGains(q.Filter)...)
+}
+
+func followingGains(q devices.GridFollowingParams) []Gain {
+	out := []Gain{
+		{"", "S_r", "rating", q.Rating, sigOne, sigPower, 0},
+		{"", "P*", "set active power", q.P, sigOne, sigPower, 0},
+		{"", "Q*", "set reactive power", q.Q, sigOne, sigPower, 0},
+		{"V_0", "V_n", "rated voltage", q.V0, sigOne, sigVoltage, 0},
+		{"w_0", "w_0", "nominal speed", q.Omega0, sigOne, sigSpeed, 0},
+		{"", "K_p/V_n", "PLL, proportional, on v_q in volts", q.Kp / q.V0, sigPLL, sigSpeed, 0},
+		{"", "K_i/V_n", "PLL, integral, on v_q in volts", q.Ki / q.V0, sigPLL, sigSpeed, 1},
+		{"Kp", "K_p", "PLL, proportional, on v_q over the amplitude", q.Kp, sigOne, sigSpeed, 0},
+		{"Ki", "K_i", "PLL, integral, on v_q over the amplitude", q.Ki, sigOne, sigSpeed, 1},
+		{"w_v", "w_v", "corner of the filter of v_d", q.OmegaV, sigVoltage, sigVoltage, 1},
+		{"v_floor", "v_floor", "least voltage in a denominator", q.VFloor, sigOne, sigVoltage, 0},
+		{"Kpc", "K_pc", "current loop, proportional", q.Kpc, sigIErr, sigVOrder, 0},
+		{"Kic", "K_ic", "current loop, integral", q.Kic, sigIErr, sigVOrder, 1},
+		{"Kff", "K_ff", "feed-forward of the voltage", q.Kff, sigVoltage, sigVOrder, 0},
+		{"I_max_A", "I_max", "largest current reference", q.IMax, sigOne, sigIRef, 0},
+	}
+	if !math.IsInf(q.SpeedLimit, 1) {
+		out = append(out, Gain{"w_limit", "w_limit", "largest deviation of speed", q.SpeedLimit, sigOne, sigSpeed, 0})
+	}
+	return append(out, filterGains(q.Filter)...)
+}
