@@ -88,7 +88,7 @@ func (c *Case) Gains() ([]PerUnitDevice, error) {
 		switch d := dev.(type) {
 		case *devices.GridForming:
 			q := d.Params()
-			p.Rating, p.Volts, p.Gains = q.Rating, q.V0, formingGains(q)
+			p.Rating, p.Gains = q.Rating, formingGains(q)
 		case *devices.GridFollowing:
 			q := d.Params()
 			p.Rating, p.Volts, p.Gains = q.Rating, q.V0, followingGains(q)

@@ -50,9 +50,10 @@ type call struct {
 	windows  string
 	noModes  bool
 
-	shrink shrinkOptions
-	modes  modesOptions
-	screen screenOptions
+	shrink  shrinkOptions
+	modes   modesOptions
+	screen  screenOptions
+	perunit perunitOptions
 }
 
 // list is a flag that may be given several times.

@@ -42,6 +42,7 @@ func commands() []command {
 		{"compare", "CASE", "run a case at several settings of detail and compare", "islet compare harbour --setting 'reduced: solar-*=primary only, *=full'", cmdCompare, compareFlags},
 		{"modes", "CASE", "find the modes of the linearised system: damping, who takes part, critical gains", "islet modes short-lines --vary device.inverter-1.m,device.inverter-2.m,device.inverter-3.m=5e-5:3e-4", cmdModes, modesFlags},
 		{"screen", "CASE", "tell whether the sources can run in step, at which frequency and sharing, with which margin", "islet screen starter --confirm 'primary only'", cmdScreen, screenFlags},
+		{"perunit", "CASE", "print every parameter and gain in SI and per unit, or take per-unit values into SI", "islet perunit harbour --device battery-quay --time radian", cmdPerunit, perunitFlags},
 		{"shrink", "CASE", "take out buses without injection, and write the case without them", "islet shrink cigre-lv --keep R1,R2,R15 --out small.toml", cmdShrink, shrinkFlags},
 		{"cases", "[NAME]", "list the shipped cases, or print one to copy", "islet cases starter > my-site.toml", cmdCases, nil},
 		{"keys", "[KIND]", "list the keys of a case file, or of one kind of device", "islet keys 'grid forming inverter'", cmdKeys, nil},
