@@ -254,6 +254,7 @@ func (m *Simulation) busQuantity(b, quantity int, t float64, y []float64) float6
 
 // recorder fills a trace.
 type recorder struct {
+	byName map[string]probe // every channel, made when one is first asked for
 	m      *Simulation
 	trace  *Trace
 	rows   []probe   // what is recorded, in order of columns
@@ -334,13 +335,17 @@ func newRecorder(m *Simulation, patterns []string) (*recorder, error) {
 
 // probe finds a channel by name.
 func (r *recorder) probe(name string) (probe, error) {
-	all := r.m.probes()
-	for _, p := range all {
-		if p.info.Name == name {
-			return p, nil
+	if r.byName == nil {
+		all := r.m.probes()
+		r.byName = make(map[string]probe, len(all))
+		for _, p := range all {
+			r.byName[p.info.Name] = p
 		}
 	}
-	return probe{}, fmt.Errorf("engine: no channel %q%s", name, near(name, all))
+	if p, ok := r.byName[name]; ok {
+		return p, nil
+	}
+	return probe{}, fmt.Errorf("engine: no channel %q%s", name, near(name, r.m.probes()))
 }
 
 // near suggests channels with the same owner, or owners.

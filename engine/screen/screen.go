@@ -110,10 +110,11 @@ func Screen(n *Network, o *Options) (*Result, error) {
 	if r.Loading < 1e-12 {
 		r.InStep, r.Margin90, r.MarginLost = true, math.Inf(1), math.Inf(1)
 	} else {
-		r.margins(w, p, precision)
+		s := w.strip(p)
+		r.margins(s, precision)
 		r.InStep = r.Margin90 > 1
 		if r.InStep {
-			if theta, err = w.reach(p, 1); err != nil {
+			if theta, err = s.reach(); err != nil {
 				return nil, err
 			}
 		}
@@ -245,18 +246,29 @@ func (r *Result) balance(n *Network) ([]float64, error) {
 }
 
 // margins finds the factors on p at which some edge has 90 degrees, and at which
-// no stable state is left, by continuation from zero.
-func (r *Result) margins(w *wheel, p []float64, precision float64) {
-	if r.Tree {
-		r.Margin90 = 1 / r.Loading
-		r.MarginLost = r.Margin90
+// no stable state is left: of branches without a loop exactly, of what has loops by
+// continuation from zero.
+func (r *Result) margins(s *stripped, precision float64) {
+	r.Margin90, r.MarginLost = s.limit, s.limit
+	w, p := s.core, s.p
+	if w.n < 2 {
 		return
 	}
-	// The norm is no bound in general; go on until the state is lost.
+	loading := 0.0
+	if flows, err := w.linear(p); err == nil {
+		for k, e := range w.edges {
+			loading = math.Max(loading, math.Abs(flows[k])/e.A)
+		}
+	}
+	if loading < 1e-12 {
+		return
+	}
+	// The norm is no bound in general; go on until the state is lost, or beyond
+	// what the rest stands.
 	good, theta := 0.0, make([]float64, w.n)
-	step := 0.25 / r.Loading
+	step := 0.25 / loading
 	wide := math.Inf(1)
-	for step > precision*math.Max(good, 1e-3/r.Loading) {
+	for step > precision*math.Max(good, 1e-3/loading) && good < s.limit {
 		next, ok := w.newton(p, good+step, theta)
 		if !ok {
 			step /= 2
@@ -278,8 +290,107 @@ func (r *Result) margins(w *wheel, p []float64, precision float64) {
 		}
 		good, theta = good+step, next
 	}
-	r.MarginLost = good
-	r.Margin90 = math.Min(wide, good)
+	r.MarginLost = math.Min(s.limit, good)
+	r.Margin90 = math.Min(wide, r.MarginLost)
+}
+
+// stripped is a network whose branches without a loop are taken off, end by end: what
+// they carry is known.
+type stripped struct {
+	full  *wheel
+	core  *wheel // what has loops, or a single node
+	p     []float64
+	node  []int // of the core's nodes
+	off   []cut // in the order in which they were taken off
+	limit float64
+}
+
+// cut is a node taken off with its edge.
+type cut struct {
+	node, to int
+	sine     float64 // of theta_node - theta_to
+}
+
+func (w *wheel) strip(p []float64) *stripped {
+	s := &stripped{full: w, limit: math.Inf(1)}
+	degree := make([]int, w.n)
+	touching := make([][]int, w.n)
+	for k, e := range w.edges {
+		for _, v := range []int{e.From, e.To} {
+			degree[v]++
+			touching[v] = append(touching[v], k)
+		}
+	}
+	carried := append([]float64(nil), p...)
+	gone, used := make([]bool, w.n), make([]bool, len(w.edges))
+	var ends []int
+	for v, d := range degree {
+		if d == 1 {
+			ends = append(ends, v)
+		}
+	}
+	for len(ends) > 0 {
+		v := ends[len(ends)-1]
+		ends = ends[:len(ends)-1]
+		if gone[v] || degree[v] != 1 {
+			continue // the last node of a tree
+		}
+		for _, k := range touching[v] {
+			if used[k] {
+				continue
+			}
+			e := w.edges[k]
+			to := e.From + e.To - v
+			used[k], gone[v] = true, true
+			degree[v]--
+			degree[to]--
+			carried[to] += carried[v]
+			s.limit = math.Min(s.limit, e.A/math.Abs(carried[v]))
+			s.off = append(s.off, cut{v, to, carried[v] / e.A})
+			if degree[to] == 1 {
+				ends = append(ends, to)
+			}
+		}
+	}
+	at := make([]int, w.n)
+	for v := range w.n {
+		if !gone[v] {
+			at[v] = len(s.node)
+			s.node = append(s.node, v)
+			s.p = append(s.p, carried[v])
+		}
+	}
+	s.core = &wheel{n: len(s.node)}
+	for k, e := range w.edges {
+		if !used[k] {
+			e.From, e.To = at[e.From], at[e.To]
+			s.core.edges = append(s.core.edges, e)
+		}
+	}
+	return s
+}
+
+// reach returns the state in step at the present transfers.
+func (s *stripped) reach() ([]float64, error) {
+	theta := make([]float64, s.full.n)
+	if s.core.n > 1 {
+		core, err := s.core.reach(s.p, 1)
+		if err != nil {
+			return nil, err
+		}
+		for i, v := range s.node {
+			theta[v] = core[i]
+		}
+	}
+	for i := len(s.off) - 1; i >= 0; i-- {
+		c := s.off[i]
+		theta[c.node] = theta[c.to] + math.Asin(c.sine)
+	}
+	first := theta[0]
+	for i := range theta {
+		theta[i] -= first
+	}
+	return theta, nil
 }
 
 // wheel is a network's equations p = B A sin(B' theta).

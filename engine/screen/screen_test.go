@@ -2,6 +2,7 @@ package screen
 
 import (
 	"math"
+	"math/rand/v2"
 	"strings"
 	"testing"
 )
@@ -178,5 +179,52 @@ func TestFaults(t *testing.T) {
 	}
 	if _, err := Screen(two(func(*Network) {}), &Options{Precision: -1}); err == nil {
 		t.Error("a precision of -1 is taken")
+	}
+}
+
+// Sources hang on a meshed network by branches of their own: what those carry is
+// known, and the weakest of them bounds the margin exactly.
+func TestLeaves(t *testing.T) {
+	rng := rand.New(rand.NewPCG(2, 3))
+	n := &Network{}
+	const ring = 8
+	for i := range ring {
+		n.Nodes = append(n.Nodes, Node{Name: "bus", P: -1 - rng.Float64()})
+		n.Edges = append(n.Edges, Edge{Name: "ring", From: i, To: (i + 1) % ring, A: 20 + 10*rng.Float64()})
+	}
+	n.Edges = append(n.Edges, Edge{Name: "chord", From: 0, To: 4, A: 15})
+	for i := range ring {
+		n.Nodes = append(n.Nodes, Node{Name: "source", D: 1 + rng.Float64(), P: 3 * rng.Float64()})
+		n.Edges = append(n.Edges, Edge{Name: "coupling", From: ring + i, To: i, A: 12})
+	}
+	r, err := Screen(n, nil)
+	if err != nil {
+		t.Fatal(err)
+	}
+	// Every node's balance holds in the state found.
+	sum := make([]float64, len(n.Nodes))
+	for _, f := range r.Flows {
+		near(t, "flow", f.P, f.A*math.Sin(f.Angle), 1e-12)
+		sum[f.From] += f.P
+		sum[f.To] -= f.P
+	}
+	weakest := math.Inf(1)
+	for i := range ring {
+		near(t, "balance at a bus", sum[i], n.Nodes[i].P, 1e-9)
+		near(t, "balance at a source", sum[ring+i], r.Sources[i].Given, 1e-9)
+		weakest = math.Min(weakest, 12/math.Abs(r.Sources[i].Given))
+	}
+	if r.Tree || !r.InStep {
+		t.Errorf("%+v", r)
+	}
+	near(t, "margin of the weakest coupling", r.MarginLost, weakest, 1e-9*weakest)
+	// With strong couplings the ring decides.
+	for i := range n.Edges {
+		if n.Edges[i].Name == "coupling" {
+			n.Edges[i].A = 1e4
+		}
+	}
+	if r, err = Screen(n, nil); err != nil || !(r.MarginLost > weakest) || math.IsInf(r.MarginLost, 0) || r.Margin90 > r.MarginLost {
+		t.Errorf("%+v, %v", r, err)
 	}
 }
