@@ -3,10 +3,12 @@
 # (once, into the cache), runs the comparison at 10 to 10,000 inverters and
 # leaves raw data and plots. Takes about half an hour.
 #
-#     bench/scale.sh [DIR [SIZES]]      results go to DIR (default: scale-results)
+#     bench/scale.sh [DIR [SIZES]]      results go to DIR (default: out/scale)
+#
+# SIZES are numbers of inverters with commas between them.
 set -eu
 cd "$(dirname "$0")/.."
-out=${1:-scale-results}
+out=${1:-out/scale}
 mkdir -p "$out"
 out=$(cd "$out" && pwd)
 lib=${XDG_CACHE_HOME:-$HOME/.cache}/islet/sundials-O3

@@ -11,9 +11,9 @@
 //
 // Written against SUNDIALS 6.4.1. Debian's build of it carries no compiler
 // optimisation (the machine code of its vector kernels keeps every local
-// variable on the stack), its KLU does; a build of one's own is put before it
-// with CGO_CFLAGS=-I..., CGO_LDFLAGS=-L... and LD_LIBRARY_PATH. KernelTime tells
-// them apart.
+// variable on the stack), its KLU does. build-optimised.sh builds Debian's source
+// package with -O3, which LD_LIBRARY_PATH puts before it, as the soname is the
+// same; KernelTime tells them apart.
 //
 // # The equations IDA sees
 //
