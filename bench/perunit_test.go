@@ -6,6 +6,7 @@ import (
 	"math"
 	"math/cmplx"
 	"math/rand/v2"
+	"strings"
 	"testing"
 
 	"gonum.org/v1/gonum/mat"
@@ -240,4 +241,49 @@ func transfer(t *testing.T, s *modes.StateSpace, at complex128) [][]complex128 {
 		}
 	}
 	return out
+}
+
+// In radians of the frame's speed an inductance is its reactance (see
+// perunit.TestHandbook), and with derivatives zero what is left of the equations is
+// the algebraic phasor model: the operating point of full networks is that of their
+// quasi-steady forms, which hold phasor admittances alone.
+func TestSynchronousSteadyStateIsPhasors(t *testing.T) {
+	for _, name := range []string{"starter", "harbour", "droop3", "cigre-lv", "mesh-20"} {
+		values := func(rules ...cases.DetailRule) map[string]float64 {
+			k, err := cases.Open(name)
+			if err != nil {
+				t.Fatal(err)
+			}
+			sim, err := k.Start(&engine.Options{Record: []string{"*.v", "*.p", "*.q"}}, rules...)
+			if err != nil {
+				t.Fatal(err)
+			}
+			out := make(map[string]float64)
+			tr := sim.Trace()
+			for i, ch := range tr.Channels {
+				out[ch.Name] = tr.Values(i)[0]
+			}
+			return out
+		}
+		full, phasors := values(), values(cases.DetailRule{Pattern: "*", Level: "quasi-steady"})
+		size := make(map[string]float64) // of channels of one name
+		kind := func(name string) string { return name[strings.LastIndexByte(name, '.'):] }
+		for ch, x := range full {
+			size[kind(ch)] = math.Max(size[kind(ch)], math.Abs(x))
+		}
+		both := 0
+		for ch, x := range full {
+			y, ok := phasors[ch]
+			if !ok {
+				continue // a current that is a state in the full form alone
+			}
+			both++
+			if math.Abs(x-y) > 1e-8*size[kind(ch)] {
+				t.Errorf("%s: %s is %.12g, by phasors %.12g", name, ch, x, y)
+			}
+		}
+		if both < 10 {
+			t.Errorf("%s: %d channels in both", name, both)
+		}
+	}
 }
