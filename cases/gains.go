@@ -1,7 +1,9 @@
 package cases
 
 import (
+	"fmt"
 	"math"
+	"math/cmplx"
 
 	"islet/devices"
 	"islet/engine/perunit"
@@ -18,7 +20,9 @@ var (
 	sigVoltage = Signal{"voltage", perunit.Volt}
 	sigCurrent = Signal{"current", perunit.Ampere}
 	sigPower   = Signal{"power", perunit.Watt}
-	sigSpeed   = Signal{"speed", perunit.Speed}
+	sigOhm     = Signal{"impedance", perunit.Volt.Over(perunit.Ampere)}
+	sigAngle   = Signal{"angle", perunit.Radian}
+	sigSpeed   = Signal{"w", perunit.Speed}      // speed that a primary control or PLL orders
 	sigVRef    = Signal{"v_ref", perunit.Volt}   // order of the primary control to the voltage loop
 	sigVErr    = Signal{"v_err", perunit.Volt}   // its control error
 	sigIRef    = Signal{"i_ref", perunit.Ampere} // its order to the current loop
@@ -30,7 +34,22 @@ var (
 
 // ControlSignals names the signals whose bases are free.
 func ControlSignals() []string {
-	return []string{sigVRef.Name, sigVErr.Name, sigIRef.Name, sigIErr.Name, sigVOrder.Name, sigPLL.Name}
+	var out []string
+	for _, s := range controlSignals {
+		out = append(out, s.Name)
+	}
+	return out
+}
+
+var controlSignals = []Signal{sigSpeed, sigVRef, sigVErr, sigIRef, sigIErr, sigVOrder, sigPLL}
+
+// Base is the SI value of 1 per unit of the signal: the one in free, or that of its
+// dimension.
+func (s Signal) Base(b perunit.Bases, free map[string]float64) float64 {
+	if x, ok := free[s.Name]; ok {
+		return x
+	}
+	return b.Of(s.Of)
 }
 
 // Gain is a parameter of a device as what turns one signal into another.
@@ -55,13 +74,7 @@ func (g Gain) Dimension() perunit.Dimension {
 // signal it comes from, and over the base of time for every integration. free holds
 // base values of signals that don't follow from b, by name.
 func (g Gain) Base(b perunit.Bases, free map[string]float64) float64 {
-	of := func(s Signal) float64 {
-		if x, ok := free[s.Name]; ok {
-			return x
-		}
-		return b.Of(s.Of)
-	}
-	return of(g.To) / of(g.From) / math.Pow(b.Time, float64(g.Integrations))
+	return g.To.Base(b, free) / g.From.Base(b, free) / math.Pow(b.Time, float64(g.Integrations))
 }
 
 // PerUnitDevice is a device with its parameters as gains.
@@ -71,6 +84,20 @@ type PerUnitDevice struct {
 	// none of its own.
 	Rating, Volts float64
 	Gains         []Gain
+}
+
+// ControlSignals lists the signals of free base that the device's gains connect.
+func (d PerUnitDevice) ControlSignals() []Signal {
+	var out []Signal
+	for _, s := range controlSignals {
+		for _, g := range d.Gains {
+			if g.From == s || g.To == s {
+				out = append(out, s)
+				break
+			}
+		}
+	}
+	return out
 }
 
 // Gains lists a case's devices with every parameter and gain in SI. Devices that the
@@ -110,6 +137,12 @@ func (c *Case) Gains() ([]PerUnitDevice, error) {
 				{"L_H", "L", "series inductance, low-voltage side", q.L, sigCurrent, sigVoltage, -1},
 				{"", "ratio", "turns ratio over that of the buses' rated voltages: 1 with matching bases", q.HV / q.LV / (high / low), sigOne, sigOne, 0},
 			}
+			// The magnetising branch stands at the high-voltage terminals.
+			square := q.HV / q.LV * (q.HV / q.LV)
+			p.Gains = append(p.Gains,
+				Gain{"", "R_core", "core loss, referred to the low-voltage side", q.CoreR / square, sigCurrent, sigVoltage, 0},
+				Gain{"", "L_m", "magnetising inductance, referred to the low-voltage side", q.MagnetisingL / square, sigCurrent, sigVoltage, -1},
+				Gain{"", "R_m", "its series resistance, likewise", q.MagnetisingR / square, sigCurrent, sigVoltage, 0})
 		case *devices.Grid:
 			q := d.Params()
 			p.Rating, p.Volts = q.VA, devices.PeakVolts(q.Voltage)
@@ -131,6 +164,41 @@ func (c *Case) Gains() ([]PerUnitDevice, error) {
 			p.Gains = []Gain{
 				{"R_ohm", "R", "resistance", q.R, sigCurrent, sigVoltage, 0},
 				{"L_H", "L", "inductance", q.L, sigCurrent, sigVoltage, -1},
+			}
+		case *devices.ShuntCapacitor:
+			q := d.Params()
+			p.Volts = devices.PeakVolts(q.Voltage)
+			p.Gains = []Gain{
+				{"C_F", "C", "capacitance", q.C, sigVoltage, sigCurrent, -1},
+				{"R_ohm", "R", "series resistance", q.R, sigCurrent, sigVoltage, 0},
+			}
+		case *devices.Breaker:
+			p.Gains = []Gain{{"R_ohm", "R", "resistance of the closed contacts", d.Params().Resistance, sigCurrent, sigVoltage, 0}}
+		case *devices.Fault:
+			q := d.Params()
+			p.Rating = 1.5 * volts * devices.PeakAmperes(q.RatedCurrent)
+			p.Gains = []Gain{
+				{"R_ohm", "R", "resistance of the fault's path", q.R, sigCurrent, sigVoltage, 0},
+				{"L_H", "L", "inductance in series", q.L, sigCurrent, sigVoltage, -1},
+			}
+		case *devices.FrequencyMeter:
+			q := d.Params()
+			wn := devices.RadPerSecond(q.Bandwidth)
+			p.Gains = []Gain{
+				{"", "2 zeta w_n", "loop, proportional, on v_q over the amplitude", 2 * q.Damping * wn, sigOne, sigSpeed, 0},
+				{"", "w_n^2", "loop, integral, on v_q over the amplitude", wn * wn, sigOne, sigSpeed, 1},
+				{"", "w_r", "corner of the filter of the rate of change", devices.RadPerSecond(q.RocofFilter), sigSpeed, sigSpeed, 1},
+			}
+		case *devices.ReducedNetwork:
+			q := d.Params()
+			if q.Ratio != nil { // the level to which R and L are referred
+				p.Volts /= cmplx.Abs(q.Ratio[0])
+			}
+			p.Rating = 1.5 * p.Volts * devices.PeakAmperes(q.RatedCurrent)
+			for k := range q.R {
+				p.Gains = append(p.Gains,
+					Gain{"", fmt.Sprintf("R_%d", k+1), fmt.Sprintf("resistance of circuit %d", k+1), q.R[k], sigCurrent, sigVoltage, 0},
+					Gain{"", fmt.Sprintf("L_%d", k+1), fmt.Sprintf("inductance of circuit %d", k+1), q.L[k], sigCurrent, sigVoltage, -1})
 			}
 		default:
 			continue
@@ -163,13 +231,16 @@ func formingGains(q devices.GridFormingParams) []Gain {
 		{"V_0", "V_0", "voltage at no load", q.V0, sigOne, sigVRef, 0},
 		{"w_0", "w_0", "speed at no load", q.Omega0, sigOne, sigSpeed, 0},
 	}
+	psi := 0.0
 	switch c := q.Primary.(type) {
 	case devices.Droop:
+		psi = c.Psi
 		out = append(out,
 			Gain{"m", "m", "frequency droop", c.M, sigPower, sigSpeed, 0},
 			Gain{"n", "n", "voltage droop", c.N, sigPower, sigVRef, 0},
 			Gain{"w_c", "w_c", "corner of the power filter", c.OmegaC, sigPower, sigPower, 1})
 	case devices.VirtualMachine:
+		psi = c.Psi
 		out = append(out,
 			Gain{"H", "H", "inertia constant", c.H, sigPower, sigPower, -1},
 			Gain{"D", "D", "damping", c.D, sigSpeed, sigPower, 0},
@@ -179,11 +250,13 @@ func formingGains(q devices.GridFormingParams) []Gain {
 			out = append(out, Gain{"w_c", "w_c", "corner of the power filter", c.OmegaC, sigPower, sigPower, 1})
 		}
 	case devices.Oscillator:
+		psi = c.Psi
 		out = append(out,
 			Gain{"eta", "eta", "speed of synchronisation", c.Eta, sigCurrent, sigVRef, 1},
 			Gain{"alpha", "alpha", "stiffness of the voltage", c.Alpha, sigVRef, sigCurrent, 0})
 	}
 	out = append(out,
+		Gain{"psi", "psi", "turn of the power pair", psi, sigOne, sigAngle, 0},
 		Gain{"Rv_ohm", "R_v", "virtual resistance", q.Rv, sigCurrent, sigVRef, 0},
 		Gain{"Xv_ohm", "X_v", "virtual reactance", q.Xv, sigCurrent, sigVRef, 0},
 		Gain{"Kpv", "K_pv", "voltage loop, proportional", q.Kpv, sigVErr, sigIRef, 0},
@@ -194,6 +267,12 @@ func formingGains(q devices.GridFormingParams) []Gain {
 		Gain{"Kic", "K_ic", "current loop, integral", q.Kic, sigIErr, sigVOrder, 1},
 		Gain{"I_max_A", "I_max", "largest current reference", q.IMax, sigOne, sigIRef, 0},
 	)
+	if l := q.LimitImpedance; l.Gain > 0 {
+		out = append(out,
+			Gain{"limit_I_t_A", "I_t", "current from which the limiting impedance acts", l.Threshold, sigOne, sigCurrent, 0},
+			Gain{"limit_k", "k", "rise of the limiting impedance with current", l.Gain, sigCurrent, sigOhm, 0},
+			Gain{"limit_XR", "X/R", "of the limiting impedance", l.XR, sigOne, sigOne, 0})
+	}
 	return append(out, filterGains(q.Filter)...)
 }
 

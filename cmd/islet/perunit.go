@@ -122,6 +122,13 @@ func cmdPerunit(_ context.Context, c *call) error {
 		if !c.asCSV {
 			fmt.Fprintf(c.stdout, "\n%s (%s): base %.6g kVA%s, %.6g V peak phase (%.6g V line-to-line), %.6g A peak, %.6g ohm, time %s\n",
 				d.Name, d.Kind, b.Power/1e3, own, b.Voltage, devices.LineVolts(b.Voltage), b.Current(), b.Voltage/b.Current(), timeBase(seconds))
+			if signals := d.ControlSignals(); len(signals) > 0 {
+				var text []string
+				for _, s := range signals {
+					text = append(text, fmt.Sprintf("%s %.6g %s", s.Name, s.Base(b, free), s.Of))
+				}
+				fmt.Fprintf(c.stdout, "  1 per unit of its control signals: %s\n", strings.Join(text, ", "))
+			}
 			fmt.Fprintf(c.stdout, "  %-10s %14s %-16s %14s  %s\n", "symbol", "SI", "unit", "per unit", "meaning")
 		}
 		for _, g := range d.Gains {

@@ -124,14 +124,24 @@ func reportScreen(w io.Writer, n *screen.Network, r *screen.Result) {
 	default:
 		line("margin", "90 degrees across a branch when all transfers are %.6g times as large; step is lost at %.6g times", r.Margin90, r.MarginLost)
 	}
-	if r.Tracked {
+	droops := 0 // sources whose speed gives way
+	for _, s := range r.Sources {
+		if !math.IsInf(s.D, 1) {
+			droops++
+		}
+	}
+	if droops == 0 {
+		line("references", "none: %s holds the speed and takes up the balance", r.Sources[0].Name)
+	} else if r.Tracked {
 		line("references", "every source gives what is set")
 	} else {
 		line("references", "not tracked: %s", r.NotTracked)
 	}
-	if r.Proportional {
+	switch {
+	case droops < 2:
+	case r.Proportional:
 		line("sharing", "what moves is shared in proportion to rating")
-	} else {
+	default:
 		line("sharing", "what moves is shared in proportion to D, which isn't in proportion to rating")
 	}
 	fmt.Fprintf(w, "  %-22s %12s %12s %12s %9s\n", "source", "D kW/Hz", "set kW", "gives kW", "of rating")
