@@ -2,6 +2,7 @@ package cases
 
 import (
 	"math"
+	"strings"
 	"testing"
 
 	"islet/devices"
@@ -162,5 +163,67 @@ func TestGainsOfNameplate(t *testing.T) {
 	}
 	if transformers != 7 {
 		t.Errorf("%d transformers", transformers)
+	}
+}
+
+// No device is left out, and every parameter has a unit and a finite base.
+func TestGainsOfEveryDevice(t *testing.T) {
+	for _, name := range []string{"starter", "harbour", "droop3", "cigre-lv", "mesh-10"} {
+		c, err := Open(name)
+		if err != nil {
+			t.Fatal(err)
+		}
+		list, err := c.Gains()
+		if err != nil {
+			t.Fatal(err)
+		}
+		if len(list) != len(c.devices) {
+			t.Errorf("%s: %d devices listed of %d", name, len(list), len(c.devices))
+		}
+		b := perunit.Bases{Power: 1e5, Voltage: 326, Time: 1}
+		for _, d := range list {
+			if len(d.Gains) == 0 || !(d.Volts > 0) {
+				t.Errorf("%s: %s has %d parameters, %g V", name, d.Name, len(d.Gains), d.Volts)
+			}
+			for _, g := range d.Gains {
+				if x := g.Base(b, nil); !(x > 0) || math.IsInf(x, 0) || math.IsNaN(g.Value) {
+					t.Errorf("%s: %s.%s is %g with base %g", name, d.Name, g.Symbol, g.Value, x)
+				}
+			}
+		}
+	}
+}
+
+// A maker's droop is per unit of nominal speed, times being in seconds: with that base
+// of the ordered speed m is the nameplate's 1 %, and nothing else but what orders or
+// takes the speed moves.
+func TestSpeedBase(t *testing.T) {
+	c, err := Open("starter")
+	if err != nil {
+		t.Fatal(err)
+	}
+	list, err := c.Gains()
+	if err != nil {
+		t.Fatal(err)
+	}
+	d := list[0]
+	b := perunit.Bases{Power: d.Rating, Voltage: d.Volts, Time: 1}
+	w := map[string]float64{"w": 100 * math.Pi}
+	for _, g := range d.Gains {
+		was, is := g.Value/g.Base(b, nil), g.Value/g.Base(b, w)
+		want, ok := map[string]float64{"m": 0.01, "w_0": 1}[g.Symbol]
+		if !ok {
+			want = was
+		}
+		if math.Abs(is-want) > 1e-12*math.Abs(want) {
+			t.Errorf("%s is %.12g per unit, want %g", g.Symbol, is, want)
+		}
+	}
+	var names []string
+	for _, s := range d.ControlSignals() {
+		names = append(names, s.Name)
+	}
+	if got := strings.Join(names, " "); got != "w v_ref v_err i_ref i_err v_i" {
+		t.Errorf("control signals are %s", got)
 	}
 }
