@@ -81,6 +81,13 @@ func (p *system) perUnit(dst []float64) {
 	}
 }
 
+// Scales implements solvers.Scaled, so that a system per unit can be scaled once more.
+func (p *system) Scales() ([]float64, []bool) {
+	scale, absolute := p.s.(solvers.Scaled).Scales()
+	p.perUnit(scale)
+	return scale, absolute
+}
+
 func (p *system) Dim() int                { return p.s.Dim() }
 func (p *system) Hidden() []int           { return p.s.Hidden() }
 func (p *system) AlgebraicRow(i int) bool { return p.s.AlgebraicRow(i) }
