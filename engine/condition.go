@@ -112,8 +112,7 @@ func (m *Simulation) roots() *solvers.Roots {
 				continue
 			}
 			d := k.d
-			m.net.Ports(d.block, v[:d.ports], y)
-			d.kinked.EvalKinks(dst[at:at+len(d.kinks)], t, v[:d.ports], y[d.lo:d.lo+d.own])
+			d.kinked.EvalKinks(dst[at:at+len(d.kinks)], t, m.portValues(d, v, y), y[d.lo:d.lo+d.own])
 			at += len(d.kinks)
 		}
 	}

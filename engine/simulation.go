@@ -467,16 +467,24 @@ type leanFrame struct {
 	mean []float64 // of every island, after the last step
 }
 
+// portValues returns the values at a device's ports in state y: a part of y, or
+// copied into v.
+func (m *Simulation) portValues(d *member, v, y []float64) []float64 {
+	if d.port >= 0 {
+		return y[d.port : d.port+d.ports : d.port+d.ports]
+	}
+	m.net.Ports(d.block, v[:d.ports], y)
+	return v[:d.ports]
+}
+
 // islandSpeed is the mean speed of the sources that hold an island, weighted
 // by rating, rad/s.
 func (m *Simulation) islandSpeed(is *island, t float64, y []float64) float64 {
 	sum, weight := 0.0, 0.0
 	for _, i := range is.formers {
 		d := m.sys.devices[i]
-		v := m.ports[:d.ports]
-		m.net.Ports(d.block, v, y)
 		w := d.former.Weight()
-		sum += w * d.former.Speed(t, v, y[d.lo:d.lo+d.own])
+		sum += w * d.former.Speed(t, m.portValues(d, m.ports, y), y[d.lo:d.lo+d.own])
 		weight += w
 	}
 	return sum / weight

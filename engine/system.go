@@ -49,6 +49,7 @@ type member struct {
 	lo    int // first own unknown
 	own   int
 	ports int
+	port  int // place of the first port's value in the state, if the others follow; else -1
 
 	framed   facet.Framed
 	measure  facet.Measurer
@@ -273,6 +274,9 @@ func (s *System) network() (*solvers.Network, error) {
 		}
 		m.block = k
 		m.lo, _ = n.Own(k)
+	}
+	for _, m := range s.devices {
+		m.port = n.PortUnknown(m.block)
 	}
 	return n, nil
 }

@@ -162,6 +162,21 @@ func (n *Network) Ports(k int, v, y []float64) {
 	}
 }
 
+// PortUnknown returns the index of the unknown at the first port of block k, if
+// those at its other ports follow it in order; -1 else.
+func (n *Network) PortUnknown(k int) int {
+	at := n.blocks[k].at
+	for i, c := range at {
+		if c != at[0]+i {
+			return -1
+		}
+	}
+	if len(at) == 0 {
+		return -1
+	}
+	return n.nOwn + at[0]
+}
+
 // Configuration says how the parts of a network are connected at present.
 type Configuration struct {
 	// Off marks blocks that take no part: no flow, own unknowns kept.
