@@ -108,7 +108,7 @@ func basesOf(s *modes.StateSpace, seed uint64) perunit.Scaling {
 // Linear systems per unit: eigenvalues times the base of time, transfer functions by
 // the bases, and a change of bases is one more scaling.
 func TestPerUnitLinear(t *testing.T) {
-	for _, c := range perUnitCases[:3] {
+	for _, c := range perUnitCases {
 		s := linearOf(t, c.name)
 		one, two := basesOf(s, 1), basesOf(s, 2)
 		pu, err := one.Apply(s)
@@ -241,6 +241,61 @@ func transfer(t *testing.T, s *modes.StateSpace, at complex128) [][]complex128 {
 		}
 	}
 	return out
+}
+
+// Bases of control signals are free: whatever they are, from setpoints to physical
+// quantities the system is the same, and so is every physical state's row and column.
+func TestPerUnitControlBasesAreFree(t *testing.T) {
+	for _, c := range perUnitCases {
+		s := linearOf(t, c.name)
+		rng := rand.New(rand.NewPCG(3, 4))
+		b := perunit.Scaling{}
+		control := make([]bool, len(s.States))
+		any := false
+		for i, u := range s.States {
+			switch u.Dynamics {
+			case "network", "filter", "":
+			default:
+				// i_f counts as current loop, but is a current.
+				control[i] = !strings.Contains(u.Name, ".i_") && u.Unit != "rad"
+			}
+			x := 1.0
+			if control[i] {
+				x, any = math.Exp(3*rng.NormFloat64()), true
+			}
+			b.States = append(b.States, x)
+		}
+		if !any {
+			t.Fatalf("%s has no states of controllers", c.name)
+		}
+		pu, err := b.Apply(s)
+		if err != nil {
+			t.Fatal(err)
+		}
+		for i := range s.States {
+			for j := range s.States {
+				if !control[i] && !control[j] && pu.A.At(i, j) != s.A.At(i, j) {
+					t.Fatalf("%s: %s on %s moves with bases of controllers", c.name, s.States[j].Name, s.States[i].Name)
+				}
+			}
+		}
+		for _, at := range []complex128{2i, 30 + 500i} {
+			h, hp := transfer(t, s, at), transfer(t, pu, at)
+			size := 0.0
+			for i := range h {
+				for j := range h[i] {
+					size = math.Max(size, cmplx.Abs(h[i][j]))
+				}
+			}
+			for i := range h {
+				for j := range h[i] {
+					if cmplx.Abs(h[i][j]-hp[i][j]) > 1e-5*cmplx.Abs(h[i][j])+1e-9*size {
+						t.Errorf("%s: %s to %s is %v, with other bases of controllers %v", c.name, s.Inputs[j].Name, s.Outputs[i].Name, h[i][j], hp[i][j])
+					}
+				}
+			}
+		}
+	}
 }
 
 // In radians of the frame's speed an inductance is its reactance (see

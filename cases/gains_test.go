@@ -2,6 +2,7 @@ package cases
 
 import (
 	"math"
+	"math/cmplx"
 	"strings"
 	"testing"
 
@@ -225,5 +226,58 @@ func TestSpeedBase(t *testing.T) {
 	}
 	if got := strings.Join(names, " "); got != "w v_ref v_err i_ref i_err v_i" {
 		t.Errorf("control signals are %s", got)
+	}
+}
+
+// Under matching bases a transformer is a branch like any other: its admittances
+// between the terminals' per-unit voltages and currents, taken from its equations, are
+// y and -y times the phase shift, with one y for both sides, whatever the ratio.
+func TestTransformerVanishes(t *testing.T) {
+	h, err := Open("harbour")
+	if err != nil {
+		t.Fatal(err)
+	}
+	seen := 0
+	for i := range h.devices {
+		dev, err := h.devices[i].build()
+		if err != nil {
+			t.Fatal(err)
+		}
+		full, ok := dev.(*devices.Transformer)
+		if !ok {
+			continue
+		}
+		seen++
+		p := full.Params()
+		p.CoreR, p.MagnetisingL, p.MagnetisingR = 0, 0, 0 // shunts, not the ratio
+		bare, err := devices.NewTransformer(p)
+		if err != nil {
+			t.Fatal(err)
+		}
+		block, err := bare.WithDetail("quasi-steady")
+		if err != nil {
+			t.Fatal(err)
+		}
+		w := block.(*devices.Transformer)
+		w.SetFrame(100 * math.Pi)
+		jac := make([]float64, 16)
+		w.Jacobian(jac, 0, make([]float64, 4), nil)
+		high := perunit.Bases{Power: p.VA, Voltage: devices.PeakVolts(p.HV), Time: 1}
+		low := perunit.Bases{Power: p.VA, Voltage: devices.PeakVolts(p.LV), Time: 1}
+		entry := func(i, j int, row, col perunit.Bases) complex128 {
+			return complex(jac[4*i+j], jac[4*(i+1)+j]) * complex(col.Voltage/row.Current(), 0)
+		}
+		y := entry(0, 0, high, high)
+		for what, x := range map[string]complex128{"low side": entry(2, 2, low, low), "low on high": entry(0, 2, high, low), "high on low": entry(2, 0, low, high)} {
+			if math.Abs(cmplx.Abs(x)-cmplx.Abs(y)) > 1e-12*cmplx.Abs(y) {
+				t.Errorf("%s, %s: %v per unit, high side %v", h.devices[i].name, what, x, y)
+			}
+		}
+		if d := cmplx.Abs(entry(2, 2, low, low) - y); d > 1e-12*cmplx.Abs(y) {
+			t.Errorf("%s: the sides' admittances are %g apart", h.devices[i].name, d)
+		}
+	}
+	if seen != 7 {
+		t.Errorf("%d transformers", seen)
 	}
 }
