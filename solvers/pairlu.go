@@ -11,8 +11,8 @@ import (
 // (minimum degree on the symmetrised pattern of blocks) and no pivots are sought
 // beyond a block, which suits the admittance-like matrices of networks; a diagonal
 // block that is singular, or a multiplier that is large, is reported, and such a
-// matrix is for [SparseLU]. On the bus matrix of a mesh it takes about a quarter
-// of the time of the scalar factorisation.
+// matrix is for [SparseLU]. On the bus matrix of a mesh it takes about half the
+// time of the scalar factorisation.
 type pairLU struct {
 	a     *CSC
 	n     int     // nodes
