@@ -76,9 +76,10 @@ type LinearIsland struct {
 	Reference int     // the leading source's angle among the unknowns
 	Speed     float64 // of the frame, rad/s
 	// Rotation is the direction, by unknown, in which all moves when the
-	// island's angles grow together by one rad: at a steady state J Rotation
-	// = 0, as only differences of angles act.
-	Rotation []float64
+	// island's angles grow together by one rad. As only differences of angles
+	// act, the rates of change then turn as well and J Rotation = Turned, by
+	// equation; at a steady state that is zero.
+	Rotation, Turned []float64
 }
 
 // law is a row that the current into a bus component enters, with a weight.
@@ -154,6 +155,7 @@ type lineariser struct {
 	speeds []float64 // of the islands' frames before
 	at     []int     // unknown of the network -> unknown of l, -1 if left out
 	from   []int     // the reverse
+	rate   []float64 // right-hand sides, by unknown of the network
 }
 
 func (z *lineariser) turnFrames() error {
@@ -285,6 +287,7 @@ func (z *lineariser) jacobian() error {
 		}
 	}
 	l.J = t.matrix(n, n)
+	z.rate = f
 	for i, e := range l.E {
 		if e == 0 {
 			continue
@@ -309,9 +312,12 @@ func (z *lineariser) islands() {
 			Reference: z.at[lead.lo+lead.former.AngleUnknown()],
 			Speed:     is.frame.speed,
 			Rotation:  make([]float64, len(z.from)),
+			Turned:    make([]float64, len(z.from)),
 		}
 		turn := func(i int) {
-			s.Rotation[z.at[i]], s.Rotation[z.at[i+1]] = -z.y[i+1], z.y[i]
+			d, q := z.at[i], z.at[i+1]
+			s.Rotation[d], s.Rotation[q] = -z.y[i+1], z.y[i]
+			s.Turned[d], s.Turned[q] = -z.rate[i+1], z.rate[i]
 		}
 		for _, i := range is.devices {
 			d := m.sys.devices[i]
@@ -326,6 +332,9 @@ func (z *lineariser) islands() {
 		}
 		for _, b := range is.buses {
 			turn(m.net.NodeUnknown(2 * b))
+		}
+		for _, i := range l.Hidden {
+			s.Turned[i] = 0 // the law stands there, not its derivative
 		}
 		l.Islands = append(l.Islands, s)
 	}

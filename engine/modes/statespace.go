@@ -37,7 +37,9 @@ type StateSpace struct {
 }
 
 // Zero is the rotational mode of an island: nothing changes when all angles
-// grow together, so A has an eigenvalue that is exactly zero.
+// grow together, so A has an eigenvalue that is exactly zero at a steady state.
+// While the state still moves, the eigenvalue differs from zero by what the
+// island's quantities turn in the frame; it is taken as zero all the same.
 type Zero struct {
 	Island    int    // index in engine.Linear.Islands
 	Leader    string // the source the angles are taken from when it is removed
@@ -416,8 +418,9 @@ func (r *reduction) stateSpace(relative bool) *StateSpace {
 	return s
 }
 
-// rotating lists the islands whose common turn leaves everything alone: J r = 0
-// for the rotation r, to rounding.
+// rotating lists the islands whose common turn changes nothing: J r is, to
+// rounding, what the rates at the state become by turning, which is zero at a
+// steady state.
 func rotating(l *engine.Linear) []int {
 	const (
 		rounding = 1e-7 // of the sum of the terms that cancel in a row
@@ -426,8 +429,9 @@ func rotating(l *engine.Linear) []int {
 	sum, terms := make([]float64, len(l.E)), make([]float64, len(l.E))
 	var list []int
 	for k, is := range l.Islands {
-		clear(sum)
-		clear(terms)
+		for i, v := range is.Turned {
+			sum[i], terms[i] = -v, math.Abs(v)
+		}
 		for j, turn := range is.Rotation {
 			for p := l.J.P[j]; p < l.J.P[j+1]; p++ {
 				v := turn * l.J.X[p]
