@@ -13,23 +13,31 @@ import (
 type Signal struct {
 	Name string
 	Of   perunit.Dimension
+	// High tells that it stands at the high-voltage side of a transformer, the
+	// only device with two base voltages.
+	High bool
 }
 
 // Signals of devices. Those of controllers have bases of their own, which are free.
 var (
-	sigVoltage = Signal{"voltage", perunit.Volt}
-	sigCurrent = Signal{"current", perunit.Ampere}
-	sigPower   = Signal{"power", perunit.Watt}
-	sigOhm     = Signal{"impedance", perunit.Volt.Over(perunit.Ampere)}
-	sigAngle   = Signal{"angle", perunit.Radian}
-	sigSpeed   = Signal{"w", perunit.Speed}      // speed that a primary control or PLL orders
-	sigVRef    = Signal{"v_ref", perunit.Volt}   // order of the primary control to the voltage loop
-	sigVErr    = Signal{"v_err", perunit.Volt}   // its control error
-	sigIRef    = Signal{"i_ref", perunit.Ampere} // its order to the current loop
-	sigIErr    = Signal{"i_err", perunit.Ampere} // that one's control error
-	sigVOrder  = Signal{"v_i", perunit.Volt}     // its order to the bridge
-	sigPLL     = Signal{"v_q", perunit.Volt}     // what the PLL steers to zero
-	sigOne     = Signal{"", perunit.One}
+	sigVoltage = Signal{"voltage", perunit.Volt, false}
+	sigCurrent = Signal{"current", perunit.Ampere, false}
+	sigPower   = Signal{"power", perunit.Watt, false}
+	sigVars    = Signal{"reactive power", perunit.Var, false}
+	sigOhm     = Signal{"impedance", perunit.Volt.Over(perunit.Ampere), false}
+	sigAngle   = Signal{"angle", perunit.Radian, false}
+	sigOne     = Signal{"", perunit.One, false}
+
+	sigHighVoltage = Signal{"high-side voltage", perunit.Volt, true}
+	sigHighCurrent = Signal{"high-side current", perunit.Ampere, true}
+
+	sigSpeed  = Signal{"w", perunit.Speed, false}      // speed that a primary control or PLL orders
+	sigVRef   = Signal{"v_ref", perunit.Volt, false}   // order of the primary control to the voltage loop
+	sigVErr   = Signal{"v_err", perunit.Volt, false}   // its control error
+	sigIRef   = Signal{"i_ref", perunit.Ampere, false} // its order to the current loop
+	sigIErr   = Signal{"i_err", perunit.Ampere, false} // that one's control error
+	sigVOrder = Signal{"v_i", perunit.Volt, false}     // its order to the bridge
+	sigPLL    = Signal{"v_q", perunit.Volt, false}     // what the PLL steers to zero
 )
 
 // ControlSignals names the signals whose bases are free.
@@ -43,13 +51,28 @@ func ControlSignals() []string {
 
 var controlSignals = []Signal{sigSpeed, sigVRef, sigVErr, sigIRef, sigIErr, sigVOrder, sigPLL}
 
-// Base is the SI value of 1 per unit of the signal: the one in free, or that of its
-// dimension.
-func (s Signal) Base(b perunit.Bases, free map[string]float64) float64 {
-	if x, ok := free[s.Name]; ok {
+// PerUnitBases are the base values of a device.
+type PerUnitBases struct {
+	perunit.Bases
+	// HighVoltage is the base voltage (V peak phase-to-neutral) of a transformer's
+	// high-voltage side; Voltage is that of its low-voltage side. 0 for other devices.
+	HighVoltage float64
+	// Signals holds base values, in SI, of control signals that don't follow from
+	// their units, by name.
+	Signals map[string]float64
+}
+
+// Base is the SI value of 1 per unit of the signal: the one chosen for it, or that of
+// its dimension.
+func (s Signal) Base(b PerUnitBases) float64 {
+	if x, ok := b.Signals[s.Name]; ok {
 		return x
 	}
-	return b.Of(s.Of)
+	side := b.Bases
+	if s.High {
+		side.Voltage = b.HighVoltage
+	}
+	return side.Of(s.Of)
 }
 
 // Gain is a parameter of a device as what turns one signal into another.
@@ -71,19 +94,22 @@ func (g Gain) Dimension() perunit.Dimension {
 }
 
 // Base is the SI value of 1 per unit: that of the signal it leads to over that of the
-// signal it comes from, and over the base of time for every integration. free holds
-// base values of signals that don't follow from b, by name.
-func (g Gain) Base(b perunit.Bases, free map[string]float64) float64 {
-	return g.To.Base(b, free) / g.From.Base(b, free) / math.Pow(b.Time, float64(g.Integrations))
+// signal it comes from, and over the base of time for every integration.
+func (g Gain) Base(b PerUnitBases) float64 {
+	return g.To.Base(b) / g.From.Base(b) / math.Pow(b.Time, float64(g.Integrations))
 }
 
 // PerUnitDevice is a device with its parameters as gains.
 type PerUnitDevice struct {
 	Name, Kind string
-	// Rating (VA) and Volts (V peak phase) are its own base values; 0 if it has
-	// none of its own.
-	Rating, Volts float64
-	Gains         []Gain
+	// Rating (VA) and Volts (V peak phase) are its own base values; the rating is 0
+	// if it has none. HighVolts is that of a transformer's high-voltage side, Volts
+	// of its low-voltage side; 0 for other devices.
+	Rating, Volts, HighVolts float64
+	// Level and HighLevel are the rated voltages (V line-to-line rms) of the buses
+	// at which Volts and HighVolts stand: its voltage levels.
+	Level, HighLevel float64
+	Gains            []Gain
 }
 
 // ControlSignals lists the signals of free base that the device's gains connect.
@@ -110,8 +136,9 @@ func (c *Case) Gains() ([]PerUnitDevice, error) {
 		if err != nil {
 			return nil, err
 		}
-		volts := devices.PeakVolts(c.buses[spec.at[0]].volts)
-		p := PerUnitDevice{Name: spec.name, Kind: spec.kind.name, Volts: volts}
+		level := c.buses[spec.at[0]].volts
+		volts := devices.PeakVolts(level)
+		p := PerUnitDevice{Name: spec.name, Kind: spec.kind.name, Volts: volts, Level: level}
 		switch d := dev.(type) {
 		case *devices.GridForming:
 			q := d.Params()
@@ -129,20 +156,18 @@ func (c *Case) Gains() ([]PerUnitDevice, error) {
 			}
 		case *devices.Transformer:
 			q := d.Params()
-			// Referred to the low-voltage side, whose base is that bus's.
-			p.Rating, p.Volts = q.VA, devices.PeakVolts(q.LV)
-			high, low := c.buses[spec.at[0]].volts, c.buses[spec.at[1]].volts
+			p.Rating = q.VA
+			p.Volts, p.HighVolts = devices.PeakVolts(q.LV), devices.PeakVolts(q.HV)
+			p.Level, p.HighLevel = c.buses[spec.at[1]].volts, level
 			p.Gains = []Gain{
+				{"", "ratio", "turns ratio: 1 per unit, that is gone, under matching bases", q.HV / q.LV, sigVoltage, sigHighVoltage, 0},
+				{"", "shift", "lag of the low-voltage side by the vector group; bases leave it", math.Remainder(q.Group.Lag(), 2*math.Pi), sigOne, sigAngle, 0},
 				{"R_ohm", "R", "series resistance, low-voltage side", q.R, sigCurrent, sigVoltage, 0},
 				{"L_H", "L", "series inductance, low-voltage side", q.L, sigCurrent, sigVoltage, -1},
-				{"", "ratio", "turns ratio over that of the buses' rated voltages: 1 with matching bases", q.HV / q.LV / (high / low), sigOne, sigOne, 0},
+				{"core_R_ohm", "R_core", "core loss, high-voltage side", q.CoreR, sigHighCurrent, sigHighVoltage, 0},
+				{"magnetising_L_H", "L_m", "magnetising inductance, high-voltage side", q.MagnetisingL, sigHighCurrent, sigHighVoltage, -1},
+				{"magnetising_R_ohm", "R_m", "its series resistance, likewise", q.MagnetisingR, sigHighCurrent, sigHighVoltage, 0},
 			}
-			// The magnetising branch stands at the high-voltage terminals.
-			square := q.HV / q.LV * (q.HV / q.LV)
-			p.Gains = append(p.Gains,
-				Gain{"", "R_core", "core loss, referred to the low-voltage side", q.CoreR / square, sigCurrent, sigVoltage, 0},
-				Gain{"", "L_m", "magnetising inductance, referred to the low-voltage side", q.MagnetisingL / square, sigCurrent, sigVoltage, -1},
-				Gain{"", "R_m", "its series resistance, likewise", q.MagnetisingR / square, sigCurrent, sigVoltage, 0})
 		case *devices.Grid:
 			q := d.Params()
 			p.Rating, p.Volts = q.VA, devices.PeakVolts(q.Voltage)
@@ -227,7 +252,7 @@ func formingGains(q devices.GridFormingParams) []Gain {
 	out := []Gain{
 		{"", "S_r", "rating", q.Rating, sigOne, sigPower, 0},
 		{"", "P*", "set active power", q.P, sigOne, sigPower, 0},
-		{"", "Q*", "set reactive power", q.Q, sigOne, sigPower, 0},
+		{"", "Q*", "set reactive power", q.Q, sigOne, sigVars, 0},
 		{"V_0", "V_0", "voltage at no load", q.V0, sigOne, sigVRef, 0},
 		{"w_0", "w_0", "speed at no load", q.Omega0, sigOne, sigSpeed, 0},
 	}
@@ -237,14 +262,15 @@ func formingGains(q devices.GridFormingParams) []Gain {
 		psi = c.Psi
 		out = append(out,
 			Gain{"m", "m", "frequency droop", c.M, sigPower, sigSpeed, 0},
-			Gain{"n", "n", "voltage droop", c.N, sigPower, sigVRef, 0},
+			Gain{"n", "n", "voltage droop", c.N, sigVars, sigVRef, 0},
 			Gain{"w_c", "w_c", "corner of the power filter", c.OmegaC, sigPower, sigPower, 1})
 	case devices.VirtualMachine:
 		psi = c.Psi
 		out = append(out,
-			Gain{"H", "H", "inertia constant", c.H, sigPower, sigPower, -1},
+			Gain{"H", "H", "inertia constant, on its own rating", c.H, sigPower, sigPower, -1},
+			Gain{"", "2 H S_r/w_0", "inertia, from rate of change of speed to power", 2 * c.H * q.Rating / q.Omega0, sigSpeed, sigPower, -1},
 			Gain{"D", "D", "damping", c.D, sigSpeed, sigPower, 0},
-			Gain{"n", "n", "voltage droop", c.N, sigPower, sigVRef, 0},
+			Gain{"n", "n", "voltage droop", c.N, sigVars, sigVRef, 0},
 			Gain{"T_v", "T_v", "time constant of the voltage", c.Tv, sigVRef, sigVRef, -1})
 		if !math.IsInf(c.OmegaC, 1) {
 			out = append(out, Gain{"w_c", "w_c", "corner of the power filter", c.OmegaC, sigPower, sigPower, 1})
@@ -280,7 +306,7 @@ func followingGains(q devices.GridFollowingParams) []Gain {
 	out := []Gain{
 		{"", "S_r", "rating", q.Rating, sigOne, sigPower, 0},
 		{"", "P*", "set active power", q.P, sigOne, sigPower, 0},
-		{"", "Q*", "set reactive power", q.Q, sigOne, sigPower, 0},
+		{"", "Q*", "set reactive power", q.Q, sigOne, sigVars, 0},
 		{"V_0", "V_n", "rated voltage", q.V0, sigOne, sigVoltage, 0},
 		{"w_0", "w_0", "nominal speed", q.Omega0, sigOne, sigSpeed, 0},
 		{"", "K_p/V_n", "PLL, proportional, on v_q in volts", q.Kp / q.V0, sigPLL, sigSpeed, 0},

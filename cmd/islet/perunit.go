@@ -6,6 +6,7 @@ import (
 	"fmt"
 	"math"
 	"path"
+	"slices"
 	"sort"
 	"strconv"
 	"strings"
@@ -17,11 +18,12 @@ import (
 
 // perunitOptions are the options of islet perunit.
 type perunitOptions struct {
-	power, voltage float64
-	time           string
-	base           list
-	device         string
-	from           list
+	power, frequency float64
+	voltage          list
+	time             string
+	base             list
+	device           string
+	from             list
 }
 
 func perunitFlags(c *call) {
@@ -29,11 +31,53 @@ func perunitFlags(c *call) {
 	c.fs.Var(&c.sets, "set", "`PATH=VALUE`: override a value of the case first; may be repeated")
 	c.fs.StringVar(&p.device, "device", "*", "devices to show, a `PATTERN` of names")
 	c.fs.Float64Var(&p.power, "power-base", 0, "base power of all devices, `kVA` (default: each one's own rating)")
-	c.fs.Float64Var(&p.voltage, "voltage-base", 0, "base voltage of all devices, `kV` line-to-line rms (default: each one's own rated voltage, or its bus's)")
-	c.fs.StringVar(&p.time, "time", "second", "base of time: `second`, or radian of the nominal frequency, in which inductances are reactances")
-	c.fs.Var(&p.base, "base", "`SIGNAL=VALUE`: base value, in SI, of a control signal ("+strings.Join(cases.ControlSignals(), ", ")+"); may be repeated (default: that of its unit)")
+	c.fs.Var(&p.voltage, "voltage-base", "base voltage, kV line-to-line rms, of all devices at a voltage level: `LEVEL=kV` with the rated voltage of its buses, or kV alone where there is one level; may be repeated (default: each device's own rated voltage, or its bus's)")
+	c.fs.Float64Var(&p.frequency, "frequency-base", 0, "base frequency, `Hz`: 1 per unit of the speeds that controls order, and the radian of --time radian (default: the case's)")
+	c.fs.StringVar(&p.time, "time", "second", "base of time: `second`, or radian of the base frequency, in which inductances are reactances")
+	c.fs.Var(&p.base, "base", "`SIGNAL=VALUE`: base value, in SI, of a control signal ("+strings.Join(cases.ControlSignals(), ", ")+"); may be repeated (default: the base frequency for w, else that of its unit)")
 	c.fs.Var(&p.from, "from", "`KEY=VALUE,...`: per-unit values of the devices shown, as a maker gives them, taken into SI; may be repeated")
 	c.fs.BoolVar(&c.asCSV, "csv", false, "print as CSV")
+}
+
+// voltageBases reads base voltages by level, and checks them against the levels of
+// the devices shown. Both are V line-to-line rms.
+func voltageBases(given []string, shown []cases.PerUnitDevice) (map[float64]float64, error) {
+	var levels []float64
+	for _, d := range shown {
+		for _, v := range []float64{d.Level, d.HighLevel} {
+			if v > 0 && !slices.Contains(levels, v) {
+				levels = append(levels, v)
+			}
+		}
+	}
+	slices.Sort(levels)
+	var names []string
+	for _, v := range levels {
+		names = append(names, fmt.Sprintf("%g", v/1e3))
+	}
+	out := make(map[float64]float64)
+	for _, s := range given {
+		name, text, two := strings.Cut(s, "=")
+		if !two {
+			name, text = "", s
+		}
+		v, err := strconv.ParseFloat(strings.TrimSpace(text), 64)
+		if err != nil || !(v > 0) || math.IsInf(v, 0) {
+			return nil, fmt.Errorf("--voltage-base %q: want kV, or LEVEL=kV, with a positive value", s)
+		}
+		level := levels[0]
+		if two {
+			at := slices.Index(names, strings.TrimSpace(name))
+			if at < 0 {
+				return nil, fmt.Errorf("--voltage-base %q: the devices shown are at %s kV; want LEVEL=kV with one of them", s, strings.Join(names, ", "))
+			}
+			level = levels[at]
+		} else if len(levels) > 1 {
+			return nil, fmt.Errorf("--voltage-base %q: the devices shown are at %s kV; say which with LEVEL=kV", s, strings.Join(names, ", "))
+		}
+		out[level] = v * 1e3
+	}
+	return out, nil
 }
 
 func cmdPerunit(_ context.Context, c *call) error {
@@ -45,21 +89,30 @@ func cmdPerunit(_ context.Context, c *call) error {
 	bad := func(format string, a ...any) error {
 		return fmt.Errorf("%w: %s", errUsage, fmt.Sprintf(format, a...))
 	}
-	if !(p.power >= 0) || math.IsInf(p.power, 0) || !(p.voltage >= 0) || math.IsInf(p.voltage, 0) {
-		return bad("--power-base %g, --voltage-base %g: want positive values", p.power, p.voltage)
+	for _, o := range []struct {
+		name  string
+		value float64
+	}{{"--power-base", p.power}, {"--frequency-base", p.frequency}} {
+		if !(o.value >= 0) || math.IsInf(o.value, 0) {
+			return bad("%s %g: want a positive value", o.name, o.value)
+		}
 	}
+	if p.frequency == 0 {
+		p.frequency = k.Frequency
+	}
+	speed := devices.RadPerSecond(p.frequency)
 	seconds := 1.0
 	switch p.time {
 	case "second":
 	case "radian":
-		seconds = 1 / devices.RadPerSecond(k.Frequency)
+		seconds = 1 / speed
 	default:
 		return bad("--time %q: want second or radian", p.time)
 	}
 	if _, err := path.Match(p.device, ""); err != nil {
 		return bad("--device %q: %v", p.device, err)
 	}
-	free := make(map[string]float64)
+	free := map[string]float64{"w": speed}
 	for _, s := range p.base {
 		name, text, _ := strings.Cut(s, "=")
 		v, err := strconv.ParseFloat(strings.TrimSpace(text), 64)
@@ -97,64 +150,93 @@ func cmdPerunit(_ context.Context, c *call) error {
 	if len(shown) == 0 {
 		return bad("--device %q: no device of that name", p.device)
 	}
+	volts, err := voltageBases(p.voltage, shown)
+	if err != nil {
+		return bad("%v", err)
+	}
 	w := csv.NewWriter(c.stdout)
 	if c.asCSV {
 		w.Write([]string{"device", "symbol", "key", "si_value", "unit", "per_unit", "base"})
 	} else {
-		fmt.Fprintf(c.stdout, "%s: %s\nunits are derived from the signals a gain connects; per-unit values from scaling the equations it stands in\n", k.Name, k.Title)
+		fmt.Fprintf(c.stdout, "%s: %s\nbase frequency %g Hz, time %s\nunits are derived from the signals a gain connects; per-unit values from scaling the equations it stands in\n",
+			k.Name, k.Title, p.frequency, timeBase(seconds))
 	}
 	used := make(map[string]bool)
 	for _, d := range shown {
-		b := perunit.Bases{Power: d.Rating, Voltage: d.Volts, Time: seconds}
-		if p.power > 0 {
-			b.Power = p.power * 1e3
+		var rows []cases.Gain
+		for _, g := range d.Gains {
+			_, ok := from[g.Key]
+			ok = ok && g.Key != ""
+			switch {
+			case ok:
+				used[g.Key] = true
+				rows = append(rows, g)
+			case len(from) == 0 && g.Value != 0: // else an element that isn't there
+				rows = append(rows, g)
+			}
 		}
-		if p.voltage > 0 {
-			b.Voltage = devices.PeakVolts(p.voltage * 1e3)
+		if len(rows) == 0 {
+			continue
 		}
+		b := cases.PerUnitBases{Bases: perunit.Bases{Power: d.Rating, Voltage: d.Volts, Time: seconds}, HighVoltage: d.HighVolts, Signals: free}
 		own := ""
 		if b.Power == 0 {
 			b.Power, own = 100e3, " (it has no rating of its own)"
+		}
+		if p.power > 0 {
+			b.Power, own = p.power*1e3, ""
+		}
+		if v, ok := volts[d.Level]; ok {
+			b.Voltage = devices.PeakVolts(v)
+		}
+		if v, ok := volts[d.HighLevel]; ok && d.HighLevel > 0 {
+			b.HighVoltage = devices.PeakVolts(v)
 		}
 		if err := b.Check(); err != nil {
 			return bad("%s: %v", d.Name, err)
 		}
 		if !c.asCSV {
-			fmt.Fprintf(c.stdout, "\n%s (%s): base %.6g kVA%s, %.6g V peak phase (%.6g V line-to-line), %.6g A peak, %.6g ohm, time %s\n",
-				d.Name, d.Kind, b.Power/1e3, own, b.Voltage, devices.LineVolts(b.Voltage), b.Current(), b.Voltage/b.Current(), timeBase(seconds))
+			high := ""
+			if b.HighVoltage > 0 {
+				high = fmt.Sprintf("; high side %.6g V peak phase (%.6g V line-to-line)", b.HighVoltage, devices.LineVolts(b.HighVoltage))
+			}
+			fmt.Fprintf(c.stdout, "\n%s (%s)\n  base %.6g kVA%s, %.6g V peak phase (%.6g V line-to-line), %.6g A peak, %.6g ohm%s\n",
+				d.Name, d.Kind, b.Power/1e3, own, b.Voltage, devices.LineVolts(b.Voltage), b.Current(), b.Voltage/b.Current(), high)
 			if signals := d.ControlSignals(); len(signals) > 0 {
 				var text []string
 				for _, s := range signals {
-					text = append(text, fmt.Sprintf("%s %.6g %s", s.Name, s.Base(b, free), s.Of))
+					text = append(text, fmt.Sprintf("%s %.6g %s", s.Name, s.Base(b), s.Of))
 				}
 				fmt.Fprintf(c.stdout, "  1 per unit of its control signals: %s\n", strings.Join(text, ", "))
 			}
-			fmt.Fprintf(c.stdout, "  %-10s %14s %-16s %14s  %s\n", "symbol", "SI", "unit", "per unit", "meaning")
+			fmt.Fprintf(c.stdout, "  %-12s %14s %-16s %14s  %s\n", "symbol", "SI", "unit", "per unit", "meaning")
 		}
-		for _, g := range d.Gains {
-			base := g.Base(b, free)
+		for _, g := range rows {
+			base := g.Base(b)
 			value := g.Value
-			if v, ok := from[g.Key]; ok && g.Key != "" {
-				value, used[g.Key] = v*base, true
-			} else if len(from) > 0 {
-				continue
-			}
-			if value == 0 && len(from) == 0 {
-				continue // an element that isn't there
+			if len(from) > 0 {
+				value = from[g.Key] * base
 			}
 			if c.asCSV {
 				f := func(x float64) string { return strconv.FormatFloat(x, 'g', 12, 64) }
 				w.Write([]string{d.Name, g.Symbol, g.Key, f(value), g.Dimension().String(), f(value / base), f(base)})
 				continue
 			}
-			fmt.Fprintf(c.stdout, "  %-10s %14.7g %-16s %14.7g  %s\n", g.Symbol, value, g.Dimension(), value/base, g.Meaning)
+			if math.IsInf(value, 1) {
+				fmt.Fprintf(c.stdout, "  %-12s %14s %-16s %14s  %s\n", g.Symbol, "none", g.Dimension(), "none", g.Meaning)
+				continue
+			}
+			fmt.Fprintf(c.stdout, "  %-12s %14.7g %-16s %14.7g  %s\n", g.Symbol, value, g.Dimension(), value/base, g.Meaning)
 		}
 		if len(from) > 0 && !c.asCSV {
-			fmt.Fprintf(c.stdout, "  for the case file:\n    [device.%s]\n", d.Name)
-			for _, g := range d.Gains {
-				if v, ok := from[g.Key]; ok && g.Key != "" {
-					fmt.Fprintf(c.stdout, "    %s = %s\n", g.Key, strconv.FormatFloat(v*g.Base(b, free), 'g', 10, 64))
+			for _, g := range rows {
+				if storage := g.Integrations == -1 && g.From.Of != g.To.Of; storage && seconds == 1 {
+					fmt.Fprintf(c.stdout, "  note: with time in seconds %s = %.7g per unit is that many seconds; for %.7g per unit at %g Hz use --time radian\n", g.Key, from[g.Key], from[g.Key], p.frequency)
 				}
+			}
+			fmt.Fprintf(c.stdout, "  for the case file:\n    [device.%s]\n", d.Name)
+			for _, g := range rows {
+				fmt.Fprintf(c.stdout, "    %s = %s\n", g.Key, strconv.FormatFloat(from[g.Key]*g.Base(b), 'g', 10, 64))
 			}
 		}
 	}
@@ -174,7 +256,7 @@ func cmdPerunit(_ context.Context, c *call) error {
 
 func timeBase(seconds float64) string {
 	if seconds == 1 {
-		return "in seconds"
+		return "in seconds: inductances and capacitances per unit are too (--time radian gives reactances)"
 	}
 	return fmt.Sprintf("in radians (1 is %.6g ms)", seconds*1e3)
 }

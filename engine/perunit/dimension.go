@@ -6,8 +6,9 @@ import (
 	"strings"
 )
 
-// Dimension is a product of powers of volt, ampere, watt, second and radian.
-type Dimension struct{ V, A, W, S, Rad int }
+// Dimension is a product of powers of volt, ampere, watt, var, second and radian. Watt
+// and var share a base; they are apart so that a gain on reactive power says so.
+type Dimension struct{ V, A, W, Var, S, Rad int }
 
 // Dimensions of signals.
 var (
@@ -15,6 +16,7 @@ var (
 	Volt    = Dimension{V: 1}
 	Ampere  = Dimension{A: 1}
 	Watt    = Dimension{W: 1}
+	Var     = Dimension{Var: 1}
 	Second  = Dimension{S: 1}
 	Radian  = Dimension{Rad: 1}
 	Speed   = Radian.Over(Second)
@@ -24,12 +26,12 @@ var (
 
 // Times is the dimension of a product.
 func (d Dimension) Times(e Dimension) Dimension {
-	return Dimension{d.V + e.V, d.A + e.A, d.W + e.W, d.S + e.S, d.Rad + e.Rad}
+	return Dimension{d.V + e.V, d.A + e.A, d.W + e.W, d.Var + e.Var, d.S + e.S, d.Rad + e.Rad}
 }
 
 // Over is the dimension of a quotient.
 func (d Dimension) Over(e Dimension) Dimension {
-	return Dimension{d.V - e.V, d.A - e.A, d.W - e.W, d.S - e.S, d.Rad - e.Rad}
+	return Dimension{d.V - e.V, d.A - e.A, d.W - e.W, d.Var - e.Var, d.S - e.S, d.Rad - e.Rad}
 }
 
 // Gain is the dimension of what turns a signal into another: of the quotient of
@@ -71,7 +73,7 @@ func (d Dimension) String() string {
 	for _, p := range []struct {
 		n    int
 		unit string
-	}{{d.V, "V"}, {d.A, "A"}, {d.W, "W"}, {d.Rad, "rad"}, {d.S, "s"}} {
+	}{{d.V, "V"}, {d.A, "A"}, {d.W, "W"}, {d.Var, "var"}, {d.Rad, "rad"}, {d.S, "s"}} {
 		list, n := &up, p.n
 		if n < 0 {
 			list, n = &down, -n
@@ -104,7 +106,7 @@ func OfUnit(unit string) (Dimension, error) {
 		prefix string
 		d      Dimension
 	}{
-		{"rad/s", Speed}, {"rad", Radian}, {"V s", Weber}, {"A s", Coulomb}, {"var", Watt}, {"VA", Watt}, {"W", Watt},
+		{"rad/s", Speed}, {"rad", Radian}, {"V s", Weber}, {"A s", Coulomb}, {"var", Var}, {"VA", Watt}, {"W", Watt},
 		{"V", Volt}, {"A", Ampere}, {"Hz", Dimension{S: -1}}, {"s", Second}, {"S", Dimension{V: -1, A: 1}},
 		{"ohm", Dimension{V: 1, A: -1}}, {"1", One}, {"%", One}, {"deg", Radian},
 	}
@@ -146,5 +148,5 @@ func (b Bases) Current() float64 { return b.Power / (1.5 * b.Voltage) }
 
 // Of is the base value of a dimension, in SI.
 func (b Bases) Of(d Dimension) float64 {
-	return math.Pow(b.Voltage, float64(d.V)) * math.Pow(b.Current(), float64(d.A)) * math.Pow(b.Power, float64(d.W)) * math.Pow(b.Time, float64(d.S))
+	return math.Pow(b.Voltage, float64(d.V)) * math.Pow(b.Current(), float64(d.A)) * math.Pow(b.Power, float64(d.W+d.Var)) * math.Pow(b.Time, float64(d.S))
 }

@@ -36,6 +36,8 @@ func TestDimensions(t *testing.T) {
 		{"inductance", Volt, Ampere, -1, "H"},
 		{"capacitance", Ampere, Volt, -1, "F"},
 		{"frequency droop", Speed, Watt, 0, "rad/(W s)"},
+		{"voltage droop", Volt, Var, 0, "V/var"},
+		{"inertia", Watt, Speed, -1, "W s^2/rad"},
 		{"damping", Watt, Speed, 0, "W s/rad"},
 		{"time constant", Watt, Watt, -1, "s"},
 		{"corner", Volt, Volt, 1, "1/s"},
@@ -47,7 +49,7 @@ func TestDimensions(t *testing.T) {
 			t.Errorf("%s has the unit %s, want %s", c.what, got, c.want)
 		}
 	}
-	for unit, want := range map[string]Dimension{"W generated": Watt, "V line-line rms": Volt, "A s": Coulomb, "V s": Weber, "rad/s": Speed, "rad": Radian, "1": One, "": One} {
+	for unit, want := range map[string]Dimension{"W generated": Watt, "var generated": Var, "V line-line rms": Volt, "A s": Coulomb, "V s": Weber, "rad/s": Speed, "rad": Radian, "1": One, "": One} {
 		if d, err := OfUnit(unit); err != nil || d != want {
 			t.Errorf("unit %q is %v, %v", unit, d, err)
 		}
@@ -81,6 +83,7 @@ func TestHandbook(t *testing.T) {
 	near(t, "inductance in radians", l/b.Of(Gain(Volt, Ampere, -1)), w*l/b.Of(ohm), 1e-12)
 	// p = (3/2) v i per unit is v i.
 	near(t, "power", 1.5*b.Voltage*b.Current()/b.Of(Watt), 1, 1e-12)
+	near(t, "reactive power", b.Of(Var), b.Of(Watt), 1e-15)
 	for _, b := range []Bases{{}, {Power: 1, Voltage: -1, Time: 1}, {Power: 1, Voltage: 1, Time: math.Inf(1)}} {
 		if b.Check() == nil {
 			t.Errorf("bases %+v are taken", b)
