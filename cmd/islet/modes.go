@@ -24,6 +24,7 @@ type modesOptions struct {
 	bandwidth float64
 	vary      string
 	near      list
+	mode      int
 	count     int
 	all       bool
 	export    string
@@ -39,8 +40,9 @@ func modesFlags(c *call) {
 	c.fs.Float64Var(&m.at, "at", 0, "linearise after a run to this time, `s`, its events included (default: at the operating point)")
 	c.fs.StringVar(&m.against, "against", "", "match the modes with those of another setting of detail, `NAME: PATTERN=LEVEL, ...`, applied after --detail")
 	c.fs.Float64Var(&m.bandwidth, "bandwidth", 0, "tell which dynamics singular perturbation may drop for a bandwidth of interest, `Hz`")
+	c.fs.IntVar(&m.mode, "mode", 0, "tell all who take part in the mode of this `NUMBER` in the table")
 	c.fs.StringVar(&m.vary, "vary", "", "root locus over a value of the case, `PATH=FROM:TO[:N]`, and the critical value between; several paths with commas are moved together")
-	c.fs.Var(&m.near, "near", "find the modes nearest this frequency, `Hz`, alone; may be repeated (default for systems of more than 700 unknowns: 0, 5, 15, 40, 100 and 300)")
+	c.fs.Var(&m.near, "near", "find the modes nearest this frequency, `Hz`, alone; may be repeated (default for systems of more than 700 unknowns: 0, 5, 15, 40, 100 and 300; of more than 5000: 0)")
 	c.fs.IntVar(&m.count, "count", 20, "how many modes to find near each frequency")
 	c.fs.BoolVar(&m.all, "all", false, "find all modes of a large system too")
 	c.fs.StringVar(&m.export, "export", "", "write A, B, C and D in Matrix Market form, and what their rows and columns stand for, into `DIR`")
@@ -60,6 +62,11 @@ func modesFlags(c *call) {
 // all are asked for: the time for all grows with the cube.
 const largeSystem = 700
 
+// hugeSystem is the number of unknowns from which only the modes nearest zero are
+// found unless others are asked for: oscillations of many like devices lie in
+// clusters that take ten seconds each at 1000 inverters.
+const hugeSystem = 5000
+
 // analysis says which modes are looked for.
 func (c *call) analysis(unknowns int) (*modes.Options, error) {
 	m := &c.modes
@@ -76,6 +83,9 @@ func (c *call) analysis(unknowns int) (*modes.Options, error) {
 	}
 	if len(m.near) == 0 && !m.all && unknowns > largeSystem {
 		o.Shifts = modes.DefaultShifts()
+		if unknowns > hugeSystem {
+			o.Shifts = o.Shifts[:1]
+		}
 	}
 	return o, nil
 }
@@ -94,10 +104,37 @@ func (c *call) point(ctx context.Context, k *cases.Case, r []cases.DetailRule) (
 	return sim, nil
 }
 
+// conflict tells of options that ask for two different things.
+func (m *modesOptions) conflict() error {
+	var main, with []string
+	for _, o := range []struct {
+		name     string
+		set, own bool
+	}{
+		{"--vary", m.vary != "", true}, {"--impedance", m.impedance != "", true}, {"--response", m.response != "", true},
+		{"--against", m.against != "", false}, {"--bandwidth", m.bandwidth != 0, false}, {"--export", m.export != "", false},
+		{"--mode", m.mode != 0, false},
+	} {
+		switch {
+		case o.set && o.own:
+			main = append(main, o.name)
+		case o.set:
+			with = append(with, o.name)
+		}
+	}
+	if len(main) == 0 || len(main) == 1 && len(with) == 0 {
+		return nil
+	}
+	return fmt.Errorf("%w: %s: each is a study of its own; give one of them alone", errUsage, strings.Join(append(main, with...), ", "))
+}
+
 func cmdModes(ctx context.Context, c *call) error {
 	m := &c.modes
 	if !(m.at >= 0) || math.IsInf(m.at, 0) {
 		return fmt.Errorf("%w: --at %g: want a time in s", errUsage, m.at)
+	}
+	if err := m.conflict(); err != nil {
+		return err
 	}
 	if m.impedance != "" || m.response != "" {
 		if !(m.from > 0 && m.to > m.from) || math.IsInf(m.to, 0) || m.points < 2 {
@@ -119,6 +156,101 @@ func cmdModes(ctx context.Context, c *call) error {
 	if err != nil {
 		return err
 	}
+	fmt.Fprintf(c.text(), "%s: %s\n", k.Name, k.Title)
+	switch {
+	case m.impedance != "":
+		return c.impedance(sim)
+	case m.response != "":
+		return c.response(sim)
+	}
+	return c.table(ctx, k, sim, base)
+}
+
+// sheet adds a picture to the files unless pictures aren't wanted.
+func (c *call) sheet(files *[]output.File, s *output.Sheet, err error) error {
+	if err != nil || c.noPlots {
+		return err
+	}
+	*files = append(*files, output.File{Name: s.Name + ".svg", Write: s.WriteSVG})
+	return nil
+}
+
+// impedance prints what is seen at a bus.
+func (c *call) impedance(sim *engine.Simulation) error {
+	m := &c.modes
+	l, err := sim.Linearise(&engine.LinearOptions{Inputs: []string{}, Outputs: []string{}})
+	if err != nil {
+		return err
+	}
+	z, err := modes.BusImpedance(l, m.impedance, modes.LogSpace(m.from, m.to, m.points))
+	if err != nil {
+		return fmt.Errorf("%w: %w", errUsage, err)
+	}
+	if err := print(c, z, nil); err != nil {
+		return err
+	}
+	files := []output.File{{Name: "impedance.csv", Write: z.WriteCSV}}
+	var curves []output.FrequencyCurve
+	for _, e := range []struct {
+		name string
+		i, j int
+	}{{"dd", 0, 0}, {"dq", 0, 1}, {"qd", 1, 0}, {"qq", 1, 1}} {
+		h := make([]complex128, len(z.Hz))
+		for n := range h {
+			h[n] = z.Z[n][e.i][e.j]
+		}
+		curves = append(curves, output.FrequencyCurve{Name: "Z " + e.name, H: h})
+	}
+	s, err := output.FrequencyPlot("impedance", "impedance at "+m.impedance, "ohm", z.Hz, curves)
+	if err := c.sheet(&files, s, err); err != nil {
+		return err
+	}
+	return c.files(files)
+}
+
+// response prints frequency responses from setpoints to channels.
+func (c *call) response(sim *engine.Simulation) error {
+	m := &c.modes
+	in, out, ok := strings.Cut(m.response, ":")
+	if !ok {
+		return fmt.Errorf("%w: --response %q: want SETPOINT:CHANNEL", errUsage, m.response)
+	}
+	l, err := sim.Linearise(&engine.LinearOptions{Inputs: []string{in}, Outputs: []string{out}})
+	if err != nil {
+		return fmt.Errorf("%w: %w", errUsage, err)
+	}
+	r, err := modes.FrequencyResponse(l, modes.LogSpace(m.from, m.to, m.points))
+	if err != nil {
+		return err
+	}
+	if err := print(c, r, nil); err != nil {
+		return err
+	}
+	files := []output.File{{Name: "response.csv", Write: r.WriteCSV}}
+	var curves []output.FrequencyCurve
+	unit := r.Outputs[0].Unit + " per " + r.Inputs[0].Unit
+	for i, w := range r.Outputs {
+		for j, u := range r.Inputs {
+			h := make([]complex128, len(r.Hz))
+			for n := range h {
+				h[n] = r.H[n][i][j]
+			}
+			curves = append(curves, output.FrequencyCurve{Name: u.Name + " to " + w.Name, H: h})
+			if unit != w.Unit+" per "+u.Unit {
+				unit = "channel's unit per setpoint's"
+			}
+		}
+	}
+	s, err := output.FrequencyPlot("response", "response from "+in+" to "+out, unit, r.Hz, curves)
+	if err := c.sheet(&files, s, err); err != nil {
+		return err
+	}
+	return c.files(files)
+}
+
+// table prints the modes, and what goes with them.
+func (c *call) table(ctx context.Context, k *cases.Case, sim *engine.Simulation, base []cases.DetailRule) error {
+	m := &c.modes
 	o, err := c.analysis(sim.Unknowns())
 	if err != nil {
 		return err
@@ -131,87 +263,47 @@ func cmdModes(ctx context.Context, c *call) error {
 	if err != nil {
 		return err
 	}
-	var files []output.File
-	picture := func(s *output.Sheet, err error) error {
-		if err != nil || c.noPlots {
-			return err
-		}
-		files = append(files, output.File{Name: s.Name + ".svg", Write: s.WriteSVG})
-		return nil
-	}
-	say := c.stdout
-	if c.asJSON || c.asCSV {
-		say = io.Discard
-	}
-	fmt.Fprintf(say, "%s: %s\n", k.Name, k.Title)
-	switch {
-	case m.impedance != "":
-		z, err := modes.BusImpedance(l, m.impedance, modes.LogSpace(m.from, m.to, m.points))
-		if err != nil {
-			return fmt.Errorf("%w: %w", errUsage, err)
-		}
-		if err := print(c, z, nil); err != nil {
-			return err
-		}
-		files = append(files, output.File{Name: "impedance.csv", Write: z.WriteCSV})
-		var curves []output.FrequencyCurve
-		for _, e := range []struct {
-			name string
-			i, j int
-		}{{"dd", 0, 0}, {"dq", 0, 1}, {"qd", 1, 0}, {"qq", 1, 1}} {
-			h := make([]complex128, len(z.Hz))
-			for n := range h {
-				h[n] = z.Z[n][e.i][e.j]
-			}
-			curves = append(curves, output.FrequencyCurve{Name: "Z " + e.name, H: h})
-		}
-		if err := picture(output.FrequencyPlot("impedance", "impedance at "+m.impedance, "ohm", z.Hz, curves)); err != nil {
-			return err
-		}
-		return c.files(files)
-	case m.response != "":
-		in, out, ok := strings.Cut(m.response, ":")
-		if !ok {
-			return fmt.Errorf("%w: --response %q: want SETPOINT:CHANNEL", errUsage, m.response)
-		}
-		l, err := sim.Linearise(&engine.LinearOptions{Inputs: []string{in}, Outputs: []string{out}})
-		if err != nil {
-			return fmt.Errorf("%w: %w", errUsage, err)
-		}
-		r, err := modes.FrequencyResponse(l, modes.LogSpace(m.from, m.to, m.points))
-		if err != nil {
-			return err
-		}
-		if err := print(c, r, nil); err != nil {
-			return err
-		}
-		files = append(files, output.File{Name: "response.csv", Write: r.WriteCSV})
-		var curves []output.FrequencyCurve
-		for i, w := range r.Outputs {
-			for j, u := range r.Inputs {
-				h := make([]complex128, len(r.Hz))
-				for n := range h {
-					h[n] = r.H[n][i][j]
-				}
-				curves = append(curves, output.FrequencyCurve{Name: u.Name + " to " + w.Name, H: h})
-			}
-		}
-		if err := picture(output.FrequencyPlot("response", "response from "+in+" to "+out, r.Outputs[0].Unit+" per "+r.Inputs[0].Unit, r.Hz, curves)); err != nil {
-			return err
-		}
-		return c.files(files)
-	}
-
 	rep, err := modes.Analyse(l, o)
 	if err != nil {
 		return err
 	}
-	if err := print(c, rep, rep.WriteJSON); err != nil {
+	say := c.text()
+	if !rep.All {
+		var hz []string
+		for _, s := range o.Shifts {
+			hz = append(hz, strconv.FormatFloat(imag(s)/(2*math.Pi), 'g', 4, 64))
+		}
+		fmt.Fprintf(say, "looked for the %d modes nearest each of %s Hz; --near looks elsewhere, --all for all\n", o.Count, strings.Join(hz, ", "))
+	}
+	files := []output.File{{Name: "modes.txt", Write: rep.WriteText}, {Name: "modes.csv", Write: rep.WriteCSV},
+		{Name: "modes.json", Write: rep.WriteJSON}, {Name: "participation.csv", Write: rep.WriteParticipation}}
+	var match *modes.Comparison
+	named := []output.NamedReport{{Name: "", Report: rep}}
+	if m.against != "" {
+		if match, err = c.match(ctx, k, base, rep, o); err != nil {
+			return err
+		}
+		files = append(files, output.File{Name: "match.txt", Write: match.WriteText}, output.File{Name: "match.csv", Write: match.WriteCSV})
+		named = []output.NamedReport{{Name: match.NameA, Report: rep}, {Name: match.NameB, Report: match.B}}
+	}
+	switch {
+	case match != nil && (c.asJSON || c.asCSV):
+		err = print(c, match, match.WriteJSON)
+		for _, w := range match.Warnings {
+			fmt.Fprintf(c.stderr, "WARNING: %s\n", w)
+		}
+	default:
+		err = print(c, rep, rep.WriteJSON)
+	}
+	if err != nil {
 		return err
 	}
-	files = append(files, output.File{Name: "modes.txt", Write: rep.WriteText}, output.File{Name: "modes.csv", Write: rep.WriteCSV},
-		output.File{Name: "modes.json", Write: rep.WriteJSON}, output.File{Name: "participation.csv", Write: rep.WriteParticipation})
-	named := []output.NamedReport{{Name: "", Report: rep}}
+	if m.mode != 0 {
+		fmt.Fprintln(say)
+		if err := rep.WriteMode(say, m.mode); err != nil {
+			return fmt.Errorf("%w: --mode: %w", errUsage, err)
+		}
+	}
 	if m.bandwidth != 0 {
 		p, err := rep.Propose(2*math.Pi*m.bandwidth, modes.Separation{})
 		if err != nil {
@@ -221,58 +313,78 @@ func cmdModes(ctx context.Context, c *call) error {
 		if err := modes.WriteProposal(say, p); err != nil {
 			return err
 		}
+		files = append(files, output.File{Name: "proposal.csv", Write: func(w io.Writer) error { return modes.WriteProposalCSV(w, p) }})
 	}
-	if m.against != "" {
-		name, spec, ok := strings.Cut(m.against, ":")
-		if !ok {
-			return fmt.Errorf("%w: --against %q: want NAME: PATTERN=LEVEL and more of those behind commas", errUsage, m.against)
-		}
-		extra, err := rules(strings.Split(spec, ","))
-		if err != nil {
-			return err
-		}
-		other, err := c.point(ctx, k, append(append([]cases.DetailRule(nil), base...), extra...))
-		if err != nil {
-			return err
-		}
-		lo, err := other.Linearise(&engine.LinearOptions{Inputs: []string{}, Outputs: []string{}})
-		if err != nil {
-			return err
-		}
-		ro, err := modes.Analyse(lo, o)
-		if err != nil {
-			return err
-		}
-		name = strings.TrimSpace(name)
-		match := modes.Match("as given", rep, name, ro, modes.MatchOptions{})
+	if match != nil {
 		fmt.Fprintln(say)
 		if err := match.WriteText(say); err != nil {
 			return err
 		}
-		files = append(files, output.File{Name: "match.txt", Write: match.WriteText})
-		named = []output.NamedReport{{Name: "as given", Report: rep}, {Name: name, Report: ro}}
 	}
-	if err := picture(output.Eigenvalues(named...)); err != nil {
+	s, err := output.Eigenvalues(named...)
+	if err := c.sheet(&files, s, err); err != nil {
 		return err
 	}
 	if m.export != "" {
-		ss, err := modes.Reduce(l, false)
-		if err != nil {
+		if err := c.exportMatrices(l); err != nil {
 			return err
 		}
-		if err := os.MkdirAll(m.export, 0o777); err != nil {
-			return err
-		}
-		if err := ss.Export(func(name string) (io.WriteCloser, error) { return os.Create(filepath.Join(m.export, name)) }); err != nil {
-			return err
-		}
-		fmt.Fprintf(say, "\n%d states, %d inputs, %d outputs written to %s as A.mtx, B.mtx, C.mtx, D.mtx and names.csv\n", len(ss.States), len(ss.Inputs), len(ss.Outputs), m.export)
 	}
 	if err := c.files(files); err != nil {
 		return err
 	}
 	fmt.Fprintln(say, "\nResults support, and never replace, local codes, utility requirements and a licensed engineer's judgement.")
 	return nil
+}
+
+// match analyses the other setting of --against.
+func (c *call) match(ctx context.Context, k *cases.Case, base []cases.DetailRule, rep *modes.Report, o *modes.Options) (*modes.Comparison, error) {
+	name, spec, ok := strings.Cut(c.modes.against, ":")
+	if !ok {
+		return nil, fmt.Errorf("%w: --against %q: want NAME: PATTERN=LEVEL and more of those behind commas", errUsage, c.modes.against)
+	}
+	extra, err := rules(strings.Split(spec, ","))
+	if err != nil {
+		return nil, err
+	}
+	other, err := c.point(ctx, k, append(append([]cases.DetailRule(nil), base...), extra...))
+	if err != nil {
+		return nil, err
+	}
+	l, err := other.Linearise(&engine.LinearOptions{Inputs: []string{}, Outputs: []string{}})
+	if err != nil {
+		return nil, err
+	}
+	r, err := modes.Analyse(l, o)
+	if err != nil {
+		return nil, err
+	}
+	return modes.Match("as given", rep, strings.TrimSpace(name), r, modes.MatchOptions{}), nil
+}
+
+// exportMatrices writes the state-space form.
+func (c *call) exportMatrices(l *engine.Linear) error {
+	dir := c.modes.export
+	ss, err := modes.Reduce(l, false)
+	if err != nil {
+		return err
+	}
+	if err := os.MkdirAll(dir, 0o777); err != nil {
+		return err
+	}
+	if err := ss.Export(func(name string) (io.WriteCloser, error) { return os.Create(filepath.Join(dir, name)) }); err != nil {
+		return err
+	}
+	fmt.Fprintf(c.text(), "\n%d states, %d inputs, %d outputs written to %s as A.mtx, B.mtx, C.mtx, D.mtx and names.csv\n", len(ss.States), len(ss.Inputs), len(ss.Outputs), dir)
+	return nil
+}
+
+// text is where explanations go: nowhere if JSON or CSV is asked for.
+func (c *call) text() io.Writer {
+	if c.asJSON || c.asCSV {
+		return io.Discard
+	}
+	return c.stdout
 }
 
 // printable is a result that prints itself.
@@ -396,16 +508,21 @@ func (c *call) locus(ctx context.Context, k *cases.Case, base []cases.DetailRule
 	if err != nil {
 		return err
 	}
-	say := c.stdout
-	if c.asCSV {
-		say = io.Discard
-	}
-	name := strings.Join(v.paths, ", ")
-	fmt.Fprintf(say, "%s: %s\nroot locus over %s\n", k.Name, k.Title, name)
-	if err := print(c, l, nil); err != nil {
+	if err := l.FindEdges(ctx, build, o); err != nil {
 		return err
 	}
-	files := []output.File{{Name: "root-locus.txt", Write: l.WriteText}, {Name: "root-locus.csv", Write: l.WriteCSV}}
+	say := c.text()
+	name := strings.Join(v.paths, ", ")
+	fmt.Fprintf(say, "%s: %s\nroot locus over %s\n", k.Name, k.Title, name)
+	if err := print(c, l, l.WriteJSON); err != nil {
+		return err
+	}
+	if c.asCSV {
+		for _, e := range l.Edges {
+			fmt.Fprintf(c.stderr, "critical value %.6g\n", e.Value)
+		}
+	}
+	files := []output.File{{Name: "root-locus.txt", Write: l.WriteText}, {Name: "root-locus.csv", Write: l.WriteCSV}, {Name: "root-locus.json", Write: l.WriteJSON}}
 	if !c.noPlots {
 		s, err := output.RootLocus(name, l)
 		if err != nil {
@@ -413,26 +530,9 @@ func (c *call) locus(ctx context.Context, k *cases.Case, base []cases.DetailRule
 		}
 		files = append(files, output.File{Name: s.Name + ".svg", Write: s.WriteSVG})
 	}
-	stable := func(p modes.LocusPoint) bool { return p.Report != nil && p.Report.Stable }
-	edges := 0
-	for i := 1; i < len(l.Points); i++ {
-		a, b := l.Points[i-1], l.Points[i]
-		if stable(a) == stable(b) {
-			continue
-		}
-		edges++
-		crit, err := modes.FindCritical(ctx, a.Value, b.Value, build, &modes.CriticalOptions{Modes: *o})
-		if err != nil {
-			return err
-		}
-		fmt.Fprintln(say)
-		if err := crit.WriteText(say); err != nil {
-			return err
-		}
-	}
-	if edges == 0 {
+	if len(l.Edges) == 0 {
 		verdict := "unstable, or without an operating point,"
-		if stable(l.Points[0]) {
+		if r := l.Points[0].Report; r != nil && r.Stable {
 			verdict = "stable"
 		}
 		fmt.Fprintf(say, "\n%s at all %d values from %g to %g: no critical value between\n", verdict, len(l.Points), v.from, v.to)

@@ -2,6 +2,7 @@ package main
 
 import (
 	"encoding/json"
+	"math"
 	"os"
 	"path/filepath"
 	"strings"
@@ -26,10 +27,10 @@ func want(t *testing.T, code int, texts []string, args ...string) string {
 func TestModes(t *testing.T) {
 	dir := filepath.Join(t.TempDir(), "modes")
 	want(t, exitOK, []string{
-		"30 states", "stable; rightmost is", "common turn of battery-1's island", "Hz", "timescale", "for a bandwidth of 2 Hz", "voltage loop       yes",
+		"30 states", "stable; rightmost is", "common turn of battery-1's island", "Hz", "scale", "for a bandwidth of 2 Hz", "voltage loop       yes",
 		"phasors, 1/s", "licensed engineer", "eigenvalues.svg",
 	}, "modes", "starter", "--bandwidth", "2", "--against", "phasors: *=quasi-steady", "--out", dir)
-	for _, name := range []string{"modes.txt", "modes.csv", "modes.json", "participation.csv", "match.txt", "eigenvalues.svg"} {
+	for _, name := range []string{"modes.txt", "modes.csv", "modes.json", "participation.csv", "match.txt", "match.csv", "proposal.csv", "eigenvalues.svg"} {
 		if st, err := os.Stat(filepath.Join(dir, name)); err != nil || st.Size() < 200 {
 			t.Errorf("%s: %v", name, err)
 		}
@@ -41,8 +42,15 @@ func TestModes(t *testing.T) {
 	if out := want(t, exitOK, nil, "modes", "starter", "--csv"); strings.Count(out, "\n") != 17 || strings.Contains(out, "engineer") {
 		t.Errorf("as CSV:\n%s", out)
 	}
-	// In the island, after the tie has opened.
-	want(t, exitOK, []string{"modes at t = 0.9 s", "stable"}, "modes", "harbour", "--at", "0.9")
+	// In the island, after the tie has opened, and while the pump starts: two
+	// islands, so two common turns.
+	for _, at := range []string{"0.9", "1.003"} {
+		want(t, exitOK, []string{"modes at t = " + at + " s", "stable", "not a steady state", "common turn of grid's island", "common turn of battery-hill's island"}, "modes", "harbour", "--at", at)
+	}
+	want(t, exitOK, []string{"battery-2        device or bus", "state (power filter)"}, "modes", "starter", "--mode", "2")
+	if err := json.Unmarshal([]byte(want(t, exitOK, nil, "modes", "starter", "--against", "phasors: *=quasi-steady", "--json")), &v); err != nil || len(v["pairs"].([]any)) == 0 {
+		t.Errorf("match as JSON: %v, %v", err, v["pairs"])
+	}
 	// A large system: some modes, unless all are asked for.
 	want(t, exitOK, []string{"all modes found decay"}, "modes", "mesh-100", "--near", "3", "--count", "5")
 }
@@ -56,6 +64,14 @@ func TestModesCriticalGain(t *testing.T) {
 		"modes", "short-lines", "--vary", "device.inverter-1.m,device.inverter-2.m,device.inverter-3.m=5e-5:3e-4:5", "--out", dir)
 	want(t, exitOK, []string{"stable at all 2 values from 5e-05 to 0.0001"},
 		"modes", "short-lines", "--vary", "device.inverter-1.m,device.inverter-2.m,device.inverter-3.m=5e-5:1e-4:2")
+	var v struct {
+		Critical []struct{ Value float64 }
+		Points   []struct{ Stable bool }
+	}
+	out := want(t, exitOK, nil, "modes", "short-lines", "--vary", "device.inverter-1.m,device.inverter-2.m,device.inverter-3.m=5e-5:3e-4:2", "--json")
+	if err := json.Unmarshal([]byte(out), &v); err != nil || len(v.Critical) != 1 || math.Abs(v.Critical[0].Value/1.827116e-4-1) > 1e-6 || !v.Points[0].Stable || v.Points[1].Stable {
+		t.Errorf("root locus as JSON: %v, %+v", err, v)
+	}
 }
 
 func TestModesResponses(t *testing.T) {
@@ -87,6 +103,9 @@ func TestModesWrongUse(t *testing.T) {
 		{"want SETPOINT:CHANNEL", []string{"--response", "battery-1.p"}},
 		{"want NAME: PATTERN=LEVEL", []string{"--against", "quasi-steady"}},
 		{"--bandwidth -1", []string{"--bandwidth", "-1"}},
+		{"give one of them alone", []string{"--impedance", "office", "--export", "x"}},
+		{"give one of them alone", []string{"--vary", "device.battery-1.m=1e-5:1e-4", "--response", "battery-1.p:battery-2.p"}},
+		{"no mode 99, want 1 to 16", []string{"--mode", "99"}},
 		{"from < to", []string{"--impedance", "jetty", "--from", "10", "--to", "1"}},
 	} {
 		want(t, exitUsage, []string{c.text}, append([]string{"modes", "starter"}, c.args...)...)

@@ -34,6 +34,9 @@ type Locus struct {
 	// Branches follow eigenvalues from point to point by nearness: a value a
 	// point, cmplx.NaN() where the branch isn't there.
 	Branches [][]complex128
+	// Edges are the critical values between points, once FindEdges has been
+	// called.
+	Edges []*Critical
 }
 
 // LocusPoint is the analysis for one value of the parameter.
@@ -65,6 +68,29 @@ func Trace(ctx context.Context, values []float64, build Builder, o *Options) (*L
 		return l, errors.Join(append(errs, fmt.Errorf("modes: no operating point for any of %d values", len(values)))...)
 	}
 	return l, nil
+}
+
+// FindEdges finds the critical value between every two neighbouring points
+// whose verdicts differ. build and o are those of Trace.
+func (l *Locus) FindEdges(ctx context.Context, build Builder, o *Options) error {
+	l.Edges = nil
+	co := &CriticalOptions{}
+	if o != nil {
+		co.Modes = *o
+	}
+	stable := func(p LocusPoint) bool { return p.Report != nil && p.Report.Stable }
+	for i := 1; i < len(l.Points); i++ {
+		a, b := l.Points[i-1], l.Points[i]
+		if stable(a) == stable(b) {
+			continue
+		}
+		c, err := FindCritical(ctx, a.Value, b.Value, build, co)
+		if err != nil {
+			return err
+		}
+		l.Edges = append(l.Edges, c)
+	}
+	return nil
 }
 
 // branch connects eigenvalues, the nearest first.
@@ -133,8 +159,8 @@ type Critical struct {
 // CriticalOptions steer FindCritical. nil, or the zero value, gives the stated
 // defaults.
 type CriticalOptions struct {
-	// Precision is the width of the bracket to reach, relative to the value;
-	// 0 means 1e-7.
+	// Precision is the width of the bracket to reach, relative to the value
+	// or, if that is less, to 1e-6 of the interval searched; 0 means 1e-7.
 	Precision float64
 	Modes     Options
 }
@@ -196,7 +222,8 @@ func FindCritical(ctx context.Context, from, to float64, build Builder, o *Criti
 	case stable(out):
 		return nil, fmt.Errorf("modes: the system is stable at both ends: %s, %s", describe(in), describe(out))
 	}
-	for math.Abs(out.value-in.value) > precision*math.Max(math.Abs(in.value), math.Abs(out.value)) {
+	least := 1e-6 * math.Abs(to-from) // an edge at zero has no digits of its own
+	for math.Abs(out.value-in.value) > precision*max(math.Abs(in.value), math.Abs(out.value), least) {
 		v := in.value + (out.value-in.value)/2
 		if v == in.value || v == out.value {
 			break

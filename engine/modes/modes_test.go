@@ -3,6 +3,8 @@ package modes_test
 import (
 	"bytes"
 	"context"
+	"encoding/json"
+	"errors"
 	"math"
 	"math/cmplx"
 	"strings"
@@ -624,6 +626,23 @@ func TestLocus(t *testing.T) {
 			t.Errorf("from %g to %g: %v, want %q", c.from, c.to, err, c.want)
 		}
 	}
+	if err := l.FindEdges(context.Background(), build, nil); err != nil {
+		t.Fatal(err)
+	}
+	// Lost above 1e-3, between the third point and the fourth, and found again
+	// at the fifth.
+	if len(l.Edges) != 2 || l.Edges[0].Lost == nil || l.Edges[1].Lost == nil {
+		t.Errorf("edges: %+v", l.Edges)
+	}
+	var text, doc bytes.Buffer
+	if err := errors.Join(l.WriteText(&text), l.WriteJSON(&doc)); err != nil || strings.Count(text.String(), "critical value 0.001 ") != 2 || !json.Valid(doc.Bytes()) {
+		t.Errorf("%v\n%s\n%s", err, &text, &doc)
+	}
+	// An edge at zero, which has no digits to get right: a negative droop is
+	// unstable.
+	if k, err := modes.FindCritical(context.Background(), -1e-4, 3e-4, build, nil); err != nil || math.Abs(k.Value) > 1e-11 || k.Evaluations > 60 {
+		t.Errorf("edge at zero: %+v, %v", k, err)
+	}
 	ctx, cancel := context.WithCancel(context.Background())
 	cancel()
 	if _, err := modes.Trace(ctx, []float64{1}, build, nil); err == nil {
@@ -726,6 +745,52 @@ func TestIslandsAndIdealSources(t *testing.T) {
 		}
 		if zeros != 1 || neutral != 1 || !r.Stable {
 			t.Errorf("options %+v: %d rotational and %d neutral modes, stable %v; want 1, 1 and true", o, zeros, neutral, r.Stable)
+		}
+	}
+}
+
+// While all swings, the rates turn with the island: J Rotation = Turned, and
+// the common turn is still told apart.
+func TestTurnOfAMovingIsland(t *testing.T) {
+	s := two(t)
+	sim := s.start(nil)
+	if err := sim.At(0.01, engine.Set("load", "g", 1.0/5)); err != nil {
+		t.Fatal(err)
+	}
+	if _, err := sim.Run(context.Background(), 0.03); err != nil {
+		t.Fatal(err)
+	}
+	l := linear(t, sim, nil)
+	if !(l.Drift > 1e-2) {
+		t.Fatalf("drift %g: nothing moves", l.Drift)
+	}
+	is := &l.Islands[0]
+	got, terms := make([]float64, len(l.E)), make([]float64, len(l.E))
+	for j, r := range is.Rotation {
+		for p := l.J.P[j]; p < l.J.P[j+1]; p++ {
+			got[l.J.I[p]] += r * l.J.X[p]
+			terms[l.J.I[p]] += math.Abs(r * l.J.X[p])
+		}
+	}
+	moving := false
+	for i, v := range got {
+		if math.Abs(v-is.Turned[i]) > 1e-7*terms[i]+1e-9 {
+			t.Errorf("%s: J r = %g, the rate turns by %g", l.Unknowns[i].Name, v, is.Turned[i])
+		}
+		moving = moving || math.Abs(is.Turned[i]) > 1e-4*terms[i]
+	}
+	if !moving {
+		t.Error("no rate turns by a measurable amount")
+	}
+	for _, o := range []*modes.Options{nil, {Shifts: []complex128{-20}, Count: 5}} {
+		zeros := 0
+		for _, m := range analyse(t, l, o).Modes {
+			if m.Zero {
+				zeros++
+			}
+		}
+		if zeros != 1 {
+			t.Errorf("options %+v: %d common turns, want 1", o, zeros)
 		}
 	}
 }

@@ -9,6 +9,7 @@ import (
 	"math/cmplx"
 	"strconv"
 	"strings"
+	"unicode/utf8"
 )
 
 // printer remembers the first error of a writer.
@@ -82,34 +83,126 @@ func (rep *Report) WriteText(w io.Writer) error {
 	for _, n := range rep.Notes {
 		p.printf("note: %s\n", n)
 	}
-	p.printf("\n%5s %28s %10s %9s %11s  %-30s %s\n", "mode", "eigenvalue, 1/s", "Hz", "damping", "time const.", "dynamics", "main participants")
+	p.printf("\n")
+	scale := make(map[int]string)
+	for k, t := range rep.Timescales {
+		for _, n := range t.Modes {
+			scale[n] = strconv.Itoa(k + 1)
+		}
+	}
+	rows := [][]string{{"mode", "eigenvalue, 1/s", "Hz", "damping", "time const.", "scale", "dynamics", "main participants"}}
 	for i := range rep.Modes {
 		m := &rep.Modes[i]
-		value := fmt.Sprintf("%.6g", real(m.Value))
-		hz := ""
+		hz, damping, tau := "", "", ""
 		if imag(m.Value) != 0 {
-			value += fmt.Sprintf(" ± j%.6g", imag(m.Value))
 			hz = fmt.Sprintf("%.4g", m.Frequency)
 		}
-		damping, tau := "", ""
 		if !m.Zero && !m.Neutral {
 			damping, tau = fmt.Sprintf("%.2f %%", 100*m.Damping), seconds(m.TimeConstant)
 		}
 		who := join(rep.Participants(m, 3, 0.01), 3)
+		if who == "" && m.Participation != nil {
+			if who = join(m.ByDevice, 3); who == "" && len(m.ByDevice) > 0 {
+				who = fmt.Sprintf("spread over %d devices and buses, none above %.2g %%", len(m.ByDevice), 100*m.ByDevice[0].Value)
+			}
+		}
 		switch k := m.kind(); {
 		case k != "" && who != "":
 			who = k + "; " + who
 		case k != "":
 			who = k
 		}
-		p.printf("%5d %28s %10s %9s %11s  %-30s %s\n", m.Number, value, hz, damping, tau, join(m.ByDynamics, 2), who)
+		rows = append(rows, []string{strconv.Itoa(m.Number), m.value(6), hz, damping, tau, scale[m.Number], join(m.ByDynamics, 2), who})
 	}
+	p.table(rows, "rrrrrrll")
 	if len(rep.Timescales) > 0 {
-		p.printf("\n%9s %26s %6s  %s\n", "timescale", "magnitudes, 1/s", "modes", "dynamics")
+		p.printf("\n")
+		rows := [][]string{{"scale", "magnitudes, 1/s", "modes", "dynamics"}}
+		for k, t := range rep.Timescales {
+			rows = append(rows, []string{strconv.Itoa(k + 1), fmt.Sprintf("%.4g ... %.4g", t.Slowest, t.Fastest), strconv.Itoa(len(t.Modes)), join(t.ByDynamics, 4)})
+		}
+		p.table(rows, "rrrl")
 	}
-	for k, t := range rep.Timescales {
-		p.printf("%9d %26s %6d  %s\n", k+1, fmt.Sprintf("%.4g ... %.4g", t.Slowest, t.Fastest), len(t.Modes), join(t.ByDynamics, 4))
+	p.printf("\nHz are those of the rotating frame: in the phases a mode shows at the network's frequency plus and minus that.\n")
+	return p.err
+}
+
+// value prints an eigenvalue, or a pair of them, with some digits.
+func (m *Mode) value(digits int) string {
+	if imag(m.Value) == 0 {
+		return fmt.Sprintf("%.*g", digits, real(m.Value))
 	}
+	return fmt.Sprintf("%.*g ± j%.*g", digits, real(m.Value), digits, imag(m.Value))
+}
+
+// table prints rows of cells, each column as wide as its widest cell, to the
+// left (l) or right (r).
+func (p *printer) table(rows [][]string, sides string) {
+	width := make([]int, len(sides))
+	for _, r := range rows {
+		for i, c := range r {
+			width[i] = max(width[i], utf8.RuneCountInString(c))
+		}
+	}
+	for _, r := range rows {
+		var b strings.Builder
+		for i, c := range r {
+			pad := strings.Repeat(" ", width[i]-utf8.RuneCountInString(c))
+			if i > 0 {
+				b.WriteString("  ")
+			}
+			if sides[i] == 'r' {
+				b.WriteString(pad + c)
+			} else {
+				b.WriteString(c + pad)
+			}
+		}
+		p.printf("%s\n", strings.TrimRight(b.String(), " "))
+	}
+}
+
+// WriteMode prints one mode in full: who takes part in it, by device or bus, by
+// kind of dynamics and by state, down to one per cent. The error tells of a number that isn't
+// in the report.
+func (rep *Report) WriteMode(w io.Writer, number int) error {
+	if number < 1 || number > len(rep.Modes) {
+		return fmt.Errorf("modes: no mode %d, want 1 to %d", number, len(rep.Modes))
+	}
+	m := &rep.Modes[number-1]
+	p := &printer{w: w}
+	p.printf("%s\n", m)
+	if !m.Zero && !m.Neutral {
+		p.printf("time constant %s, condition %.3g\n", seconds(m.TimeConstant), m.Condition)
+	}
+	if m.Participation == nil {
+		p.printf("no participation: this mode is tied to another zero eigenvalue\n")
+		return p.err
+	}
+	base := func(name string) string {
+		for _, u := range rep.States {
+			if u.Name == name {
+				return u.Dynamics
+			}
+		}
+		return ""
+	}
+	rows := [][]string{{"part", "of", "is"}}
+	for _, g := range []struct {
+		what string
+		list []Share
+	}{{"device or bus", m.ByDevice}, {"dynamics", m.ByDynamics}, {"state", rep.Participants(m, len(rep.States), 0.01)}} {
+		for _, s := range g.list {
+			if s.Value < 0.01 {
+				break
+			}
+			what := g.what
+			if what == "state" && base(s.Name) != "" {
+				what += " (" + base(s.Name) + ")"
+			}
+			rows = append(rows, []string{fmt.Sprintf("%.1f %%", 100*s.Value), s.Name, what})
+		}
+	}
+	p.table(rows, "rll")
 	return p.err
 }
 
@@ -127,31 +220,42 @@ func WriteProposal(w io.Writer, list []Proposal) error {
 	return p.err
 }
 
-// WriteText prints the modes that two settings share side by side, warnings
-// first.
+// WriteProposalCSV writes a row for every group of dynamics.
+func WriteProposalCSV(w io.Writer, list []Proposal) error {
+	c := csv.NewWriter(w)
+	rows := [][]string{{"dynamics", "drop", "slowest_1/s", "mode", "share_below", "of_mode", "reason"}}
+	for _, s := range list {
+		rows = append(rows, []string{s.Dynamics, strconv.FormatBool(s.Drop), number(s.Slowest), strconv.Itoa(s.Mode), number(s.Share), strconv.Itoa(s.Of), s.Reason})
+	}
+	return c.WriteAll(rows)
+}
+
+// WriteText prints the modes that two settings share side by side, the first
+// of the warnings before them.
 func (c *Comparison) WriteText(w io.Writer) error {
 	p := &printer{w: w}
-	for _, s := range c.Warnings {
+	const most = 12
+	for i, s := range c.Warnings {
+		if i == most {
+			p.printf("WARNING: %d more such modes, marked below\n", len(c.Warnings)-i)
+			break
+		}
 		p.printf("WARNING: %s\n", s)
 	}
 	if len(c.Warnings) > 0 {
 		p.printf("\n")
 	}
-	p.printf("%5s %26s %9s | %5s %26s %9s | %9s %11s\n", "mode", c.NameA+", 1/s", "damping", "mode", c.NameB+", 1/s", "damping", "distance", "correlation")
-	text := func(m *Mode) string {
-		if imag(m.Value) == 0 {
-			return fmt.Sprintf("%.5g", real(m.Value))
-		}
-		return fmt.Sprintf("%.5g ± j%.5g", real(m.Value), imag(m.Value))
-	}
+	rows := [][]string{{"mode", c.NameA + ", 1/s", "damping", "", "mode", c.NameB + ", 1/s", "damping", "", "distance", "correlation", ""}}
 	for _, k := range c.Pairs {
 		a, b := &c.A.Modes[k.A-1], &c.B.Modes[k.B-1]
 		mark := ""
 		if k.Warning != "" {
-			mark = "  <== differs"
+			mark = "<== differs"
 		}
-		p.printf("%5d %26s %7.2f %% | %5d %26s %7.2f %% | %9.3g %11.3f%s\n", a.Number, text(a), 100*a.Damping, b.Number, text(b), 100*b.Damping, k.Distance, k.Correlation, mark)
+		rows = append(rows, []string{strconv.Itoa(a.Number), a.value(5), fmt.Sprintf("%.2f %%", 100*a.Damping), "|",
+			strconv.Itoa(b.Number), b.value(5), fmt.Sprintf("%.2f %%", 100*b.Damping), "|", fmt.Sprintf("%.3g", k.Distance), fmt.Sprintf("%.3f", k.Correlation), mark})
 	}
+	p.table(rows, "rrrlrrrlrrl")
 	for _, s := range []struct {
 		name string
 		rep  *Report
@@ -166,11 +270,65 @@ func (c *Comparison) WriteText(w io.Writer) error {
 				p.printf(" and %d more", len(s.list)-i)
 				break
 			}
-			p.printf(" %d (%s)", n, text(&s.rep.Modes[n-1]))
+			p.printf(" %d (%s)", n, s.rep.Modes[n-1].value(5))
 		}
 		p.printf("\n")
 	}
 	return p.err
+}
+
+// WriteCSV writes a row for every pair, and for every mode without a partner.
+func (c *Comparison) WriteCSV(w io.Writer) error {
+	out := csv.NewWriter(w)
+	rows := [][]string{{"mode_a", "real_a_1/s", "imaginary_a_1/s", "damping_a", "mode_b", "real_b_1/s", "imaginary_b_1/s", "damping_b", "distance", "correlation", "warning"}}
+	cells := func(rep *Report, n int) []string {
+		if n == 0 {
+			return []string{"", "", "", ""}
+		}
+		m := &rep.Modes[n-1]
+		return []string{strconv.Itoa(n), number(real(m.Value)), number(imag(m.Value)), number(m.Damping)}
+	}
+	for _, k := range c.Pairs {
+		rows = append(rows, append(append(cells(c.A, k.A), cells(c.B, k.B)...), number(k.Distance), number(k.Correlation), k.Warning))
+	}
+	for _, n := range c.OnlyA {
+		rows = append(rows, append(append(cells(c.A, n), cells(c.B, 0)...), "", "", ""))
+	}
+	for _, n := range c.OnlyB {
+		rows = append(rows, append(append(cells(c.A, 0), cells(c.B, n)...), "", "", ""))
+	}
+	return out.WriteAll(rows)
+}
+
+// WriteJSON writes the pairs and both reports, without vectors.
+func (c *Comparison) WriteJSON(w io.Writer) error {
+	type pair struct {
+		A           int     `json:"mode_a"`
+		B           int     `json:"mode_b"`
+		Distance    float64 `json:"distance"`
+		Correlation float64 `json:"correlation"`
+		Warning     string  `json:"warning,omitempty"`
+	}
+	out := struct {
+		Warnings []string   `json:"warnings"`
+		NameA    string     `json:"name_a"`
+		NameB    string     `json:"name_b"`
+		Pairs    []pair     `json:"pairs"`
+		OnlyA    []int      `json:"only_a"`
+		OnlyB    []int      `json:"only_b"`
+		A        jsonReport `json:"a"`
+		B        jsonReport `json:"b"`
+	}{append([]string{}, c.Warnings...), c.NameA, c.NameB, []pair{}, append([]int{}, c.OnlyA...), append([]int{}, c.OnlyB...), c.A.json(), c.B.json()}
+	for _, k := range c.Pairs {
+		out.Pairs = append(out.Pairs, pair(k))
+	}
+	return writeJSON(w, out)
+}
+
+func writeJSON(w io.Writer, v any) error {
+	e := json.NewEncoder(w)
+	e.SetIndent("", " ")
+	return e.Encode(v)
 }
 
 func number(v float64) string { return strconv.FormatFloat(v, 'g', -1, 64) }
@@ -237,33 +395,39 @@ func finite(v float64) *float64 {
 	return &v
 }
 
-// WriteJSON writes the report without vectors.
-func (rep *Report) WriteJSON(w io.Writer) error {
-	out := struct {
-		Time       float64     `json:"time_s"`
-		States     int         `json:"states"`
-		Dependent  []string    `json:"dependent,omitempty"`
-		All        bool        `json:"all"`
-		Stable     bool        `json:"stable"`
-		Drift      float64     `json:"drift_1/s"`
-		Notes      []string    `json:"notes,omitempty"`
-		Modes      []jsonMode  `json:"modes"`
-		Timescales []Timescale `json:"timescales"`
-	}{rep.Time, len(rep.States), rep.Dependent, rep.All, rep.Stable, rep.Drift, rep.Notes, []jsonMode{}, rep.Timescales}
-	for i := range rep.Modes {
-		m := &rep.Modes[i]
-		j := jsonMode{Mode: m.Number, Real: real(m.Value), Imaginary: imag(m.Value), Frequency: m.Frequency,
-			TimeConstant: finite(m.TimeConstant), Condition: finite(m.Condition), Kind: m.kind(),
-			Devices: m.ByDevice, Dynamics: m.ByDynamics, Participants: rep.Participants(m, 10, 0.01)}
-		if !m.Zero {
-			j.Damping = &m.Damping
-		}
-		out.Modes = append(out.Modes, j)
-	}
-	e := json.NewEncoder(w)
-	e.SetIndent("", " ")
-	return e.Encode(out)
+// jsonReport is a report in JSON.
+type jsonReport struct {
+	Time       float64     `json:"time_s"`
+	States     int         `json:"states"`
+	Dependent  []string    `json:"dependent,omitempty"`
+	All        bool        `json:"all"`
+	Stable     bool        `json:"stable"`
+	Drift      float64     `json:"drift_1/s"`
+	Notes      []string    `json:"notes,omitempty"`
+	Modes      []jsonMode  `json:"modes"`
+	Timescales []Timescale `json:"timescales"`
 }
+
+func (rep *Report) json() jsonReport {
+	out := jsonReport{rep.Time, len(rep.States), rep.Dependent, rep.All, rep.Stable, rep.Drift, rep.Notes, []jsonMode{}, rep.Timescales}
+	for i := range rep.Modes {
+		out.Modes = append(out.Modes, rep.jsonMode(&rep.Modes[i]))
+	}
+	return out
+}
+
+func (rep *Report) jsonMode(m *Mode) jsonMode {
+	j := jsonMode{Mode: m.Number, Real: real(m.Value), Imaginary: imag(m.Value), Frequency: m.Frequency,
+		TimeConstant: finite(m.TimeConstant), Condition: finite(m.Condition), Kind: m.kind(),
+		Devices: m.ByDevice, Dynamics: m.ByDynamics, Participants: rep.Participants(m, 10, 0.01)}
+	if !m.Zero {
+		j.Damping = &m.Damping
+	}
+	return j
+}
+
+// WriteJSON writes the report without vectors.
+func (rep *Report) WriteJSON(w io.Writer) error { return writeJSON(w, rep.json()) }
 
 // WriteCSV writes a row for every value of the parameter and mode: the value,
 // real and imaginary part, damping, and the branch it belongs to, from 1; or a
@@ -289,7 +453,8 @@ func (l *Locus) WriteCSV(w io.Writer) error {
 	return c.WriteAll(rows)
 }
 
-// WriteText prints, for every value, the verdict and the rightmost modes.
+// WriteText prints, for every value, the verdict and the rightmost modes, and
+// below them the critical values where [Locus.FindEdges] has been.
 func (l *Locus) WriteText(w io.Writer) error {
 	p := &printer{w: w}
 	p.printf("%14s  %-9s %s\n", "value", "verdict", "rightmost")
@@ -308,7 +473,67 @@ func (l *Locus) WriteText(w io.Writer) error {
 		}
 		p.printf("%14.8g  %-9s %s\n", k.Value, verdict, text)
 	}
+	for _, c := range l.Edges {
+		p.printf("\n")
+		if p.err == nil {
+			p.err = c.WriteText(w)
+		}
+	}
 	return p.err
+}
+
+// WriteJSON writes the verdicts, the branches and the critical values.
+func (l *Locus) WriteJSON(w io.Writer) error {
+	type point struct {
+		Value     float64   `json:"value"`
+		Stable    bool      `json:"stable"`
+		Rightmost *jsonMode `json:"rightmost,omitempty"`
+		Error     string    `json:"error,omitempty"`
+	}
+	type critical struct {
+		Value  float64  `json:"value"`
+		Stable float64  `json:"stable_at"`
+		Beyond float64  `json:"not_at"`
+		Lost   string   `json:"lost,omitempty"` // why there is no operating point beyond
+		Mode   jsonMode `json:"mode"`
+	}
+	out := struct {
+		Points   []point        `json:"points"`
+		Critical []critical     `json:"critical"`
+		Branches [][][2]float64 `json:"branches_1/s"`  // real, imaginary part
+		Indices  [][]int        `json:"branch_points"` // which of Points each belongs to
+	}{[]point{}, []critical{}, [][][2]float64{}, [][]int{}}
+	for _, k := range l.Points {
+		x := point{Value: k.Value}
+		if k.Err != nil {
+			x.Error = k.Err.Error()
+		} else {
+			x.Stable = k.Report.Stable
+			if m := k.Report.Rightmost(); m != nil {
+				j := k.Report.jsonMode(m)
+				x.Rightmost = &j
+			}
+		}
+		out.Points = append(out.Points, x)
+	}
+	for _, b := range l.Branches {
+		var at []int
+		var z [][2]float64
+		for k, v := range b {
+			if !cmplx.IsNaN(v) {
+				at, z = append(at, k), append(z, [2]float64{real(v), imag(v)})
+			}
+		}
+		out.Branches, out.Indices = append(out.Branches, z), append(out.Indices, at)
+	}
+	for _, c := range l.Edges {
+		x := critical{Value: c.Value, Stable: c.Stable, Beyond: c.Beyond, Mode: c.Report.jsonMode(&c.Mode)}
+		if c.Lost != nil {
+			x.Lost = c.Lost.Error()
+		}
+		out.Critical = append(out.Critical, x)
+	}
+	return writeJSON(w, out)
 }
 
 // WriteText prints the critical value and what happens there.
