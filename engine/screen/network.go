@@ -17,6 +17,10 @@ type Node struct {
 	Speed float64
 	// P is P*, W: what a source gives at its Speed, or, negative, what is drawn.
 	P float64
+	// Share is what a source gives with the angles of all nodes alike, W: its part
+	// of what is drawn and lost in a network whose buses are eliminated (see
+	// [Circuit.Reduce]).
+	Share float64
 	// Rating is a source's rating, VA; 0 if unknown.
 	Rating float64
 }
@@ -47,8 +51,8 @@ func (n *Network) check() error {
 		if !(v.D >= 0) {
 			bad("node %s: D is %g W s/rad, want 0 or more", v.Name, v.D)
 		}
-		if math.IsNaN(v.P) || math.IsInf(v.P, 0) || math.IsNaN(v.Speed) || math.IsInf(v.Speed, 0) {
-			bad("node %s: P is %g W and the speed %g rad/s, want finite values", v.Name, v.P, v.Speed)
+		if math.IsNaN(v.P) || math.IsInf(v.P, 0) || math.IsNaN(v.Share) || math.IsInf(v.Share, 0) || math.IsNaN(v.Speed) || math.IsInf(v.Speed, 0) {
+			bad("node %s: P is %g W, the share %g W and the speed %g rad/s, want finite values", v.Name, v.P, v.Share, v.Speed)
 		}
 	}
 	for _, e := range n.Edges {

@@ -25,14 +25,15 @@ type Source struct {
 // Flow is what an edge carries in step.
 type Flow struct {
 	Edge
-	P     float64 // W, from From to To
-	Angle float64 // theta_from - theta_to, rad
+	P      float64 // W, from From to To
+	Linear float64 // W, what the linear network would carry, A (B' L^+ p)
+	Angle  float64 // theta_from - theta_to, rad
 }
 
 // Result is the screen of one island.
 type Result struct {
 	// Speed is the speed of all in step, rad/s, in closed form:
-	// (sum D w* + sum P*) / sum D over all nodes.
+	// (sum D w* + sum P* - sum share) / sum D over all nodes.
 	Speed   float64
 	Sources []Source
 	// Tracked tells that every source gives its P*, one that holds its speed left
@@ -66,8 +67,9 @@ type Result struct {
 	// across it, and MarginLost that at which no stable state is left; of a tree
 	// they are the same. +Inf if nothing is transferred, NaN if not InStep.
 	Margin90, MarginLost float64
-
-	Notes []string
+	// Modes are the eigenvalues of the phases about that state, 1/s, real and
+	// negative, slowest first; that of all phases together, 0, is left out.
+	Modes []float64
 }
 
 // Screen analyses a connected network. The error joins all faults of the network,
@@ -122,12 +124,147 @@ func Screen(n *Network, o *Options) (*Result, error) {
 	if !r.InStep {
 		return r, nil
 	}
-	for _, e := range edges {
+	for k, e := range edges {
 		d := theta[e.From] - theta[e.To]
-		r.Flows = append(r.Flows, Flow{Edge: e, P: e.A * math.Sin(d), Angle: d})
+		r.Flows = append(r.Flows, Flow{Edge: e, P: e.A * math.Sin(d), Linear: flows[k], Angle: d})
 		r.Widest = math.Max(r.Widest, math.Abs(d))
 	}
-	return r, nil
+	r.Modes, err = modes(n, w.edges, theta)
+	return r, err
+}
+
+// modes are the eigenvalues of D theta' = -L theta with L = B diag(a cos(angle)) B':
+// nodes without damping are eliminated, one that holds its speed stands still.
+func modes(n *Network, edges []Edge, theta []float64) ([]float64, error) {
+	var moving, following []int
+	at := make([]int, len(n.Nodes))
+	for i := range n.Nodes {
+		switch d := n.Nodes[i].D; {
+		case math.IsInf(d, 1):
+			at[i] = -1
+		case d > 0:
+			at[i] = len(moving)
+			moving = append(moving, i)
+		default:
+			following = append(following, i)
+		}
+	}
+	m := len(moving)
+	for k, i := range following {
+		at[i] = m + k
+	}
+	total := m + len(following)
+	if m == 0 {
+		return nil, nil
+	}
+	l := mat.NewSymDense(total, nil)
+	add := func(i, j int, x float64) {
+		if i >= 0 && j >= 0 {
+			l.SetSym(i, j, l.At(i, j)+x)
+		}
+	}
+	for _, e := range edges {
+		a := e.A * math.Cos(theta[e.From]-theta[e.To])
+		i, j := at[e.From], at[e.To]
+		add(i, i, a)
+		add(j, j, a)
+		add(i, j, -a)
+	}
+	// L_mm - L_mf L_ff^-1 L_fm, then scaled by D^-1/2 from both sides.
+	s := mat.NewSymDense(m, nil)
+	s.CopySym(l.SliceSym(0, m))
+	if f := len(following); f > 0 {
+		ff := l.SliceSym(m, total)
+		fm := mat.NewDense(f, m, nil)
+		for i := range f {
+			for j := range m {
+				fm.Set(i, j, l.At(m+i, j))
+			}
+		}
+		var c mat.Cholesky
+		if !c.Factorize(ff) {
+			return nil, errors.New("screen: the network's matrix at nodes without damping isn't positive definite")
+		}
+		var x, y mat.Dense
+		if err := c.SolveTo(&x, fm); err != nil {
+			var ill mat.Condition
+			if !errors.As(err, &ill) {
+				return nil, fmt.Errorf("screen: %w", err)
+			}
+		}
+		y.Mul(fm.T(), &x)
+		for i := range m {
+			for j := i; j < m; j++ {
+				s.SetSym(i, j, s.At(i, j)-(y.At(i, j)+y.At(j, i))/2)
+			}
+		}
+	}
+	for i := range m {
+		for j := i; j < m; j++ {
+			s.SetSym(i, j, s.At(i, j)/math.Sqrt(n.Nodes[moving[i]].D*n.Nodes[moving[j]].D))
+		}
+	}
+	var e mat.EigenSym
+	if !e.Factorize(s, false) {
+		return nil, errors.New("screen: the eigenvalues of the phases can't be found")
+	}
+	values := e.Values(nil) // ascending
+	if m+len(following) == len(n.Nodes) {
+		values = values[1:] // nothing holds the angle: all together
+	}
+	out := make([]float64, len(values))
+	for k, v := range values {
+		out[k] = -v
+	}
+	return out, nil
+}
+
+// Settle finds the state in step next to the given angles, rad, one for each node, by
+// Newton's method: a loop of five branches or more can have several that differ by
+// power that circulates. It returns the angles, the first node's 0, and the largest
+// across an edge, wound to within pi. The error tells that there is none, or that it
+// isn't stable. [Winding] tells them apart.
+func Settle(n *Network, theta []float64) (angles []float64, widest float64, err error) {
+	if len(theta) != len(n.Nodes) {
+		return nil, 0, fmt.Errorf("screen: %d angles for %d nodes", len(theta), len(n.Nodes))
+	}
+	if err := n.check(); err != nil {
+		return nil, 0, err
+	}
+	if len(n.Islands()) != 1 {
+		return nil, 0, fmt.Errorf("screen: %d parts that nothing joins, want one", len(n.Islands()))
+	}
+	p, err := new(Result).balance(n)
+	if err != nil {
+		return nil, 0, err
+	}
+	w := &wheel{n: len(n.Nodes), edges: n.merged()}
+	from := make([]float64, len(theta))
+	for i := range from {
+		from[i] = theta[i] - theta[0]
+	}
+	angles, ok := w.newton(p, 1, from)
+	if !ok {
+		return nil, 0, errors.New("screen: no stable state in step next to these angles")
+	}
+	for _, e := range w.edges {
+		widest = math.Max(widest, math.Abs(math.Remainder(angles[e.From]-angles[e.To], 2*math.Pi)))
+	}
+	return angles, widest, nil
+}
+
+// Winding counts how often angles turn round along a loop of nodes: the sum of the
+// differences, each wound to within pi, over 2 pi.
+//
+// Source: R. Delabays, T. Coletta, P. Jacquod, "Multistability of phase-locking and
+// topological winding numbers in locally coupled Kuramoto models on single-loop
+// networks", J. Math. Phys. 57, 032701, 2016.
+func Winding(theta []float64, loop []int) int {
+	sum := 0.0
+	for k, i := range loop {
+		sum += math.Remainder(theta[loop[(k+1)%len(loop)]]-theta[i], 2*math.Pi)
+	}
+	return int(math.Round(sum / (2 * math.Pi)))
 }
 
 // balance finds the speed in step and what every source gives, and returns what
@@ -149,7 +286,7 @@ func (r *Result) balance(n *Network) ([]float64, error) {
 			stiff = i
 		default:
 			sumD += v.D
-			sumP += v.P
+			sumP += v.P - v.Share
 			moment += v.D * v.Speed
 		}
 	}
@@ -162,7 +299,7 @@ func (r *Result) balance(n *Network) ([]float64, error) {
 		return nil, errors.New("screen: no source sets a frequency")
 	}
 	p := make([]float64, len(n.Nodes))
-	total := 0.0
+	total := 0.0 // but for what one that holds its speed exchanges
 	r.Tracked, r.Proportional = true, true
 	share := math.NaN()
 	largest, sum := 0.0, 0.0
@@ -171,9 +308,9 @@ func (r *Result) balance(n *Network) ([]float64, error) {
 		if i == stiff {
 			continue
 		}
-		p[i] = v.P + v.D*(v.Speed-r.Speed)
-		if v.D == 0 {
-			p[i] = v.P
+		p[i] = v.P - v.Share
+		if v.D > 0 {
+			p[i] += v.D * (v.Speed - r.Speed)
 		}
 		total += p[i]
 		largest = math.Max(largest, math.Abs(p[i]))
@@ -199,7 +336,7 @@ func (r *Result) balance(n *Network) ([]float64, error) {
 		if v.D == 0 {
 			continue
 		}
-		s := Source{Node: *v, Given: p[i]}
+		s := Source{Node: *v, Given: p[i] + v.Share}
 		if i == stiff {
 			// It has no reference to track, and no share.
 			s.Tracked = true
@@ -210,7 +347,7 @@ func (r *Result) balance(n *Network) ([]float64, error) {
 		if size == 0 {
 			size = math.Max(largest, math.Abs(v.P))
 		}
-		s.Tracked = math.Abs(p[i]-v.P) <= 1e-6*size
+		s.Tracked = math.Abs(s.Given-v.P) <= 1e-6*size
 		r.Tracked = r.Tracked && s.Tracked
 		r.Sources = append(r.Sources, s)
 		if first == nil {
@@ -229,7 +366,7 @@ func (r *Result) balance(n *Network) ([]float64, error) {
 	if !r.Tracked {
 		balance := 0.0
 		for i := range n.Nodes {
-			balance += n.Nodes[i].P
+			balance += n.Nodes[i].P - n.Nodes[i].Share
 		}
 		switch {
 		case unequal:
@@ -451,6 +588,11 @@ func (w *wheel) newton(p []float64, scale float64, from []float64) ([]float64, b
 	size := 0.0
 	for _, x := range p {
 		size = math.Max(size, math.Abs(x))
+	}
+	if size == 0 {
+		for _, e := range w.edges {
+			size = math.Max(size, e.A)
+		}
 	}
 	res := make([]float64, w.n)
 	for range 30 {

@@ -41,6 +41,11 @@ func TestStar(t *testing.T) {
 		t.Errorf("%+v", r)
 	}
 	near(t, "margin", r.MarginLost, 7.5, 1e-6)
+	if len(r.Modes) != 2 {
+		t.Fatalf("modes %v", r.Modes)
+	}
+	near(t, "slower mode", r.Modes[0], -2.477678125, 2e-9)
+	near(t, "faster mode", r.Modes[1], -2.587249330, 2e-9)
 	// One line weaker than what it must carry: no state in step, exactly.
 	n.Edges[0].A = 0.66
 	if r, err = Screen(n, nil); err != nil || r.InStep || r.Critical != "one" || r.MarginLost > 1 {
@@ -81,6 +86,20 @@ func TestRingWithChord(t *testing.T) {
 	near(t, "factor the norm certifies", 1/r.Loading, 1.943231441, 1e-8)
 	if r.Tree || !r.InStep {
 		t.Errorf("%+v", r)
+	}
+	for k, want := range []float64{0.2364044944, -0.0453932584, 0.3235955056, -0.5146067416, 0.1910112360} {
+		near(t, "B' L^+ w", r.Flows[k].Linear/n.Edges[k].A, want, 1e-10)
+	}
+	// At the last factor that the norm certifies the largest angle is 67.632 degrees.
+	scaled := &Network{Edges: n.Edges}
+	for _, v := range n.Nodes {
+		v.P *= 1.943231441
+		scaled.Nodes = append(scaled.Nodes, v)
+	}
+	if at, err := Screen(scaled, nil); err != nil || !at.InStep {
+		t.Fatalf("%+v, %v", at, err)
+	} else {
+		near(t, "angle at the certified factor", at.Widest*180/math.Pi, 67.632, 5e-4)
 	}
 	// Beyond its end there is nothing in step.
 	for i := range n.Nodes {
@@ -226,5 +245,133 @@ func TestLeaves(t *testing.T) {
 	}
 	if r, err = Screen(n, nil); err != nil || !(r.MarginLost > weakest) || math.IsInf(r.MarginLost, 0) || r.Margin90 > r.MarginLost {
 		t.Errorf("%+v, %v", r, err)
+	}
+}
+
+// Two inverters of m = 1e-4 and 2e-4 rad/s/W share 9 kW, then the first is set to 2 kW:
+// section B1 of the check values, from dw = -(P_L - sum P*)/sum(1/m).
+func TestSharing(t *testing.T) {
+	n := &Network{
+		Nodes: []Node{
+			{Name: "first", D: 1e4, Speed: 100 * math.Pi},
+			{Name: "second", D: 5e3, Speed: 100 * math.Pi},
+			{Name: "load", P: -9e3},
+		},
+		Edges: []Edge{{Name: "one", From: 0, To: 2, A: 1e5}, {Name: "two", From: 1, To: 2, A: 1e5}},
+	}
+	for _, c := range []struct{ set, speed, first, second float64 }{
+		{0, -0.6, 6000, 3000},
+		{2000, -0.4666666667, 6666.666667, 2333.333333},
+	} {
+		n.Nodes[0].P = c.set
+		r, err := Screen(n, nil)
+		if err != nil {
+			t.Fatal(err)
+		}
+		near(t, "speed", r.Speed-100*math.Pi, c.speed, 1e-10)
+		near(t, "first", r.Sources[0].Given, c.first, 1e-6)
+		near(t, "second", r.Sources[1].Given, c.second, 1e-6)
+	}
+}
+
+// Whether there is a state in step doesn't depend on D where set powers balance what is
+// drawn: Simpson-Porco, Dorfler, Bullo, Automatica 49(9), 2013.
+func TestExistenceDoesNotDependOnDroop(t *testing.T) {
+	var first *Result
+	for _, d := range [][3]float64{{1, 1, 1}, {1e-3, 7, 20}, {500, 0.1, 3}} {
+		n := &Network{
+			Nodes: []Node{{Name: "a", D: d[0], P: 1}, {Name: "b", D: d[1], P: 0.5}, {Name: "c", D: d[2], P: -1.5}},
+			Edges: []Edge{{Name: "ab", From: 0, To: 1, A: 2}, {Name: "bc", From: 1, To: 2, A: 3}, {Name: "ca", From: 2, To: 0, A: 1}},
+		}
+		r, err := Screen(n, &Options{Precision: 1e-9})
+		if err != nil {
+			t.Fatal(err)
+		}
+		if first == nil {
+			first = r
+		}
+		if !r.InStep || !r.Tracked {
+			t.Errorf("%+v", r)
+		}
+		near(t, "margin", r.MarginLost, first.MarginLost, 1e-7)
+	}
+}
+
+// A ring of n idle oscillators stands with angles wound q times round as well where
+// 2 pi q/n < 90 degrees, with a sin(2 pi q/n) circulating, and doesn't where it is more.
+// Source: Delabays, Coletta, Jacquod, J. Math. Phys. 57, 032701, 2016.
+func TestRingWithWinding(t *testing.T) {
+	for _, c := range []struct {
+		n, q   int
+		stands bool
+	}{{6, 0, true}, {6, 1, true}, {6, -1, true}, {5, 1, true}, {3, 1, false}, {9, 2, true}, {7, 2, false}} {
+		n := &Network{}
+		theta, loop := make([]float64, c.n), make([]int, c.n)
+		for i := range c.n {
+			n.Nodes = append(n.Nodes, Node{Name: "n", D: 1})
+			n.Edges = append(n.Edges, Edge{Name: "e", From: i, To: (i + 1) % c.n, A: 2})
+			loop[i] = i
+			theta[i] = 2*math.Pi*float64(c.q)*float64(i)/float64(c.n) + 0.05*math.Sin(3*float64(i))
+		}
+		angles, widest, err := Settle(n, theta)
+		if c.stands != (err == nil) {
+			t.Errorf("ring of %d wound %d times: %v", c.n, c.q, err)
+		}
+		if err != nil {
+			continue
+		}
+		near(t, "angle across an edge", widest, 2*math.Pi*math.Abs(float64(c.q))/float64(c.n), 1e-9)
+		if w := Winding(angles, loop); w != c.q {
+			t.Errorf("ring of %d wound %d times, now %d", c.n, c.q, w)
+		}
+	}
+}
+
+// A loaded ring by a road of its own: round one loop the flows are f_k + c, and c the
+// root of sum asin((f_k + c)/a_k) = 0, by bisection.
+func TestLoadedRing(t *testing.T) {
+	rng := rand.New(rand.NewPCG(7, 1))
+	for range 20 {
+		const size = 5
+		n := &Network{}
+		p := make([]float64, size)
+		for i := 1; i < size; i++ {
+			p[i] = 0.6 * (rng.Float64() - 0.5)
+			p[0] -= p[i]
+		}
+		a, f := make([]float64, size), make([]float64, size)
+		for i := range size {
+			n.Nodes = append(n.Nodes, Node{Name: "n", D: 1, P: p[i]})
+			a[i] = 1 + rng.Float64()
+			n.Edges = append(n.Edges, Edge{Name: "e", From: i, To: (i + 1) % size, A: a[i]})
+			f[i] = p[i]
+			if i > 0 {
+				f[i] += f[i-1]
+			}
+		}
+		turn := func(c float64) (s float64) {
+			for k := range f {
+				s += math.Asin(math.Max(-1, math.Min(1, (f[k]+c)/a[k])))
+			}
+			return s
+		}
+		lo, hi := -3.0, 3.0
+		for range 200 {
+			if mid := (lo + hi) / 2; turn(mid) < 0 {
+				lo = mid
+			} else {
+				hi = mid
+			}
+		}
+		r, err := Screen(n, nil)
+		if err != nil {
+			t.Fatal(err)
+		}
+		if !r.InStep {
+			t.Fatalf("%+v", r)
+		}
+		for k := range f {
+			near(t, "flow", r.Flows[k].P, f[k]+lo, 1e-9)
+		}
 	}
 }
