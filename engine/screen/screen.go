@@ -50,8 +50,9 @@ type Result struct {
 	// loops the norm |B' L^+ p| over edges, which below 1 is sufficient for
 	// many kinds of network and a good estimate for others.
 	Loading float64
-	// Critical is the edge of that value.
+	// Critical is the edge of that value, and Capacity its A, W.
 	Critical string
+	Capacity float64
 	// Certified is the bound on angles that the norm promises, asin(Loading),
 	// rad; NaN if Loading is 1 or more.
 	Certified float64
@@ -102,7 +103,7 @@ func Screen(n *Network, o *Options) (*Result, error) {
 	}
 	for k, e := range edges {
 		if x := math.Abs(flows[k]) / e.A; x > r.Loading || r.Critical == "" {
-			r.Loading, r.Critical = x, e.Name
+			r.Loading, r.Critical, r.Capacity = x, e.Name, e.A
 		}
 	}
 	if r.Loading < 1 {
