@@ -29,7 +29,7 @@ type Node struct {
 type Edge struct {
 	Name     string
 	From, To int
-	// A is the most it can carry, W: (3/2) V_from V_to |y|.
+	// A is the most it can carry, W: (3/2) V_from V_to b.
 	A float64
 }
 
