@@ -3,15 +3,12 @@ package main
 import (
 	"context"
 	"fmt"
-	"io"
-	"math/cmplx"
 	"sort"
 	"strings"
 
 	"islet/cases"
 	"islet/engine"
 	"islet/engine/compare"
-	"islet/engine/modes"
 	"islet/engine/output"
 )
 
@@ -75,6 +72,9 @@ func cmdCompare(ctx context.Context, c *call) error {
 			return fmt.Errorf("%w: --windows %q: want two times, 0.02,0.3", errUsage, c.windows)
 		}
 	}
+	if c.noModes {
+		co.Modes = -1
+	}
 	if c.repeat < 1 {
 		return fmt.Errorf("%w: --repeat %d: want at least 1", errUsage, c.repeat)
 	}
@@ -92,10 +92,18 @@ func cmdCompare(ctx context.Context, c *call) error {
 		err = result.WriteJSON(c.stdout)
 	case c.asCSV:
 		err = result.WriteCSV(c.stdout)
+		for _, r := range result.Results {
+			if r.Modes == nil {
+				continue
+			}
+			for _, w := range r.Modes.Warnings {
+				fmt.Fprintf(c.stderr, "WARNING: %s: %s\n", r.Setting, w)
+			}
+		}
 	default:
 		fmt.Fprintf(c.stdout, "%s: %s\n\n", k.Name, k.Title)
-		if err = result.WriteText(c.stdout); err == nil && !c.noModes && result.Results[0].Unknowns <= matchedUnknowns {
-			err = compareModes(c.stdout, settings)
+		if err = result.WriteText(c.stdout); err == nil && result.Results[0].Modes != nil {
+			_, err = fmt.Fprintln(c.stdout, "islet modes CASE --against 'NAME: PATTERN=LEVEL' shows all modes side by side")
 		}
 	}
 	if err != nil || c.out == "" {
@@ -109,72 +117,6 @@ func cmdCompare(ctx context.Context, c *call) error {
 		fmt.Fprintf(c.stdout, "written to %s: %s\n", c.out, strings.Join(files, ", "))
 	}
 	return nil
-}
-
-// matchedUnknowns is the size to which compare matches modes: the time for all modes
-// of a setting grows with the cube of it.
-const matchedUnknowns = 400
-
-// compareModes prints what every setting does to the modes of the first, loudly
-// where the verdict or the damping of a mode they share differs.
-func compareModes(w io.Writer, settings []compare.Setting) error {
-	report := func(s compare.Setting) (*modes.Report, error) {
-		sim, err := s.Start(&engine.Options{Record: []string{}})
-		if err != nil {
-			return nil, err
-		}
-		l, err := sim.Linearise(&engine.LinearOptions{Inputs: []string{}, Outputs: []string{}})
-		if err != nil {
-			return nil, err
-		}
-		return modes.Analyse(l, nil)
-	}
-	first, err := report(settings[0])
-	if err != nil {
-		fmt.Fprintf(w, "\nno modes: %v\n", err)
-		return nil
-	}
-	wide := 0
-	for _, s := range settings {
-		wide = max(wide, len(s.Name))
-	}
-	fmt.Fprintf(w, "\nmodes at the operating point, against those of %s\n", settings[0].Name)
-	fmt.Fprintf(w, "%-*s %-9s %s\n", wide, settings[0].Name, verdict(first), first.Rightmost())
-	for _, s := range settings[1:] {
-		r, err := report(s)
-		if err != nil {
-			fmt.Fprintf(w, "%-*s %v\n", wide, s.Name, err)
-			continue
-		}
-		fmt.Fprintf(w, "%-*s %-9s %s\n", wide, s.Name, verdict(r), r.Rightmost())
-		if r.Stable != first.Stable {
-			fmt.Fprintf(w, "  WARNING: STABILITY DIFFERS: %s is %s, %s %s\n", settings[0].Name, verdict(first), s.Name, verdict(r))
-		}
-		m := modes.Match(settings[0].Name, first, s.Name, r, modes.MatchOptions{})
-		var differ []modes.Pair
-		for _, p := range m.Pairs {
-			if p.Warning != "" {
-				differ = append(differ, p)
-			}
-		}
-		if len(differ) == 0 {
-			continue
-		}
-		size := func(p modes.Pair) float64 { return cmplx.Abs(first.Modes[p.A-1].Value) }
-		sort.Slice(differ, func(i, j int) bool { return size(differ[i]) < size(differ[j]) })
-		a, b := &first.Modes[differ[0].A-1], &r.Modes[differ[0].B-1]
-		fmt.Fprintf(w, "  WARNING: the damping of %d of %d shared modes differs; the slowest of them: %.4g Hz at %.1f %%, here %.4g Hz at %.1f %%\n",
-			len(differ), len(m.Pairs), a.Frequency, 100*a.Damping, b.Frequency, 100*b.Damping)
-	}
-	fmt.Fprintf(w, "islet modes CASE --against 'NAME: PATTERN=LEVEL' shows all modes side by side\n")
-	return nil
-}
-
-func verdict(r *modes.Report) string {
-	if r.Stable {
-		return "stable"
-	}
-	return "UNSTABLE"
 }
 
 type levelSetting struct {

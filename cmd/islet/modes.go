@@ -273,7 +273,7 @@ func (c *call) table(ctx context.Context, k *cases.Case, sim *engine.Simulation,
 		for _, s := range o.Shifts {
 			hz = append(hz, strconv.FormatFloat(imag(s)/(2*math.Pi), 'g', 4, 64))
 		}
-		fmt.Fprintf(say, "looked for the %d modes nearest each of %s Hz; --near looks elsewhere, --all for all\n", o.Count, strings.Join(hz, ", "))
+		fmt.Fprintf(say, "looked for the %d modes nearest %s Hz; --near looks elsewhere, --all for all\n", o.Count, strings.Join(hz, ", and as many nearest "))
 	}
 	files := []output.File{{Name: "modes.txt", Write: rep.WriteText}, {Name: "modes.csv", Write: rep.WriteCSV},
 		{Name: "modes.json", Write: rep.WriteJSON}, {Name: "participation.csv", Write: rep.WriteParticipation}}

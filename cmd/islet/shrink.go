@@ -312,7 +312,7 @@ func confirmShrunk(ctx context.Context, c *call, full *cases.Case, source []byte
 	setting := func(name string, k *cases.Case) compare.Setting {
 		return compare.Setting{Name: name, Start: func(o *engine.Options) (*engine.Simulation, error) { return k.Start(o) }}
 	}
-	co := compare.Options{Until: full.Until, Repetitions: 3, Engine: eo, Channels: watched(full, small)}
+	co := compare.Options{Until: full.Until, Repetitions: 3, Engine: eo, Channels: watched(full, small), Modes: -1}
 	if c.until > 0 {
 		co.Until = c.until
 	}

@@ -1,7 +1,8 @@
 // Package compare runs one study at several settings of detail and tells what
 // each setting saves and what it hides: unknowns, steps and time, and for every
 // channel the deviation from the reference setting, in the windows after events
-// in which reductions differ most.
+// in which reductions differ most. For systems that aren't large it matches the
+// modes at the operating point as well.
 //
 // A run that fails or diverges at some setting is part of the result, not an
 // error.
@@ -46,6 +47,10 @@ type Options struct {
 	Windows [2]float64
 	// Engine holds method, tolerances and frame options for all runs.
 	Engine engine.Options
+	// Modes is the number of unknowns of the reference up to which the modes
+	// of every setting are matched with the reference's; 0 means
+	// DefaultModes, a negative value none.
+	Modes int
 	// Progress is called before every run; nil is left out.
 	Progress func(setting string, run, of int)
 }
@@ -141,6 +146,7 @@ type Result struct {
 	Summary  string   // one sentence
 	Trace    *engine.Trace
 	Notes    []engine.Note
+	Modes    *Modes // nil where they weren't looked for
 }
 
 // Comparison is the outcome of all settings, the reference first.
@@ -261,6 +267,12 @@ func Run(ctx context.Context, settings []Setting, o Options) (*Comparison, error
 			continue
 		}
 		c.compare(ref, r, o.Sample)
+	}
+	if o.Modes == 0 {
+		o.Modes = DefaultModes
+	}
+	if ref.Unknowns <= o.Modes {
+		c.matchModes(settings, o.Engine)
 	}
 	for i := range c.Results {
 		r := &c.Results[i]

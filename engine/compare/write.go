@@ -48,6 +48,7 @@ func (c *Comparison) WriteText(w io.Writer) error {
 	for _, r := range c.Results {
 		p.printf("%s\n", r.Summary)
 	}
+	c.writeModes(p)
 	return p.err
 }
 
@@ -119,21 +120,32 @@ func (c *Comparison) WriteJSON(w io.Writer) error {
 		Range   float64     `json:"range"`
 		Windows []deviation `json:"windows"`
 	}
+	type modesJSON struct {
+		Stable    bool     `json:"stable"`
+		Rightmost string   `json:"rightmost,omitempty"`
+		Shared    int      `json:"shared"`
+		Differ    int      `json:"damping_differs"`
+		Only      int      `json:"only_here"`
+		Missing   int      `json:"missing"`
+		Warnings  []string `json:"warnings,omitempty"`
+		Failure   string   `json:"failure,omitempty"`
+	}
 	type result struct {
-		Setting        string    `json:"setting"`
-		Unknowns       int       `json:"unknowns"`
-		Steps          int       `json:"steps"`
-		Rejected       int       `json:"rejected"`
-		Factorizations int       `json:"factorizations"`
-		Time           float64   `json:"time_s"`
-		Speedup        float64   `json:"speedup"`
-		Diverged       bool      `json:"diverged"`
-		Failure        string    `json:"failure,omitempty"`
-		Reached        float64   `json:"reached_s"`
-		Verdicts       []string  `json:"verdicts"`
-		Changes        []string  `json:"changes"`
-		Summary        string    `json:"summary"`
-		Channels       []channel `json:"channels,omitempty"`
+		Setting        string     `json:"setting"`
+		Unknowns       int        `json:"unknowns"`
+		Steps          int        `json:"steps"`
+		Rejected       int        `json:"rejected"`
+		Factorizations int        `json:"factorizations"`
+		Time           float64    `json:"time_s"`
+		Speedup        float64    `json:"speedup"`
+		Diverged       bool       `json:"diverged"`
+		Failure        string     `json:"failure,omitempty"`
+		Reached        float64    `json:"reached_s"`
+		Verdicts       []string   `json:"verdicts"`
+		Changes        []string   `json:"changes"`
+		Summary        string     `json:"summary"`
+		Channels       []channel  `json:"channels,omitempty"`
+		Modes          *modesJSON `json:"modes,omitempty"`
 	}
 	doc := struct {
 		Until   float64   `json:"until_s"`
@@ -157,6 +169,9 @@ func (c *Comparison) WriteJSON(w io.Writer) error {
 				y.Windows = append(y.Windows, v)
 			}
 			x.Channels = append(x.Channels, y)
+		}
+		if m := r.Modes; m != nil {
+			x.Modes = &modesJSON{m.Stable, m.Rightmost, m.Shared, m.Differ, m.Only, m.Missing, m.Warnings, m.Failure}
 		}
 		doc.Results = append(doc.Results, x)
 	}

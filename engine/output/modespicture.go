@@ -237,6 +237,12 @@ func RootLocus(parameter string, l *modes.Locus) (*Sheet, error) {
 	}
 	plane.X.Min = math.Max(plane.X.Min, -span)
 	plane.X.Max = math.Max(plane.X.Max, 0)
+	axis, err := plotter.NewLine(plotter.XYs{{X: 0, Y: plane.Y.Min}, {X: 0, Y: plane.Y.Max}})
+	if err != nil {
+		return nil, fmt.Errorf("output: root locus: %w", err)
+	}
+	axis.Color = color.RGBA{150, 150, 150, 255}
+	plane.Add(axis)
 	widen(&plane.X, 1)
 	widen(&plane.Y, 1)
 	if len(right) > 0 {
@@ -263,6 +269,19 @@ type FrequencyCurve struct {
 	H    []complex128
 }
 
+// cutAtWraps cuts a curve of phases, in degrees, where it leaves the picture at one
+// edge and comes back at the other.
+func cutAtWraps(xy plotter.XYs) []plotter.XYs {
+	var runs []plotter.XYs
+	from := 0
+	for k := 1; k < len(xy); k++ {
+		if math.Abs(xy[k].Y-xy[k-1].Y) > 180 {
+			runs, from = append(runs, xy[from:k]), k
+		}
+	}
+	return append(runs, xy[from:])
+}
+
 // FrequencyPlot draws magnitude and phase of curves over frequency, Hz.
 func FrequencyPlot(name, title, unit string, hz []float64, curves []FrequencyCurve) (*Sheet, error) {
 	mag := newPlot(title, "frequency in the rotating frame, Hz", "magnitude, "+unit)
@@ -280,15 +299,19 @@ func FrequencyPlot(name, title, unit string, hz []float64, curves []FrequencyCur
 		if len(m) == 0 {
 			continue
 		}
-		for k, xy := range []plotter.XYs{m, a} {
-			line, err := plotter.NewLine(xy)
-			if err != nil {
-				return nil, fmt.Errorf("output: %s: %w", c.Name, err)
-			}
-			line.Color, line.Width = palette[i%len(palette)], vg.Points(1.2)
+		for k, runs := range [][]plotter.XYs{{m}, cutAtWraps(a)} {
 			p := []*plot.Plot{mag, arg}[k]
-			p.Add(line)
-			p.Legend.Add(c.Name, line)
+			for n, xy := range runs {
+				line, err := plotter.NewLine(xy)
+				if err != nil {
+					return nil, fmt.Errorf("output: %s: %w", c.Name, err)
+				}
+				line.Color, line.Width = palette[i%len(palette)], vg.Points(1.2)
+				p.Add(line)
+				if n == 0 {
+					p.Legend.Add(c.Name, line)
+				}
+			}
 		}
 	}
 	if math.IsInf(mag.X.Min, 1) {

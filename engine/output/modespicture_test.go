@@ -7,6 +7,8 @@ import (
 	"strings"
 	"testing"
 
+	"gonum.org/v1/plot/plotter"
+
 	"islet/engine/modes"
 )
 
@@ -70,5 +72,13 @@ func TestModePictures(t *testing.T) {
 	// One real eigenvalue is a picture too.
 	if s, err := Eigenvalues(NamedReport{"", reportOf(-3)}); err != nil || s.WriteSVG(&bytes.Buffer{}) != nil {
 		t.Errorf("a single eigenvalue: %v", err)
+	}
+}
+
+// A phase that goes round starts anew at the other edge.
+func TestPhasesAreCutWhereTheyGoRound(t *testing.T) {
+	runs := cutAtWraps(plotter.XYs{{X: 1, Y: 170}, {X: 2, Y: 179}, {X: 3, Y: -178}, {X: 4, Y: -10}, {X: 5, Y: 175}})
+	if len(runs) != 3 || len(runs[0]) != 2 || len(runs[1]) != 2 || len(runs[2]) != 1 {
+		t.Errorf("runs %v, want two, two and one", runs)
 	}
 }
