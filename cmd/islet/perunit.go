@@ -7,7 +7,6 @@ import (
 	"math"
 	"path"
 	"slices"
-	"sort"
 	"strconv"
 	"strings"
 
@@ -130,11 +129,15 @@ func cmdPerunit(_ context.Context, c *call) error {
 	for _, s := range p.from {
 		for _, one := range strings.Split(s, ",") {
 			key, text, _ := strings.Cut(one, "=")
+			key = strings.TrimSpace(key)
 			v, err := strconv.ParseFloat(strings.TrimSpace(text), 64)
-			if err != nil || math.IsNaN(v) {
-				return bad("--from %q: want KEY=VALUE", one)
+			if err != nil || math.IsNaN(v) || math.IsInf(v, 0) || key == "" {
+				return bad("--from %q: want KEY=VALUE with a finite value", one)
 			}
-			from[strings.TrimSpace(key)] = v
+			if _, twice := from[key]; twice {
+				return bad("--from %q: %s is given twice", one, key)
+			}
+			from[key] = v
 		}
 	}
 	list, err := k.Gains()
@@ -154,6 +157,9 @@ func cmdPerunit(_ context.Context, c *call) error {
 	if err != nil {
 		return bad("%v", err)
 	}
+	if err := knownKeys(from, shown); err != nil {
+		return bad("%v", err)
+	}
 	w := csv.NewWriter(c.stdout)
 	if c.asCSV {
 		w.Write([]string{"device", "symbol", "key", "si_value", "unit", "per_unit", "base"})
@@ -161,17 +167,11 @@ func cmdPerunit(_ context.Context, c *call) error {
 		fmt.Fprintf(c.stdout, "%s: %s\nbase frequency %g Hz, time %s\nunits are derived from the signals a gain connects; per-unit values from scaling the equations it stands in\n",
 			k.Name, k.Title, p.frequency, timeBase(seconds))
 	}
-	used := make(map[string]bool)
 	for _, d := range shown {
 		var rows []cases.Gain
 		for _, g := range d.Gains {
-			_, ok := from[g.Key]
-			ok = ok && g.Key != ""
-			switch {
-			case ok:
-				used[g.Key] = true
-				rows = append(rows, g)
-			case len(from) == 0 && g.Value != 0: // else an element that isn't there
+			_, given := from[g.Key]
+			if given || len(from) == 0 && g.Value != 0 { // a value of 0 is an element that isn't there
 				rows = append(rows, g)
 			}
 		}
@@ -240,18 +240,32 @@ func cmdPerunit(_ context.Context, c *call) error {
 			}
 		}
 	}
-	var missing []string
+	w.Flush()
+	return w.Error()
+}
+
+// knownKeys checks that each of the keys of from is a parameter of one of the devices
+// shown. The error names all that are not, and what there is.
+func knownKeys(from map[string]float64, shown []cases.PerUnitDevice) error {
+	var have, missing []string
+	for _, d := range shown {
+		for _, g := range d.Gains {
+			if g.Key != "" && !slices.Contains(have, g.Key) {
+				have = append(have, g.Key)
+			}
+		}
+	}
 	for key := range from {
-		if !used[key] {
+		if !slices.Contains(have, key) {
 			missing = append(missing, key)
 		}
 	}
-	if len(missing) > 0 {
-		sort.Strings(missing)
-		return bad("--from: the devices shown have no parameter %s", strings.Join(missing, ", "))
+	if len(missing) == 0 {
+		return nil
 	}
-	w.Flush()
-	return w.Error()
+	slices.Sort(missing)
+	slices.Sort(have)
+	return fmt.Errorf("--from: the devices shown have no parameter %s; they have %s", strings.Join(missing, ", "), strings.Join(have, ", "))
 }
 
 func timeBase(seconds float64) string {

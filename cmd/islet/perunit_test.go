@@ -60,7 +60,10 @@ func TestPerunit(t *testing.T) {
 		"no device of that name":           {"--device", "nobody"},
 		"one of the signals":               {"--base", "i_x=3"},
 		"want KEY=VALUE":                   {"--from", "Kpc"},
-		"have no parameter Kxx":            {"--from", "Kxx=1"},
+		"have no parameter K, Kxx; they ":  {"--from", "Kxx=1,m=0.02,K=2"},
+		"\"m=inf\": want KEY=VALUE with a": {"--from", "m=inf"},
+		"\"=3\": want KEY=VALUE":           {"--from", "=3"},
+		"m is given twice":                 {"--from", "m=0.02", "--from", "m=0.03"},
 		"--power-base -3: want a positive": {"--power-base", "-3"},
 		"--frequency-base NaN: want":       {"--frequency-base", "NaN"},
 		"--base \"i_ref=0\"":               {"--base", "i_ref=0"},
@@ -68,7 +71,10 @@ func TestPerunit(t *testing.T) {
 		"with a positive value":            {"--voltage-base", "0.4=-1"},
 		"syntax error in pattern":          {"--device", "["},
 	} {
-		want(t, exitUsage, []string{text}, append([]string{"perunit", "starter"}, args...)...)
+		out := want(t, exitUsage, []string{text}, append([]string{"perunit", "starter"}, args...)...)
+		if strings.Contains(out, "base frequency") {
+			t.Errorf("%v: part of a report before the fault:\n%s", args, out)
+		}
 	}
 	want(t, exitUsage, []string{"at 0.4, 11, 33 kV; say which with LEVEL=kV"}, "perunit", "harbour", "--voltage-base", "3")
 }
