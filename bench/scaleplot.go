@@ -4,7 +4,9 @@ import (
 	"fmt"
 	"image/color"
 	"math"
+	"os"
 	"path/filepath"
+	"strings"
 
 	"gonum.org/v1/plot"
 	"gonum.org/v1/plot/plotter"
@@ -19,7 +21,36 @@ func logAxes(p *plot.Plot) {
 	p.X.Scale, p.Y.Scale = plot.LogScale{}, plot.LogScale{}
 	p.X.Tick.Marker, p.Y.Tick.Marker = plot.LogTicks{Prec: -1}, plot.LogTicks{Prec: -1}
 	p.Add(plotter.NewGrid())
-	p.Legend.Top = true
+}
+
+// save writes a plot to a file whose name tells the format, with its legend to
+// the right of it.
+func save(p *plot.Plot, file string) error {
+	const width, height, side = 23 * vg.Centimeter, 13 * vg.Centimeter, 6.5 * vg.Centimeter
+	c, err := draw.NewFormattedCanvas(width, height, strings.TrimPrefix(filepath.Ext(file), "."))
+	if err != nil {
+		return err
+	}
+	legend := p.Legend
+	legend.Left, legend.Top = true, true
+	legend.TextStyle.Font.Size = 9
+	legend.Padding = vg.Points(3)
+	p.Legend = plot.NewLegend()
+	p.BackgroundColor = nil
+	dc := draw.New(c)
+	dc.SetColor(color.White)
+	dc.Fill(dc.Rectangle.Path())
+	p.Draw(draw.Crop(dc, 0, -side, 0, 0))
+	legend.Draw(draw.Crop(dc, width-side+0.4*vg.Centimeter, 0, 0, -0.8*vg.Centimeter))
+	f, err := os.Create(file)
+	if err != nil {
+		return err
+	}
+	if _, err = c.WriteTo(f); err != nil {
+		f.Close()
+		return err
+	}
+	return f.Close()
 }
 
 func addLine(p *plot.Plot, name string, xy plotter.XYs, c color.Color, shape draw.GlyphDrawer) error {
@@ -43,7 +74,7 @@ func PlotEqualErrors(file string, setups []Setup, targets []Target) error {
 	p.Title.Text = "Time at equal error, one thread"
 	p.X.Label.Text = "error, relative to the range of a signal"
 	p.Y.Label.Text = "time for 15 s, s"
-	shapes := []draw.GlyphDrawer{draw.CircleGlyph{}, draw.SquareGlyph{}, draw.TriangleGlyph{}, draw.CrossGlyph{}}
+	shapes := []draw.GlyphDrawer{draw.CircleGlyph{}, draw.SquareGlyph{}, draw.TriangleGlyph{}, draw.CrossGlyph{}, draw.RingGlyph{}, draw.PlusGlyph{}}
 	studies := []string{}
 	for _, t := range targets {
 		if len(studies) == 0 || studies[len(studies)-1] != t.Study {
@@ -66,7 +97,7 @@ func PlotEqualErrors(file string, setups []Setup, targets []Target) error {
 		}
 	}
 	logAxes(p)
-	return p.Save(18*vg.Centimeter, 13*vg.Centimeter, file)
+	return save(p, file)
 }
 
 // PlotCosts draws time against the number of inverters.
@@ -87,6 +118,5 @@ func PlotCosts(file string, costs []Costs) error {
 		return err
 	}
 	logAxes(p)
-	p.Legend.Left = true
-	return p.Save(16*vg.Centimeter, 11*vg.Centimeter, filepath.Clean(file))
+	return save(p, file)
 }
